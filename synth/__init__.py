@@ -1,0 +1,1 @@
+"""Local feedback gains for large networks of coupled machines, with proof."""

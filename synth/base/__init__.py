@@ -1,0 +1,4 @@
+"""What every stage may use: errors with a place, named outcomes, exact matrices, files written whole, provenance, cautions.
+
+Nothing here knows about networks. Every other stage may import this one; it imports none of them.
+"""

@@ -1,0 +1,81 @@
+"""Files and folders that appear whole or not at all.
+
+Law: at every instant the path holds either what it held before or the complete new content.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import os
+import shutil
+import tempfile
+from collections.abc import Iterator
+from pathlib import Path
+
+from synth.base.errors import StorageFailure
+
+
+def write_text(path: str | Path, text: str) -> Path:
+    """Write ``text`` (UTF-8, newline as given) to ``path`` in one step; StorageFailure if the disk refuses."""
+    target = Path(path)
+    try:
+        target.parent.mkdir(parents=True, exist_ok=True)
+        handle, name = tempfile.mkstemp(dir=target.parent, prefix=f".{target.name}.")
+        try:
+            with os.fdopen(handle, "w", encoding="utf-8", newline="") as stream:
+                stream.write(text)
+                stream.flush()
+                os.fsync(stream.fileno())
+            os.chmod(name, 0o644)
+            os.replace(name, target)
+        except BaseException:
+            with contextlib.suppress(OSError):
+                os.unlink(name)
+            raise
+    except OSError as error:
+        raise StorageFailure(f"cannot write {target}: {error.strerror or error}; nothing was changed there.") from error
+    return target
+
+
+@contextlib.contextmanager
+def whole_folder(path: str | Path) -> Iterator[Path]:
+    """Yield an empty working folder that takes the place of ``path`` when the block ends without an error.
+
+    What stood at ``path`` before is kept until the new folder is complete, then removed. After an error or an
+    interruption the old folder stands untouched and the working folder is gone.
+    """
+    target = Path(path)
+    try:
+        target.parent.mkdir(parents=True, exist_ok=True)
+        if target.exists() and not target.is_dir():
+            raise StorageFailure(f"{target} is a file; name a folder for the output.")
+        work = Path(tempfile.mkdtemp(dir=target.parent, prefix=f".{target.name}."))
+        os.chmod(work, 0o755)
+    except OSError as error:
+        raise StorageFailure(f"cannot create {target}: {error.strerror or error}.") from error
+    try:
+        yield work
+        _swap(work, target)
+    except BaseException:
+        shutil.rmtree(work, ignore_errors=True)
+        raise
+
+
+def _swap(work: Path, target: Path) -> None:
+    """Put ``work`` where ``target`` is; the old folder is moved aside first and put back if the second move fails."""
+    aside: Path | None = None
+    try:
+        if target.exists():
+            aside = Path(tempfile.mkdtemp(dir=target.parent, prefix=f".{target.name}.old."))
+            os.rmdir(aside)
+            os.replace(target, aside)
+        try:
+            os.replace(work, target)
+        except OSError:
+            if aside is not None:
+                os.replace(aside, target)
+            raise
+    except OSError as error:
+        raise StorageFailure(f"cannot write {target}: {error.strerror or error}; the earlier content stands.") from error
+    if aside is not None:
+        shutil.rmtree(aside, ignore_errors=True)
