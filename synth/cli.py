@@ -1,2 +1,363 @@
+"""The command line: `synth VERB FILE [options]`; results on standard output, progress on standard error.
+
+Exit codes: 0 done and proven (or verified); 1 done, but not proven, not verified, target not reached, obstruction found or
+violations seen; 2 the input is wrong; 3 something failed inside; 130 interrupted. No traceback reaches a user.
+"""
+
+from __future__ import annotations
+
+import os
+import signal
+import sys
+from collections.abc import Callable
+from functools import wraps
+from pathlib import Path
+from typing import Any, NoReturn
+
+import click
+
+from synth.base.errors import InputError, SynthError, nearest
+from synth.base.progress import Listener, silent
+
+HELP = {"help_option_names": ["-h", "--help"]}
+
+
+class _Verbs(click.Group):
+    """Group of verbs that names the nearest one when a verb is misspelt, and lists them in working order."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(self.commands)
+
+    def resolve_command(self, ctx: click.Context, args: list[str]) -> Any:
+        if args and not args[0].startswith("-") and args[0] not in self.commands:
+            known = ", ".join(self.commands)
+            raise click.UsageError(f"there is no verb {args[0]!r}{nearest(args[0], self.commands)}; the verbs are {known}.")
+        return super().resolve_command(ctx, args)
+
+
+@click.group(cls=_Verbs, context_settings=HELP)
+@click.version_option(package_name="localgain", prog_name="synth")
+def verbs() -> None:
+    """Pick local feedback gains for a large network of coupled machines and prove the whole stays calm.
+
+    FILE is a problem file (YAML). Start with `synth run FILE --out DIR`. An engineering aid, not an approval.
+    """
+
+
+def _with(*options: Callable[[Any], Any]) -> Callable[[Any], Any]:
+    """Attach several click options to a verb, in reading order."""
+
+    def attach(function: Any) -> Any:
+        for option in reversed(options):
+            function = option(function)
+        return function
+
+    return attach
+
+
+FILE = click.argument("file", type=click.Path(path_type=Path))
+JSON = click.option("--json", "as_json", is_flag=True, help="Print exactly one JSON document instead of text.")
+OUT = click.option("--out", type=click.Path(path_type=Path), help="Folder for the results; it appears whole or not at all.")
+TARGET = click.option("--target", type=float, help="Spectral radius to reach, between 0 and 1 (default: the file's).")
+SEED = click.option("--seed", type=click.IntRange(0), default=0, show_default=True, help="Fixes searches and random runs.")
+GAINS = click.option(
+    "--gains", type=click.Path(path_type=Path), help="Gain table (CSV or JSON) in service, instead of fresh gains."
+)
+QUIET = click.option("--quiet", is_flag=True, help="No progress on standard error.")
+
+
+@verbs.command()
+@_with(FILE, JSON, OUT)
+def check(file: Path, as_json: bool, out: Path | None) -> None:
+    """Read FILE, explain the network, find what no local feedback can do."""
+    from synth.network import describe
+
+    described = describe(_read(file))
+    document = described.as_json()
+    _deliver(document, described.as_text(), as_json, out, {"check.json": document})
+    _leave(document["obstruction"] is None)
+
+
+@verbs.command()
+@_with(FILE, TARGET, SEED, JSON, OUT, QUIET)
+def design(file: Path, target: float | None, seed: int, as_json: bool, out: Path | None, quiet: bool) -> None:
+    """Pick local gains with the smallest spectral radius within the limits of FILE."""
+    from synth.handoff import gain_table_csv
+    from synth.local import design as make_design
+
+    network = _read(file)
+    chosen = make_design(network, target=_target(target), seed=seed, progress=_progress(quiet))
+    document = chosen.as_json()
+    files = {"design.json": document, "gains.csv": gain_table_csv(network, chosen.gains)}
+    _deliver(document, chosen.as_text(), as_json, out, files)
+    _leave(chosen.reached)
+
+
+@verbs.command()
+@_with(FILE, GAINS)
+@click.option("--route", type=click.Choice(["auto", "peak", "storage"]), default="auto", show_default=True)
+@_with(TARGET, SEED, JSON, OUT, QUIET)
+def prove(
+    file: Path, gains: Path | None, route: str, target: float | None, seed: int, as_json: bool, out: Path | None, quiet: bool
+) -> None:
+    """Build a certificate for fresh gains, or for gains already in service (--gains)."""
+    from synth.proof import prove as make_proof
+
+    network, used = _network_and_gains(file, gains, target, seed, quiet)
+    certificate = make_proof(network, used, route=route, target=_target(target), progress=_progress(quiet))
+    path = None if out is None else str(out / "certificate.json")
+    document = {**certificate.as_json(), "certificate": path}
+    text = certificate.as_text()
+    if path is None:
+        text = text.rstrip() + "\nThe certificate was not kept; name a folder with --out to keep it.\n"
+    _deliver(document, text, as_json, out, {"proof.json": document}, lambda work: certificate.save(work / "certificate.json"))
+    _leave(certificate.proven)
+
+
+@verbs.command()
+@_with(FILE, GAINS)
+@click.option("--class", "classes", multiple=True, help="Scale only this link class (may be repeated; default: all).")
+@click.option("--fixed-own-parts", is_flag=True, help="Keep the own part of relative links at today's strength.")
+@click.option("--redesign", is_flag=True, help="Also pick the gains anew at each strength.")
+@_with(SEED, JSON, OUT, QUIET)
+def margin(
+    file: Path,
+    gains: Path | None,
+    classes: tuple[str, ...],
+    fixed_own_parts: bool,
+    redesign: bool,
+    seed: int,
+    as_json: bool,
+    out: Path | None,
+    quiet: bool,
+) -> None:
+    """Find how much stronger the links may get: proven, the limit of the class, and where it really breaks."""
+    from synth.margin import margin as find_margin
+
+    network, used = _network_and_gains(file, gains, None, seed, quiet)
+    for name in classes:
+        if name not in network.classes():
+            known = ", ".join(network.classes()) or "none"
+            raise InputError(f"--class {name}: no link class has this name{nearest(name, network.classes())}; known: {known}.")
+    found = find_margin(
+        network,
+        used,
+        classes=classes or None,
+        own_parts=not fixed_own_parts,
+        redesign=redesign,
+        progress=_progress(quiet),
+    )
+    document = found.as_json()
+    _deliver(document, found.as_text(), as_json, out, {"margin.json": document})
+    _leave(document["proven_factor"] == "inf" or document["proven_factor"] >= 1)
+
+
+@verbs.command()
+@_with(FILE, GAINS)
+@click.option("--units", type=click.IntRange(2), help="Number of cells simulated (default: the file's).")
+@click.option("--seconds", type=click.FloatRange(min=0, min_open=True), help="Length of each run (default: the file's).")
+@_with(SEED, JSON, OUT, QUIET)
+def simulate(
+    file: Path,
+    gains: Path | None,
+    units: int | None,
+    seconds: float | None,
+    seed: int,
+    as_json: bool,
+    out: Path | None,
+    quiet: bool,
+) -> None:
+    """Run the closed loop against disturbances and an adversary; count every sample above its proven bound."""
+    from synth.proof import prove as make_proof
+    from synth.simulate import simulate as run_simulation
+
+    network, used = _network_and_gains(file, gains, None, seed, quiet)
+    progress = _progress(quiet)
+    certificate = make_proof(network, used, progress=progress)
+    trajectory = run_simulation(network, used, certificate, units=units, seconds=seconds, seed=seed, progress=progress)
+    document = trajectory.as_json()
+    files = {"simulation.json": document}
+    _deliver(document, trajectory.as_text(), as_json, out, files, lambda work: trajectory.save(work / "trajectory.npz"))
+    _leave(certificate.proven and trajectory.violations == 0)
+
+
+@verbs.command()
+@_with(FILE, GAINS, TARGET, SEED, JSON)
+@click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder of the bundle.")
+@_with(QUIET)
+def handoff(
+    file: Path, gains: Path | None, target: float | None, seed: int, as_json: bool, out: Path, quiet: bool
+) -> None:
+    """Write the bundle for the firmware team: gain table, certificate, checker, manifest."""
+    from synth.base.files import refuse_foreign
+    from synth.handoff import hand_off
+    from synth.proof import prove as make_proof
+
+    refuse_foreign(out)
+    network, used = _network_and_gains(file, gains, target, seed, quiet)
+    certificate = make_proof(network, used, target=_target(target), progress=_progress(quiet))
+    bundle = hand_off(network, used, certificate, out)
+    _deliver(bundle.as_json(), bundle.as_text(), as_json, None, {})
+    _leave(bundle.proven)
+
+
+@verbs.command()
+@_with(FILE, GAINS, TARGET, SEED, JSON)
+@click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder for everything; it appears whole.")
+@_with(QUIET)
+def run(
+    file: Path, gains: Path | None, target: float | None, seed: int, as_json: bool, out: Path, quiet: bool
+) -> None:
+    """Do the whole job: check, design, prove, margin, simulate, hand off, report."""
+    from synth.base.files import refuse_foreign
+    from synth.network import read_gains
+    from synth.whole_job import run_whole_job
+
+    refuse_foreign(out)
+    network = _read(file)
+    in_service = None if gains is None else read_gains(gains, network)
+    job = run_whole_job(
+        network, out, gains=in_service, target=_target(target), seed=seed, progress=_progress(quiet)
+    )
+    _deliver(job.document, job.text, as_json, None, {})
+    _leave(job.proven)
+
+
+@verbs.command()
+@click.argument("certificate", type=click.Path(path_type=Path))
+@click.option("--for", "problem", type=click.Path(path_type=Path), help="Also demand that it is about this problem file.")
+@_with(JSON)
+def verify(certificate: Path, problem: Path | None, as_json: bool) -> None:
+    """Re-check a certificate in exact arithmetic, believing nothing in it."""
+    from synth.proof import verify as check_again
+
+    network = None if problem is None else _read(problem)
+    found = check_again(certificate, network)
+    _deliver(found.as_json(), found.as_text(), as_json, None, {})
+    _leave(found.verified)
+
+
+def _read(file: Path) -> Any:
+    from synth.network import read
+
+    return read(file)
+
+
+def _target(target: float | None) -> float | None:
+    if target is not None and not 0 < target < 1:
+        raise InputError(f"--target {target}: a spectral radius between 0 and 1 (both excluded) is needed.")
+    return target
+
+
+def _network_and_gains(file: Path, gains: Path | None, target: float | None, seed: int, quiet: bool) -> tuple[Any, Any]:
+    """The network, and either the gains of the table or a fresh design."""
+    network = _read(file)
+    if gains is not None:
+        from synth.network import read_gains
+
+        return network, read_gains(gains, network)
+    from synth.local import design as make_design
+
+    return network, make_design(network, target=_target(target), seed=seed, progress=_progress(quiet))
+
+
+def _progress(quiet: bool) -> Listener:
+    """A listener that writes to standard error: one line that is overwritten on a terminal, plain lines elsewhere."""
+    if quiet:
+        return silent
+    if not sys.stderr.isatty():
+        return lambda message: click.echo(f"synth: {message}", err=True)
+    from rich.console import Console
+
+    console = Console(stderr=True)
+    return lambda message: console.print(f"[dim]synth: {message}[/dim]", highlight=False)
+
+
+def _deliver(
+    document: Any,
+    text: str,
+    as_json: bool,
+    out: Path | None,
+    files: dict[str, Any],
+    also: Callable[[Path], Any] | None = None,
+) -> None:
+    """Write the files (whole folder), then print the JSON document or the text, with the cautions after the text."""
+    from synth.base.caution import cautions_text
+    from synth.whole_job import plain_json
+
+    if out is not None:
+        from synth.base.files import whole_folder
+
+        with whole_folder(out) as work:
+            for name, content in files.items():
+                (work / name).write_text(content if isinstance(content, str) else plain_json(content), encoding="utf-8")
+            if also is not None:
+                also(work)
+    if as_json:
+        click.echo(plain_json(document), nl=False)
+        return
+    shown = text.rstrip()
+    if out is not None:
+        shown += f"\nWritten to {out}."
+    if "engineering aid" not in shown.lower():
+        shown += "\n\nCautions\n--------\n" + cautions_text()
+    click.echo(shown)
+
+
+def _leave(good: bool) -> NoReturn:
+    raise SystemExit(0 if good else 1)
+
+
+def _one_sentence(function: Callable[[], None]) -> Callable[[], None]:
+    """Turn every way a verb can end into an exit code and, for failures, sentences without a traceback."""
+
+    @wraps(function)
+    def guarded() -> None:
+        try:
+            function()
+        except click.ClickException as error:
+            _fail(error.format_message(), 2)
+        except (click.Abort, KeyboardInterrupt):
+            _fail("interrupted; earlier results are intact.", 130)
+        except SynthError as error:
+            _fail(str(error), error.exit_code)
+        except BrokenPipeError:
+            os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+            raise SystemExit(3) from None
+        except Exception as error:
+            if os.environ.get("SYNTH_DEBUG"):
+                raise
+            _fail(
+                f"an unforeseen failure inside the tool ({type(error).__name__}: {error}); nothing was written. "
+                "Please report it with the problem file; SYNTH_DEBUG=1 shows where it happened.",
+                3,
+            )
+
+    return guarded
+
+
+def _fail(sentence: str, code: int) -> NoReturn:
+    """Sentences on standard error; with --json also one JSON document on standard output."""
+    if "--json" in sys.argv[1:] and code != 130:
+        from synth.whole_job import plain_json
+
+        click.echo(plain_json({"error": sentence, "exit_code": code}), nl=False)
+    for line in sentence.splitlines():
+        click.echo(line if line[:1].isspace() else f"synth: {line}", err=True)
+    raise SystemExit(code)
+
+
+def _interrupt(*_: object) -> NoReturn:
+    raise KeyboardInterrupt
+
+
+@_one_sentence
 def main() -> None:
-    raise SystemExit(3)
+    """Entry point of the `synth` command."""
+    if hasattr(signal, "SIGTERM"):
+        signal.signal(signal.SIGTERM, _interrupt)
+    verbs.main(standalone_mode=False)
+
+
+if __name__ == "__main__":
+    main()

@@ -12,7 +12,11 @@ import tempfile
 from collections.abc import Iterator
 from pathlib import Path
 
-from synth.base.errors import StorageFailure
+from synth.base.errors import InputError, StorageFailure
+
+# Present in every folder this package writes; without it an existing, non-empty folder is never replaced.
+MARK = ".localgain"
+_MARK_TEXT = "This folder is written whole by localgain; the next run with the same output folder replaces it.\n"
 
 
 def write_text(path: str | Path, text: str) -> Path:
@@ -42,15 +46,16 @@ def whole_folder(path: str | Path) -> Iterator[Path]:
     """Yield an empty working folder that takes the place of ``path`` when the block ends without an error.
 
     What stood at ``path`` before is kept until the new folder is complete, then removed. After an error or an
-    interruption the old folder stands untouched and the working folder is gone.
+    interruption the old folder stands untouched and the working folder is gone. Raises InputError where ``path`` is a
+    file, or a non-empty folder that this package did not write: somebody's other work is never replaced.
     """
-    target = Path(path)
+    target = Path(os.path.abspath(path))
+    refuse_foreign(target)
     try:
         target.parent.mkdir(parents=True, exist_ok=True)
-        if target.exists() and not target.is_dir():
-            raise StorageFailure(f"{target} is a file; name a folder for the output.")
         work = Path(tempfile.mkdtemp(dir=target.parent, prefix=f".{target.name}."))
         os.chmod(work, 0o755)
+        (work / MARK).write_text(_MARK_TEXT, encoding="utf-8")
     except OSError as error:
         raise StorageFailure(f"cannot create {target}: {error.strerror or error}.") from error
     try:
@@ -59,6 +64,21 @@ def whole_folder(path: str | Path) -> Iterator[Path]:
     except BaseException:
         shutil.rmtree(work, ignore_errors=True)
         raise
+
+
+def refuse_foreign(path: str | Path) -> None:
+    """Raise InputError if writing a folder to ``path`` would replace something this package did not write."""
+    target = Path(os.path.abspath(path))
+    if target.exists() and not target.is_dir():
+        raise InputError(f"{path} is a file; name a folder for the output.")
+    try:
+        foreign = target.is_dir() and any(target.iterdir()) and not (target / MARK).is_file()
+    except OSError as error:
+        raise StorageFailure(f"cannot look into {path}: {error.strerror or error}.") from error
+    if foreign:
+        raise InputError(
+            f"{path} is not empty and was not written by this tool, so it is left alone; name a new or empty folder."
+        )
 
 
 def _swap(work: Path, target: Path) -> None:

@@ -1,0 +1,194 @@
+"""Write the bundle: everything the firmware team needs, in one folder, whole or not at all."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from importlib import resources
+from pathlib import Path
+from typing import TYPE_CHECKING, Union
+
+from synth.base.caution import CAUTIONS
+from synth.base.errors import InputError, SynthError
+from synth.base.files import whole_folder
+from synth.base.provenance import sha256
+from synth.handoff.metadata import csvw, data_package
+from synth.handoff.readme import NOT_AS_FLASHED, readme_text
+from synth.handoff.scaling import Facts, scaling
+from synth.handoff.statement import MANIFEST, PROVENANCE, manifest, provenance
+from synth.handoff.table import SIGN_CONVENTION, GainRow, csv_text, gain_rows
+from synth.network.gains import Gains
+from synth.network.model import Kind, Network
+
+if TYPE_CHECKING:
+    from synth.local import Design
+    from synth.proof import Certificate
+
+    DesignOrGains = Union[Design, Gains]
+
+
+class UnprovenTable(SynthError):
+    """The certificate does not prove these gains, so no bundle is written (exit code 1)."""
+
+    exit_code = 1
+
+
+@dataclass(frozen=True)
+class Bundle:
+    """A hand-off folder as written.
+
+    ``proven`` is about the code as flashed (sampled, rounded) and False in this version, ``reason`` says why;
+    ``proven_continuous`` is the certificate's own claim about the continuous loop. ``scaling`` holds, by
+    ``kind.actuator.signal``, the gain with its units and the guaranteed peaks in them. ``files`` are names inside
+    ``path``, sorted.
+    """
+
+    path: Path
+    files: tuple[str, ...]
+    proven: bool
+    proven_continuous: bool
+    reason: str
+    scaling: Mapping[str, Facts]
+    rows: tuple[GainRow, ...]
+    certificate_sha256: str
+
+    def as_json(self) -> dict[str, object]:
+        """Plain data with the keys bundle, files, proven, scaling and some more."""
+        return {
+            "bundle": str(self.path),
+            "files": list(self.files),
+            "proven": self.proven,
+            "proven_continuous": self.proven_continuous,
+            "reason": self.reason,
+            "scaling": {key: value for key, value in self.scaling.items()},
+            "sign_convention": SIGN_CONVENTION,
+            "certificate_sha256": self.certificate_sha256,
+            "cautions": list(CAUTIONS),
+        }
+
+    def as_text(self) -> str:
+        """A few lines for a terminal."""
+        lines = [
+            f"Bundle {self.path}: {len(self.files)} files, {len(self.rows)} gains, sign convention {SIGN_CONVENTION}.",
+            f"Proven for the continuous loop: {'yes' if self.proven_continuous else 'no'}. "
+            f"Proven as flashed: {'yes' if self.proven else 'no'}.",
+            self.reason,
+            "Check on the other side: sha256sum -c SHA256SUMS; python3 check.py certificate.json",
+        ]
+        return "\n".join(lines)
+
+
+def hand_off(network: Network, design_or_gains: DesignOrGains, certificate: Certificate, out: str | Path) -> Bundle:
+    """Write the bundle for ``design_or_gains`` (u = K y, declared units) into the folder ``out``.
+
+    The folder takes the place of whatever folder stood there; after any error the old one stands untouched.
+    Equal inputs give equal bytes: no date or path is written inside.
+
+    Raises UnprovenTable if the certificate is not proven (an unproven table must not reach firmware by this way),
+    InputError if the certificate is about another network or other gains, StorageFailure if the disk refuses.
+    """
+    gains = design_or_gains if isinstance(design_or_gains, Gains) else design_or_gains.gains
+    _fits(network, gains)
+    if not certificate.proven:
+        why = "; ".join(certificate.reasons) or "its claim was not accepted"
+        raise UnprovenTable(
+            f"no bundle was written to {out}: the certificate does not prove these gains ({why}). "
+            "Lower the link strengths or let design search further, prove again, then hand off."
+        )
+    with whole_folder(out) as work:
+        certificate.save(work / "certificate.json")
+        certificate_bytes = (work / "certificate.json").read_bytes()
+        _about_these(network, gains, certificate)
+        certificate_sha256 = sha256(certificate_bytes)
+        rows = gain_rows(network, gains, certificate_sha256)
+        facts = scaling(network, rows, certificate.peaks)
+        files = _contents(network, rows, facts, certificate)
+        files["certificate.json"] = certificate_bytes
+        files[PROVENANCE] = _json(provenance(files, network.hash, certificate_sha256, True))
+        files[MANIFEST] = manifest(files).encode()
+        for name, data in files.items():
+            (work / name).write_bytes(data)
+        left = {path.name for path in work.iterdir()} - set(files)
+        if left:
+            raise SynthError(f"saving the certificate left unexpected files in the bundle: {sorted(left)}")
+    return Bundle(Path(out), tuple(sorted(files)), False, True, NOT_AS_FLASHED, facts, rows, certificate_sha256)
+
+
+def checker_text() -> str:
+    """Source of the stand-alone checker, as it is installed."""
+    return resources.files("synth.proof").joinpath("check.py").read_text(encoding="utf-8")
+
+
+def _fits(network: Network, gains: Gains) -> None:
+    """Names and sizes of the gains must be those of the network's kinds; InputError with every misfit."""
+    wrong = []
+    for kind in network.kinds:
+        if kind.name not in gains:
+            wrong.append(f"kind {kind.name} has no gains")
+            continue
+        found = gains[kind.name]
+        actuators, signals = tuple(a.name for a in kind.inputs), tuple(s.name for s in kind.sensors)
+        if found.actuators != actuators or found.signals != signals or found.K.shape != (len(actuators), len(signals)):
+            wrong.append(
+                f"the gains of {kind.name} are for actuators {list(found.actuators)} and signals "
+                f"{list(found.signals)}; the network has {list(actuators)} and {list(signals)}"
+            )
+    wrong.extend(
+        f"gains are given for {name}, which is no kind of this network"
+        for name in gains
+        if name not in {kind.name for kind in network.kinds}
+    )
+    if wrong:
+        raise InputError("; ".join(wrong) + ". Use gains designed for this network.")
+
+
+def _contents(
+    network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], certificate: Certificate
+) -> dict[str, bytes]:
+    """Every file made here but the certificate, the provenance statement and the manifest."""
+    table = csv_text(rows).encode()
+    return {
+        "gains.csv": table,
+        "gains.csv-metadata.json": _json(csvw(network.title, rows)),
+        "datapackage.json": _json(data_package(network.title, rows, table, sha256(table))),
+        "gains.json": _json(_table_document(network, rows, facts)),
+        "check.py": checker_text().encode(),
+        "README.txt": readme_text(
+            network, rows, facts, certificate.claim, certificate.covers, certificate.excludes
+        ).encode(),
+    }
+
+
+def _table_document(network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts]) -> dict[str, object]:
+    """The JSON gain table with what a table alone cannot carry."""
+    return {
+        "table": "localgain gains",
+        "title": network.title,
+        "network_sha256": network.hash,
+        "sign_convention": SIGN_CONVENTION,
+        "meaning": "actuator = sum over its rows of gain * signal; deviations from the operating point; time in s",
+        "rows": [row.as_dict() for row in rows],
+        "signals": {kind.name: _definitions(kind) for kind in network.kinds},
+        "scaling": dict(facts),
+        "proven_continuous": True,
+        "proven_as_flashed": False,
+        "reason": NOT_AS_FLASHED,
+        "cautions": list(CAUTIONS),
+    }
+
+
+def _definitions(kind: Kind) -> dict[str, object]:
+    """Every sensor as the sum that defines it (y = C x + N v), and every actuator with its limit, exact texts."""
+    sensors = {}
+    for i, sensor in enumerate(kind.sensors):
+        terms = {state.name: str(kind.C[i, j]) for j, state in enumerate(kind.states) if kind.C[i, j]}
+        heard = {take.name: str(kind.N[i, j]) for j, take in enumerate(kind.takes) if kind.N[i, j]}
+        sensors[sensor.name] = {"unit": sensor.unit, "states": terms, "taken": heard}
+    actuators = {a.name: {"unit": a.unit, "limit": None if a.limit is None else str(a.limit)} for a in kind.inputs}
+    return {"sensors": sensors, "actuators": actuators, "states": {s.name: {"unit": s.unit} for s in kind.states}}
+
+
+def _json(value: object) -> bytes:
+    """Readable JSON, keys in the order given, no NaN, one final newline."""
+    return (json.dumps(value, indent=2, ensure_ascii=False, allow_nan=False) + "\n").encode()

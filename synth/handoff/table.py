@@ -1,0 +1,114 @@
+"""The gain table: one row for each gain, exact, with the units and the sign convention beside the number.
+
+Laws: reading the CSV text back with ``synth.network.read_gains`` gives gains equal to the ones written, digit for digit, and
+so does the JSON form; equal inputs give equal bytes.
+"""
+
+from __future__ import annotations
+
+import csv
+import io
+from dataclasses import asdict, dataclass
+from fractions import Fraction
+
+from synth.handoff.quantity import quotient
+from synth.network.gains import Gains
+from synth.network.model import Network
+
+SIGN_CONVENTION = "u = K y"
+
+COLUMNS = (
+    "kind",
+    "actuator",
+    "signal",
+    "gain",
+    "gain_unit",
+    "actuator_unit",
+    "signal_unit",
+    "sign_convention",
+    "period_s",
+    "certificate_sha256",
+)
+
+
+@dataclass(frozen=True)
+class GainRow:
+    """One entry of K: ``actuator`` gets ``gain`` times ``signal``; every field is the text that stands in the table."""
+
+    kind: str
+    actuator: str
+    signal: str
+    gain: str
+    gain_unit: str
+    actuator_unit: str
+    signal_unit: str
+    sign_convention: str
+    period_s: str
+    certificate_sha256: str
+
+    def as_dict(self) -> dict[str, str]:
+        """The row by column name, in column order."""
+        return asdict(self)
+
+
+def exact_text(value: Fraction) -> str:
+    """The number as text without loss: a plain decimal where one with finitely many digits exists, else ``'1/3'``.
+
+    Law: ``Fraction(exact_text(value)) == value``.
+    """
+    twos, rest = _factor_out(value.denominator, 2)
+    fives, rest = _factor_out(rest, 5)
+    if rest != 1:
+        return str(value)
+    places = max(twos, fives)
+    digits = str(abs(value.numerator) * 10**places // value.denominator).rjust(places + 1, "0")
+    whole = digits if places == 0 else f"{digits[:-places]}.{digits[-places:]}"
+    return f"-{whole}" if value < 0 else whole
+
+
+def _factor_out(number: int, prime: int) -> tuple[int, int]:
+    """How often ``prime`` divides ``number``, and what is left."""
+    count = 0
+    while number % prime == 0:
+        number //= prime
+        count += 1
+    return count, number
+
+
+def gain_rows(network: Network, gains: Gains, certificate_sha256: str = "") -> tuple[GainRow, ...]:
+    """A row for every actuator and sensor of every kind, in the order of the network; zeros are rows too.
+
+    A zero that is left out of a table cannot be told from a gain that got lost, so none is left out.
+    """
+    period = "" if network.goal.period is None else exact_text(network.goal.period)
+    rows = []
+    for kind in network.kinds:
+        K = gains[kind.name].K
+        for i, actuator in enumerate(kind.inputs):
+            for j, sensor in enumerate(kind.sensors):
+                rows.append(
+                    GainRow(
+                        kind.name,
+                        actuator.name,
+                        sensor.name,
+                        exact_text(K[i, j]),
+                        quotient(actuator.unit, sensor.unit),
+                        actuator.unit,
+                        sensor.unit,
+                        SIGN_CONVENTION,
+                        period,
+                        certificate_sha256,
+                    )
+                )
+    return tuple(rows)
+
+
+def csv_text(rows: tuple[GainRow, ...]) -> str:
+    """The rows as CSV with a header row (RFC 4180: comma, CR LF, quotes doubled)."""
+    stream = io.StringIO(newline="")
+    writer = csv.writer(stream, lineterminator="\r\n")
+    writer.writerow(COLUMNS)
+    for row in rows:
+        fields = row.as_dict()
+        writer.writerow([fields[name] for name in COLUMNS])
+    return stream.getvalue()

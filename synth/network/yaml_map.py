@@ -1,0 +1,296 @@
+"""YAML 1.2 with a place for every key and value, and numbers kept as the decimals a person wrote.
+
+The C parser of PyYAML delivers events; the meaning of plain scalars is decided here by the YAML 1.2 core schema
+(``1e-3`` is a number; ``yes``, ``on`` and ``12:30`` are text). Anchors, tags and a second document are refused, as are
+repeated keys, nesting deeper than ``DEEPEST``, non-finite numbers and exponents beyond double precision.
+
+Law: for any text, ``parse`` returns a tree or records at least one problem; it raises nothing else.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
+from decimal import Decimal
+from fractions import Fraction
+from typing import Any
+
+import yaml
+
+from synth.base.errors import Place, Problem
+from synth.base.units import UnitError, parse_number
+
+DEEPEST = 40
+MOST_PROBLEMS = 100
+
+
+@dataclass(frozen=True)
+class Source:
+    """The text a tree was read from and the name of its file."""
+
+    file: str
+    text: str
+
+
+@dataclass(frozen=True, eq=False)
+class Node:
+    """A value in the tree: ``path`` names it in words (``kinds.hauler.states``), ``place`` is where it stands."""
+
+    path: str
+    place: Place | None
+
+
+@dataclass(frozen=True, eq=False)
+class Scalar(Node):
+    """A single value; ``text`` is what was written, ``value`` what it means in the core schema."""
+
+    value: Fraction | bool | str | None
+    text: str
+    source: Source | None = None
+    start: int = 0
+    style: str | None = None
+
+    def place_at(self, offset: int) -> Place | None:
+        """The place of character ``offset`` of the text; the start of the value where escapes hide the way."""
+        if self.source is None or self.place is None:
+            return None
+        ahead = sum(not c.isspace() for c in self.text[:offset])
+        written = self.source.text
+        at = self.start
+        if self.style in ("|", ">"):
+            at = written.find("\n", at) + 1
+        elif self.style in ("'", '"'):
+            at += 1
+        while at < len(written):
+            if written[at] == "\\" and self.style == '"':
+                return self.place
+            if not written[at].isspace():
+                if ahead == 0:
+                    break
+                ahead -= 1
+            at += 1
+        before = written[:at]
+        return Place(self.source.file, before.count("\n") + 1, at - (before.rfind("\n") + 1) + 1)
+
+
+@dataclass(frozen=True, eq=False)
+class Listing(Node):
+    """A sequence of values."""
+
+    items: tuple[Node, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class Entry:
+    """A key with its place and its value."""
+
+    key: str
+    place: Place | None
+    value: Node
+
+
+@dataclass(frozen=True, eq=False)
+class Table(Node):
+    """Keys and values in the order they were written."""
+
+    entries: Mapping[str, Entry]
+
+
+@dataclass
+class Problems:
+    """Collects what is wrong, so that a person sees all of it at once."""
+
+    found: list[Problem] = field(default_factory=list)
+
+    def add(self, sentence: str, where: Node | Entry | Place | None = None) -> None:
+        """Record one sentence at the place of a node, an entry's key, or a place."""
+        place = where if isinstance(where, Place) or where is None else where.place
+        problem = Problem(sentence, place)
+        if problem not in self.found and len(self.found) < MOST_PROBLEMS:
+            self.found.append(problem)
+
+    def in_order(self) -> list[Problem]:
+        """All problems, those without a place first, then in file order."""
+        return sorted(self.found, key=lambda p: (0, 0) if p.place is None else (p.place.line, p.place.column))
+
+
+class _Stop(Exception):
+    """Reading cannot go on; the reason is already recorded."""
+
+
+_NULLS = {"", "~", "null", "Null", "NULL"}
+_TRUE, _FALSE = {"true", "True", "TRUE"}, {"false", "False", "FALSE"}
+_INTEGER = re.compile(r"[-+]?[0-9]+", re.ASCII)
+_RADIX = re.compile(r"0o[0-7]+|0x[0-9a-fA-F]+", re.ASCII)
+_FLOAT = re.compile(r"[-+]?(?:\.[0-9]+|[0-9]+(?:\.[0-9]*)?)(?:[eE][-+]?[0-9]+)?", re.ASCII)
+_NOT_FINITE = re.compile(r"[-+]?\.(?:inf|Inf|INF)|\.(?:nan|NaN|NAN)")
+
+
+def plain_value(text: str) -> Fraction | bool | str | None:
+    """What a plain scalar means in the YAML 1.2 core schema; UnitError for a number that is not accepted."""
+    if text in _NULLS:
+        return None
+    if text in _TRUE:
+        return True
+    if text in _FALSE:
+        return False
+    if _NOT_FINITE.fullmatch(text):
+        raise UnitError(f"{text} is not a finite number; write a number, or leave the key out where there is no bound")
+    if _RADIX.fullmatch(text) and len(text) < 40:
+        return Fraction(int(text[2:], 8 if text[1] == "o" else 16))
+    if _INTEGER.fullmatch(text) or _FLOAT.fullmatch(text):
+        return parse_number(text)
+    return text
+
+
+def child(path: str, key: str) -> str:
+    """The path of a key below ``path``."""
+    return f"{path}.{key}" if path else key
+
+
+class _Builder:
+    """Turns parser events into nodes."""
+
+    def __init__(self, source: Source, problems: Problems) -> None:
+        self.source = source
+        self.problems = problems
+        loader: Any = getattr(yaml, "CSafeLoader", yaml.SafeLoader)
+        self.events: Iterator[Any] = yaml.parse(source.text, Loader=loader)
+
+    def place(self, mark: Any) -> Place:
+        return Place(self.source.file, mark.line + 1, mark.column + 1)
+
+    def stop(self, sentence: str, mark: Any) -> _Stop:
+        self.problems.add(sentence, self.place(mark))
+        return _Stop()
+
+    def document(self) -> Node | None:
+        """The only document of the stream, or None if there is none."""
+        root: Node | None = None
+        for event in self.events:
+            if isinstance(event, yaml.DocumentStartEvent):
+                if root is not None:
+                    raise self.stop("a second document starts here; a problem file is one document", event.start_mark)
+                if event.version is not None and event.version != (1, 2):
+                    raise self.stop("the problem file is YAML 1.2; take out the %YAML line", event.start_mark)
+                root = self.node(next(self.events), "", 0)
+        return root
+
+    def node(self, event: Any, path: str, depth: int) -> Node:
+        mark = event.start_mark
+        if isinstance(event, yaml.AliasEvent) or getattr(event, "anchor", None) is not None:
+            raise self.stop("anchors (&) and aliases (*) are not accepted; write the value out where it is used", mark)
+        if getattr(event, "tag", None) is not None:
+            raise self.stop(f"the tag {event.tag!r} is not accepted; write the plain value", mark)
+        if depth > DEEPEST:
+            raise self.stop(f"the nesting is deeper than {DEEPEST} levels; no problem file needs that", mark)
+        if isinstance(event, yaml.ScalarEvent):
+            return self.scalar(event, path)
+        if isinstance(event, yaml.SequenceStartEvent):
+            items: list[Node] = []
+            while not isinstance(event := next(self.events), yaml.SequenceEndEvent):
+                items.append(self.node(event, f"{path}[{len(items)}]", depth + 1))
+            return Listing(path, self.place(mark), tuple(items))
+        return self.table(mark, path, depth)
+
+    def scalar(self, event: Any, path: str) -> Scalar:
+        value: Fraction | bool | str | None = event.value
+        place = self.place(event.start_mark)
+        if event.style is None or event.style == "":
+            try:
+                value = plain_value(event.value)
+            except UnitError as error:
+                self.problems.add(f"{path}: {error}.", place)
+                value = Fraction(1)  # stands in, so that reading can go on to the next problem
+        style = event.style or None
+        return Scalar(path, place, value, event.value, self.source, event.start_mark.index, style)
+
+    def table(self, mark: Any, path: str, depth: int) -> Table:
+        entries: dict[str, Entry] = {}
+        while not isinstance(event := next(self.events), yaml.MappingEndEvent):
+            if not isinstance(event, yaml.ScalarEvent):
+                raise self.stop("a key must be a name, not an anchor, a list or a mapping", event.start_mark)
+            if event.anchor is not None or event.tag is not None:
+                raise self.stop("anchors, aliases and tags are not accepted at a key; write the plain name", event.start_mark)
+            key, place = event.value, self.place(event.start_mark)
+            value = self.node(next(self.events), child(path, key), depth + 1)
+            if key in entries:
+                first = entries[key].place
+                line = f" (first in line {first.line})" if first else ""
+                self.problems.add(f"the key {key!r} stands twice in {path or 'the file'}{line}; keep one of them.", place)
+                continue
+            entries[key] = Entry(key, place, value)
+        return Table(path, self.place(mark), entries)
+
+
+def parse(text: str, file: str, problems: Problems) -> Node | None:
+    """Read a YAML text into a tree; what is wrong is added to ``problems``, and None returned if nothing can be used."""
+    try:
+        root = _Builder(Source(file, text), problems).document()
+    except _Stop:
+        return None
+    except yaml.YAMLError as error:
+        problems.add(_syntax_sentence(error), _syntax_place(error, file, text))
+        return None
+    if root is None:
+        problems.add("the file is empty; a problem file starts with 'synth: 1'.", Place(file, 1, 1))
+    return root
+
+
+def _syntax_place(error: yaml.YAMLError, file: str, text: str) -> Place:
+    mark = getattr(error, "problem_mark", None) or getattr(error, "context_mark", None)
+    if mark is not None:
+        return Place(file, mark.line + 1, mark.column + 1)
+    for number, line in enumerate(text.split("\n"), 1):
+        for column, character in enumerate(line, 1):
+            if not character.isprintable() and character not in "\t\r\x85\ufeff":
+                return Place(file, number, column)
+    return Place(file, 1, 1)
+
+
+def _syntax_sentence(error: yaml.YAMLError) -> str:
+    said = str(getattr(error, "problem", None) or getattr(error, "reason", None) or "it cannot be read")
+    if "\\t" in said or "cannot start any token" in said:
+        return (
+            "this is not valid YAML: a character stands here that cannot start a value "
+            "(a tab, or one of % @ `); indent with spaces and put quotes around such text."
+        )
+    return f"this is not valid YAML: {said}; check the indentation, the colons and the brackets up to here."
+
+
+def from_python(value: object, problems: Problems, path: str = "", depth: int = 0) -> Node | None:
+    """The tree of nested Python mappings and sequences; it has no places.
+
+    A float counts as the decimal that Python prints for it, so a mapping loaded from a file means what the file says.
+    """
+    if depth > DEEPEST:
+        problems.add(f"{path[:80]}: the nesting is deeper than {DEEPEST} levels; no problem needs that.")
+        return None
+    if isinstance(value, Mapping):
+        entries: dict[str, Entry] = {}
+        for key, inner in value.items():
+            name = str(key)
+            node = from_python(inner, problems, child(path, name), depth + 1)
+            if node is not None:
+                entries[name] = Entry(name, None, node)
+        return Table(path, None, entries)
+    plain = getattr(value, "tolist", None)  # numpy arrays and scalars
+    value = plain() if callable(plain) else value
+    if isinstance(value, Sequence) and not isinstance(value, (str, bytes)):
+        nodes = [from_python(inner, problems, f"{path}[{i}]", depth + 1) for i, inner in enumerate(value)]
+        return Listing(path, None, tuple(node for node in nodes if node is not None))
+    if isinstance(value, (str, bool)) or value is None:
+        return Scalar(path, None, value, "" if value is None else str(value), style='"')
+    try:
+        if isinstance(value, (int, Fraction)):
+            if abs(value) > 10**309:
+                raise UnitError("the number is too large")
+            return Scalar(path, None, Fraction(value), str(value))
+        if isinstance(value, (float, Decimal)):
+            return Scalar(path, None, parse_number(repr(value) if isinstance(value, float) else str(value)), str(value))
+    except UnitError:
+        problems.add(f"{path}: this is not a finite number of a sensible size; write a number.")
+        return None
+    problems.add(f"{path}: a {type(value).__name__} is not accepted; write text, a number, a list or a mapping.")
+    return None

@@ -1,0 +1,153 @@
+"""The whole job in one call: check, design, prove, margin, simulate, hand off, report, into one folder written whole."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from synth.base.caution import cautions_text
+from synth.base.errors import SynthError
+from synth.base.files import whole_folder
+from synth.base.progress import Listener, silent
+from synth.network.gains import Gains
+from synth.network.model import Network
+
+
+@dataclass(frozen=True)
+class WholeJob:
+    """Everything `synth run` found: the JSON document of the contract, the text for a person, and whether it is proven."""
+
+    document: Mapping[str, Any]
+    text: str
+    proven: bool
+    folder: Path
+
+
+def plain_json(value: object) -> str:
+    """Two-space JSON that ends with a newline; NaN is refused, infinity must already be the text 'inf'."""
+    return json.dumps(value, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
+
+
+def run_whole_job(
+    network: Network,
+    out: str | Path,
+    *,
+    gains: Gains | None = None,
+    target: float | None = None,
+    seed: int = 0,
+    progress: Listener = silent,
+) -> WholeJob:
+    """Run every stage on ``network`` and leave the results in ``out``, which appears whole or not at all.
+
+    ``gains`` skips the design and proves gains already in service. ``target`` replaces the file's target, ``seed``
+    (an integer) fixes the searches and random scenarios. Raises what the stages raise (InputError, ObstructionFound,
+    SolverFailure, StorageFailure); then nothing is written and what stood at ``out`` before stands untouched.
+    """
+    from synth.handoff import hand_off
+    from synth.local import design as make_design
+    from synth.margin import margin as find_margin
+    from synth.network import describe
+    from synth.proof import prove
+    from synth.report import write_report
+    from synth.simulate import simulate as run_simulation
+
+    final = Path(out)
+    with whole_folder(final) as work:
+        progress("checking the network")
+        described = describe(network)
+        chosen = None
+        if gains is None:
+            progress("searching gains")
+            chosen = make_design(network, target=target, seed=seed, progress=progress)
+        used: Any = chosen if chosen is not None else gains
+        progress("proving")
+        certificate = prove(network, used, target=target, progress=progress)
+        certificate.save(work / "certificate.json")
+        limits = trajectory = bundle = None
+        refusals: dict[str, str] = {}
+        progress("finding the largest tolerable coupling")
+        try:
+            limits = find_margin(network, used, progress=progress)
+        except SynthError as error:
+            refusals["margin"] = str(error)
+        progress("simulating, with an adversary that tries to break the bounds")
+        try:
+            trajectory = run_simulation(network, used, certificate, seed=seed, progress=progress)
+        except SynthError as error:
+            refusals["simulation"] = str(error)
+        if certificate.proven:
+            progress("writing the hand-off bundle")
+            bundle = hand_off(network, used, certificate, work / "bundle")
+        else:
+            refusals["handoff"] = "not proven, so no bundle was written: an unproven table must not reach firmware."
+        progress("writing the report")
+        write_report(work / "report.html", network, chosen, certificate, limits, trajectory, bundle)
+        document = _document(described, chosen, gains, certificate, limits, trajectory, bundle, refusals, final)
+        (work / "result.json").write_text(plain_json(document), encoding="utf-8")
+        text = _text(described, chosen, certificate, limits, trajectory, bundle, refusals, final)
+        (work / "summary.txt").write_text(text, encoding="utf-8")
+    return WholeJob(document, text, certificate.proven, final)
+
+
+def _document(
+    described: Any,
+    chosen: Any,
+    gains: Gains | None,
+    certificate: Any,
+    limits: Any,
+    trajectory: Any,
+    bundle: Any,
+    refusals: Mapping[str, str],
+    final: Path,
+) -> dict[str, Any]:
+    """The JSON of `run`: one key per stage, each as its own verb prints it; a stage that did not run says why."""
+
+    def stage(result: Any, name: str) -> Any:
+        return result.as_json() if result is not None else {"not_run": refusals.get(name, "not asked for")}
+
+    designed = chosen.as_json() if chosen is not None else None
+    if designed is None and gains is not None:
+        designed = {"gains": {kind: gains[kind].as_dict() for kind in gains}, "in_service": True}
+    proof = {**certificate.as_json(), "certificate": str(final / "certificate.json")}
+    handed = stage(bundle, "handoff")
+    if bundle is not None:
+        handed["bundle"] = str(final / "bundle")
+    else:
+        handed = {"bundle": None, "files": [], "proven": False, "scaling": {}, **handed}
+    return {
+        "network": described.as_json(),
+        "design": designed,
+        "proof": proof,
+        "margin": stage(limits, "margin"),
+        "simulation": stage(trajectory, "simulation"),
+        "handoff": handed,
+        "report": str(final / "report.html"),
+    }
+
+
+def _text(
+    described: Any,
+    chosen: Any,
+    certificate: Any,
+    limits: Any,
+    trajectory: Any,
+    bundle: Any,
+    refusals: Mapping[str, str],
+    final: Path,
+) -> str:
+    """What `run` prints for a person: each stage's own text under a heading, then where the files are, then cautions."""
+    parts = [("Network", described), ("Gains", chosen), ("Proof", certificate), ("Margin", limits)]
+    parts += [("Simulation", trajectory), ("Hand-off", bundle)]
+    names = {"Margin": "margin", "Simulation": "simulation", "Hand-off": "handoff"}
+    lines: list[str] = []
+    for title, result in parts:
+        if result is None and title not in names:
+            continue
+        body = result.as_text().rstrip() if result is not None else f"not run: {refusals.get(names[title], '')}"
+        lines += [title, "-" * len(title), body, ""]
+    lines += ["Files", "-----", f"everything is in {final} (open report.html first)", ""]
+    lines += ["Cautions", "--------", cautions_text()]
+    return "\n".join(lines) + "\n"
