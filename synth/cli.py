@@ -82,13 +82,13 @@ def check(file: Path, as_json: bool, out: Path | None) -> None:
 @_with(FILE, TARGET, SEED, JSON, OUT, QUIET)
 def design(file: Path, target: float | None, seed: int, as_json: bool, out: Path | None, quiet: bool) -> None:
     """Pick local gains with the smallest spectral radius within the limits of FILE."""
-    from synth.handoff import gain_table_csv
+    from synth.handoff.table import csv_text, gain_rows
     from synth.local import design as make_design
 
     network = _read(file)
     chosen = make_design(network, target=_target(target), seed=seed, progress=_progress(quiet))
     document = chosen.as_json()
-    files = {"design.json": document, "gains.csv": gain_table_csv(network, chosen.gains)}
+    files = {"design.json": document, "gains.csv": csv_text(gain_rows(network, chosen.gains))}
     _deliver(document, chosen.as_text(), as_json, out, files)
     _leave(chosen.reached)
 
@@ -283,7 +283,7 @@ def _deliver(
 ) -> None:
     """Write the files (whole folder), then print the JSON document or the text, with the cautions after the text."""
     from synth.base.caution import cautions_text
-    from synth.whole_job import plain_json
+    from synth.whole_job import plain_json, wrapped
 
     if out is not None:
         from synth.base.files import whole_folder
@@ -296,12 +296,10 @@ def _deliver(
     if as_json:
         click.echo(plain_json(document), nl=False)
         return
-    shown = text.rstrip()
+    shown = text.replace(cautions_text(), "").rstrip()
     if out is not None:
-        shown += f"\nWritten to {out}."
-    if "engineering aid" not in shown.lower():
-        shown += "\n\nCautions\n--------\n" + cautions_text()
-    click.echo(shown)
+        shown += f"\n\nWritten to {out}."
+    click.echo(wrapped(f"{shown}\n\nCautions\n--------\n{cautions_text()}\n"), nl=False)
 
 
 def _leave(good: bool) -> NoReturn:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import textwrap
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -87,8 +88,10 @@ def run_whole_job(
         write_report(work / "report.html", network, chosen, certificate, limits, trajectory, bundle)
         document = _document(described, chosen, gains, certificate, limits, trajectory, bundle, refusals, final)
         (work / "result.json").write_text(plain_json(document), encoding="utf-8")
-        text = _text(described, chosen, certificate, limits, trajectory, bundle, refusals, final)
-        (work / "summary.txt").write_text(text, encoding="utf-8")
+        text = _text(described, chosen, certificate, limits, trajectory, bundle, refusals, final, work)
+        (work / "summary.txt").write_text(
+            wrapped(f"{text}\nCautions\n--------\n{cautions_text()}\n"), encoding="utf-8"
+        )
     return WholeJob(document, text, certificate.proven, final)
 
 
@@ -137,8 +140,9 @@ def _text(
     bundle: Any,
     refusals: Mapping[str, str],
     final: Path,
+    work: Path,
 ) -> str:
-    """What `run` prints for a person: each stage's own text under a heading, then where the files are, then cautions."""
+    """What `run` prints for a person: each stage's own text under a heading, then where the files are."""
     parts = [("Network", described), ("Gains", chosen), ("Proof", certificate), ("Margin", limits)]
     parts += [("Simulation", trajectory), ("Hand-off", bundle)]
     names = {"Margin": "margin", "Simulation": "simulation", "Hand-off": "handoff"}
@@ -146,8 +150,19 @@ def _text(
     for title, result in parts:
         if result is None and title not in names:
             continue
-        body = result.as_text().rstrip() if result is not None else f"not run: {refusals.get(names[title], '')}"
+        body = result.as_text() if result is not None else f"not run: {refusals.get(names[title], '')}"
+        # Every stage's own text carries the cautions for those who print it alone; here they stand once, at the end.
+        body = body.replace(cautions_text(), "").replace(str(work), str(final)).rstrip()
         lines += [title, "-" * len(title), body, ""]
     lines += ["Files", "-----", f"everything is in {final} (open report.html first)", ""]
-    lines += ["Cautions", "--------", cautions_text()]
+    return "\n".join(lines) + "\n"
+
+
+def wrapped(text: str, width: int = 100) -> str:
+    """The text with over-long lines broken at spaces; continuation lines keep the indentation of their line."""
+    lines: list[str] = []
+    for line in text.splitlines():
+        indent = " " * (len(line) - len(line.lstrip()) + 2)
+        broken = textwrap.wrap(line, width, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False)
+        lines += broken or [""]
     return "\n".join(lines) + "\n"

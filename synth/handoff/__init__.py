@@ -1,8 +1,9 @@
 """From proven gains to a folder that a firmware team can use and re-verify without this tool.
 
-In come a network, its exact gains and an accepted certificate; out goes a bundle: gain tables with units, the certificate, its
-stand-alone checker, scaling hints and a manifest, written whole or not at all. It stands on no theorem of its own: it carries the
-claim of the certificate (theory 2 and 10) unchanged and says what that claim does not reach, above all the code as flashed.
+In come a network, its exact gains and an accepted certificate; out goes a bundle: gain tables with units, the
+certificate, its stand-alone checker, scaling hints and a manifest, written whole or not at all. It stands on no theorem
+of its own: it carries the claim of the certificate (theory 2 and 10) unchanged and says what that claim does not reach,
+above all the code as flashed.
 """
 
 from __future__ import annotations

@@ -7,15 +7,16 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from importlib import resources
 from pathlib import Path
-from typing import TYPE_CHECKING, Union
+from typing import TYPE_CHECKING, TypeAlias
 
 from synth.base.caution import CAUTIONS
 from synth.base.errors import InputError, SynthError
-from synth.base.files import whole_folder
+from synth.base.exact import ExactMatrix
+from synth.base.files import MARK, whole_folder
 from synth.base.provenance import sha256
 from synth.handoff.metadata import csvw, data_package
 from synth.handoff.readme import NOT_AS_FLASHED, readme_text
-from synth.handoff.scaling import Facts, scaling
+from synth.handoff.scaling import Facts, exact_peaks, scaling
 from synth.handoff.statement import MANIFEST, PROVENANCE, manifest, provenance
 from synth.handoff.table import SIGN_CONVENTION, GainRow, csv_text, gain_rows
 from synth.network.gains import Gains
@@ -25,7 +26,7 @@ if TYPE_CHECKING:
     from synth.local import Design
     from synth.proof import Certificate
 
-    DesignOrGains = Union[Design, Gains]
+    DesignOrGains: TypeAlias = Design | Gains
 
 
 class UnprovenTable(SynthError):
@@ -61,7 +62,7 @@ class Bundle:
             "proven": self.proven,
             "proven_continuous": self.proven_continuous,
             "reason": self.reason,
-            "scaling": {key: value for key, value in self.scaling.items()},
+            "scaling": dict(self.scaling),
             "sign_convention": SIGN_CONVENTION,
             "certificate_sha256": self.certificate_sha256,
             "cautions": list(CAUTIONS),
@@ -86,7 +87,8 @@ def hand_off(network: Network, design_or_gains: DesignOrGains, certificate: Cert
     Equal inputs give equal bytes: no date or path is written inside.
 
     Raises UnprovenTable if the certificate is not proven (an unproven table must not reach firmware by this way),
-    InputError if the certificate is about another network or other gains, StorageFailure if the disk refuses.
+    InputError if the certificate is about another network or other gains, or the gains do not fit the network, or
+    ``out`` holds somebody's other work; StorageFailure if the disk refuses.
     """
     gains = design_or_gains if isinstance(design_or_gains, Gains) else design_or_gains.gains
     _fits(network, gains)
@@ -96,20 +98,21 @@ def hand_off(network: Network, design_or_gains: DesignOrGains, certificate: Cert
             f"no bundle was written to {out}: the certificate does not prove these gains ({why}). "
             "Lower the link strengths or let design search further, prove again, then hand off."
         )
+    _about_these(network, gains, certificate)
     with whole_folder(out) as work:
         certificate.save(work / "certificate.json")
         certificate_bytes = (work / "certificate.json").read_bytes()
-        _about_these(network, gains, certificate)
+        _still_verified(work / "certificate.json", network)
         certificate_sha256 = sha256(certificate_bytes)
         rows = gain_rows(network, gains, certificate_sha256)
-        facts = scaling(network, rows, certificate.peaks)
+        facts = scaling(network, rows, exact_peaks(certificate.document))
         files = _contents(network, rows, facts, certificate)
         files["certificate.json"] = certificate_bytes
         files[PROVENANCE] = _json(provenance(files, network.hash, certificate_sha256, True))
         files[MANIFEST] = manifest(files).encode()
         for name, data in files.items():
             (work / name).write_bytes(data)
-        left = {path.name for path in work.iterdir()} - set(files)
+        left = {path.name for path in work.iterdir()} - set(files) - {MARK}
         if left:
             raise SynthError(f"saving the certificate left unexpected files in the bundle: {sorted(left)}")
     return Bundle(Path(out), tuple(sorted(files)), False, True, NOT_AS_FLASHED, facts, rows, certificate_sha256)
@@ -141,6 +144,32 @@ def _fits(network: Network, gains: Gains) -> None:
     )
     if wrong:
         raise InputError("; ".join(wrong) + ". Use gains designed for this network.")
+
+
+def _about_these(network: Network, gains: Gains, certificate: Certificate) -> None:
+    """The certificate must be about exactly this network and these gains, digit for digit; InputError otherwise."""
+    if certificate.document["network_hash"] != network.hash:
+        raise InputError(
+            "the certificate is about another network (its hash differs: a matrix, a link or a bound has changed). "
+            "Prove again with this network, then hand off."
+        )
+    for proven in certificate.document["gains"]:
+        found = gains[proven["kind"]]
+        names = (list(found.actuators), list(found.signals))
+        if (list(proven["actuators"]), list(proven["signals"])) != names or ExactMatrix.of(proven["K"]) != found.K:
+            raise InputError(
+                f"the certificate proves other gains of {found.kind} than the ones to be handed off. "
+                "Prove these gains, then hand off."
+            )
+
+
+def _still_verified(path: Path, network: Network) -> None:
+    """Run the checker on the very file that is shipped; UnprovenTable if it does not accept it."""
+    from synth.proof import verify
+
+    result = verify(path, network)
+    if not result.verified:
+        raise UnprovenTable("no bundle was written: the checker refuses the certificate: " + "; ".join(result.reasons))
 
 
 def _contents(

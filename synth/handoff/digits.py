@@ -14,7 +14,8 @@ def digits(value: float | Fraction, count: int = 4, rounding: str = "nearest") -
 
     ``rounding`` is 'nearest', 'up' (towards plus infinity, for upper bounds) or 'down'. Powers of ten are written out
     from 0.0001 to 999999, beyond as ``1.2e-7``. Raises ValueError for NaN: a number that is none is never printed.
-    Law: with 'up' the printed number is never below the value, with 'down' never above it.
+    A double stands for its shortest decimal, the one that ``repr`` shows, so a bound stated as 0.703 prints as 0.703.
+    Law: with 'up' the printed number is never below that decimal (or the Fraction), with 'down' never above it.
     """
     if isinstance(value, float) and not math.isfinite(value):
         if math.isnan(value):
@@ -24,7 +25,7 @@ def digits(value: float | Fraction, count: int = 4, rounding: str = "nearest") -
     if isinstance(value, Fraction):
         rounded = context.divide(Decimal(value.numerator), Decimal(value.denominator))
     else:
-        rounded = context.create_decimal(Decimal(value))
+        rounded = context.create_decimal(Decimal(repr(float(value))))
     return _plain(rounded)
 
 

@@ -6,6 +6,7 @@ import textwrap
 from collections.abc import Mapping, Sequence
 
 from synth.base.caution import CAUTIONS
+from synth.base.files import MARK
 from synth.handoff.digits import digits
 from synth.handoff.scaling import Facts
 from synth.handoff.table import SIGN_CONVENTION, GainRow
@@ -27,7 +28,8 @@ CONTENTS = (
     ("certificate.json", "the proof, as data"),
     ("check.py", "re-verifies the proof with a bare Python, nothing to install"),
     ("provenance.json", "hashes of the inputs and versions (in-toto statement)"),
-    ("SHA256SUMS", "hashes of all files"),
+    ("SHA256SUMS", "hashes of all files above and of this README"),
+    (MARK, "says that the tool wrote this folder; no further use"),
 )
 
 # The MIT licence asks that its notice travels with copies of the program; check.py is such a copy.
@@ -68,8 +70,8 @@ def readme_text(
     parts = [
         _heading(f"Local feedback gains: {network.title}", "="),
         _paragraph(
-            "Gains for local controllers, with a proof. Every unit of a kind uses the same gains and reads only "
-            "its own sensors."
+            "Gains for local controllers, with a proof. Every unit of a kind uses the same gains and uses only "
+            "the signals listed below."
         ),
         _heading("Cautions"),
         _bullets(CAUTIONS),
@@ -159,13 +161,15 @@ def _ranges(scaling: Mapping[str, Facts]) -> str:
             )
     note = _paragraph(
         "Peaks are guaranteed for the declared disturbances, starting from rest. A start away from rest, or a larger "
-        "disturbance, needs more. A range is the next power of two, or above the actuator's limit."
+        "disturbance, needs more. A range is the smallest power of two that holds the peak (for an actuator with a "
+        "limit: the limit)."
     )
-    return _columns([("kind", "quantity", "peak", "range", "unit"), *lines.values()]) + "\n" + note
+    ordered = sorted(lines.values(), key=lambda line: line[1].startswith("actuator"))  # signals first
+    return _columns([("kind", "quantity", "peak", "range", "unit"), *ordered]) + "\n" + note
 
 
 def _upper(value: object) -> str:
-    return digits(value, 4, "up") if isinstance(value, float) else "not known"
+    return digits(value, 6) if isinstance(value, float) else "not known"
 
 
 def _plus_minus(value: object) -> str:

@@ -1,39 +1,19 @@
 """What the firmware must be able to represent: a guaranteed peak and a suggested range for each signal and actuator.
 
-Peaks are those of the certificate: under the declared disturbances, from rest. Sensors that are not states get the triangle
-inequality |y| <= sum |C| peak(x) + sum |N| peak(v), evaluated in rationals and rounded up. The rounded integers of a
-fixed-point format are not chosen here.
+Peaks are those of the certificate: under the declared disturbances, from rest. Sensors that are not states get the
+triangle inequality |y| <= sum |C| peak(x) + sum |N| peak(v), evaluated in rationals and rounded up. The rounded
+integers of a fixed-point format are not chosen here.
 """
 
 from __future__ import annotations
 
-import math
+from collections.abc import Mapping
 from fractions import Fraction
-from typing import Any, Protocol
+from typing import Any
 
+from synth.handoff.digits import digits
 from synth.handoff.table import GainRow
 from synth.network.model import Kind, Network
-
-
-class PeakLike(Protocol):
-    """What is used of a certificate's peak: kind, role ('state', 'offer', 'actuator'), signal and value."""
-
-    @property
-    def kind(self) -> str:
-        """Name of the kind."""
-
-    @property
-    def role(self) -> str:
-        """'state', 'offer' or 'actuator'."""
-
-    @property
-    def signal(self) -> str:
-        """Name of the signal."""
-
-    @property
-    def value(self) -> float:
-        """Guaranteed peak in the declared unit."""
-
 
 _LARGEST_POWER = 1023  # of two, in a double
 
@@ -41,20 +21,21 @@ Facts = dict[str, Any]
 Peaks = dict[tuple[str, str, str], Fraction]
 
 
-def collect_peaks(peaks: tuple[PeakLike, ...]) -> Peaks:
-    """Finite peaks as rationals by (kind, role, signal); infinite ones are left out."""
+def exact_peaks(document: Mapping[str, Any]) -> Peaks:
+    """The finite peaks of a certificate's document as rationals by (kind, role, signal); infinite ones are left out."""
     return {
-        (peak.kind, peak.role, peak.signal): Fraction(peak.value) for peak in peaks if math.isfinite(float(peak.value))
+        (peak["kind"], peak["role"], peak["signal"]): Fraction(peak["value"])
+        for peak in document["peaks"]
+        if peak["value"] != "inf"
     }
 
 
-def scaling(network: Network, rows: tuple[GainRow, ...], peaks: tuple[PeakLike, ...]) -> dict[str, Facts]:
+def scaling(network: Network, rows: tuple[GainRow, ...], known: Peaks) -> dict[str, Facts]:
     """Scaling facts by ``kind.actuator.signal``: gain, units, peaks of both sides, suggested symmetric ranges.
 
     ``signal_peak`` and ``actuator_peak`` are upper bounds in the declared units, None where the certificate gives none.
     A suggested range r means -r to r; r is the smallest power of two that is not below the peak.
     """
-    known = collect_peaks(peaks)
     result: dict[str, Facts] = {}
     for row in rows:
         kind = network.kind(row.kind)
@@ -114,11 +95,8 @@ def _taken_peak(network: Network, kind: Kind, take: str, known: Peaks) -> Fracti
 
 
 def rounded_up(value: Fraction | None) -> float | None:
-    """The nearest double that is not below ``value``."""
-    if value is None:
-        return None
-    near = float(value)
-    return near if Fraction(near) >= value else math.nextafter(near, math.inf)
+    """``value`` as a decimal of at most six digits that is not below it."""
+    return None if value is None else float(digits(value, 6, "up"))
 
 
 def binary_range(peak: Fraction | None) -> float | None:

@@ -1,7 +1,7 @@
 """The gain table: one row for each gain, exact, with the units and the sign convention beside the number.
 
-Laws: reading the CSV text back with ``synth.network.read_gains`` gives gains equal to the ones written, digit for digit, and
-so does the JSON form; equal inputs give equal bytes.
+Laws: reading the CSV text back with ``synth.network.read_gains`` gives gains equal to the ones written, digit for
+digit, and so does the JSON form; equal inputs give equal bytes.
 """
 
 from __future__ import annotations
@@ -31,6 +31,9 @@ COLUMNS = (
 )
 
 
+_MOST_PLACES = 390
+
+
 @dataclass(frozen=True)
 class GainRow:
     """One entry of K: ``actuator`` gets ``gain`` times ``signal``; every field is the text that stands in the table."""
@@ -52,8 +55,9 @@ class GainRow:
 
 
 def exact_text(value: Fraction) -> str:
-    """The number as text without loss: a plain decimal where one with finitely many digits exists, else ``'1/3'``.
+    """The number as text without loss: a plain decimal where one of at most 390 places exists, else ``'1/3'``.
 
+    More places than that would be refused by whoever reads the table back (a double has so many only below 1e-100).
     Law: ``Fraction(exact_text(value)) == value``.
     """
     twos, rest = _factor_out(value.denominator, 2)
@@ -61,6 +65,8 @@ def exact_text(value: Fraction) -> str:
     if rest != 1:
         return str(value)
     places = max(twos, fives)
+    if places > _MOST_PLACES:
+        return str(value)
     digits = str(abs(value.numerator) * 10**places // value.denominator).rjust(places + 1, "0")
     whole = digits if places == 0 else f"{digits[:-places]}.{digits[-places:]}"
     return f"-{whole}" if value < 0 else whole
