@@ -1,13 +1,14 @@
 """Physical units with exact factors to SI: what a problem file may write behind a number.
 
 A unit is a rational factor to SI times whole powers of seven base units. Products are written ``N m`` or ``N*m``,
-quotients ``m/s`` (``m/s/s`` is m/s^2), powers ``s^2``, ``m3`` or ``s^-1``, and ``1/s^2`` starts from one. A product by a
-space is refused after a slash, because ``N m/rad s`` is read in two ways; write ``N m/(rad s)``.
+quotients ``m/s`` (``m/s/s`` is m/s^2), powers ``s^2``, ``m3`` or ``s^-1``, and ``1/s^2`` starts from one. A product
+by a space is refused after a slash, because ``N m/rad s`` is read in two ways; write ``N m/(rad s)``.
 
-Decisions (ours): an angle is dimensionless, ``rad`` is 1, so that torque over inertia is an angular acceleration without
-ceremony; ``deg``, ``rev`` and ``rpm`` use pi rounded to 40 decimals, an error far below any model's. ``Hz`` is 1/s (cycles
-count as 1). ``%`` is 1/100 and ``pu`` (per unit) is 1. ``degC`` and ``degF`` are *differences* of temperature, as
-everything in a linear model about an operating point is. Months and years are left out: they have no fixed length.
+Decisions (ours): an angle is dimensionless, ``rad`` is 1, so that torque over inertia is an angular acceleration
+without ceremony; ``deg``, ``rev`` and ``rpm`` use pi rounded to 40 decimals, an error far below any model's. ``Hz`` is
+1/s (cycles count as 1). ``%`` is 1/100 and ``pu`` (per unit) is 1. ``degC`` and ``degF`` are *differences* of
+temperature, as everything in a linear model about an operating point is. Months and years are left out: they have no
+fixed length.
 
 Law: ``parse_unit`` turns products, quotients and powers of texts into products, quotients and powers of units, and
 ``parse_unit(unit.text)`` has the dimension of ``unit``.
@@ -114,6 +115,21 @@ _ALONE: dict[str, Unit] = {
     "gal": _unit("0.003785411784", m=3),
 }  # fmt: skip
 
+# What people spell out, and the symbol it has here.
+_SPELT_OUT: dict[str, str] = {
+    spelt + plural: symbol
+    for symbol, words in {
+        "m": "meter metre", "s": "second sec", "min": "minute", "h": "hour hr", "d": "day", "kg": "kilogram",
+        "t": "tonne ton",
+        "A": "ampere amp", "V": "volt", "W": "watt", "N": "newton", "J": "joule", "Pa": "pascal", "K": "kelvin",
+        "L": "liter litre",
+        "rad": "radian", "deg": "degree", "degC": "celsius", "%": "percent", "ohm": "ohms", "Hz": "hertz",
+        "km/h": "kph kmh",
+    }.items()
+    for spelt in words.split()
+    for plural in ("", "s")
+}  # fmt: skip
+
 
 def _table() -> dict[str, Unit]:
     names = {p + n: Unit(f * u.factor, u.dimension) for n, u in _PREFIXED.items() for p, f in _PREFIXES.items()}
@@ -137,7 +153,9 @@ def _tokens(text: str) -> Iterator[tuple[str, str, bool]]:
     while at < len(plain.rstrip()):
         found = _TOKEN.match(plain, at)
         if found is None:
-            raise UnitError(f"{text!r} is not a unit; accepted are names, '1', products, '/', powers: 'm/s^2', '1/s', 'kW'")
+            raise UnitError(
+                f"{text!r} is not a unit; accepted are names, '1', products, '/', powers: 'm/s^2', '1/s', 'kW'"
+            )
         sort = found.lastgroup or ""
         yield sort, found[sort], plain[at : found.start(sort)] != ""
         at = found.end()
@@ -204,8 +222,14 @@ class _Reader:
 def lookup(name: str) -> Unit:
     """The unit of that name; UnitError with the nearest known name if there is none."""
     unit = UNITS.get(name.replace("μ", "µ"))
+    if unit is None and name.lower() in _SPELT_OUT:
+        raise UnitError(
+            f"unknown unit {name!r} (did you mean {_SPELT_OUT[name.lower()]!r}?); units are written by symbol",
+        )
     if unit is None:
-        raise UnitError(f"unknown unit {name!r}{nearest(name, UNITS)}; compose it from SI names such as m, kg, s, A, K, W, bar")
+        raise UnitError(
+            f"unknown unit {name!r}{nearest(name, UNITS)}; compose it from SI names such as m, kg, s, A, K, W, bar"
+        )
     return unit
 
 

@@ -200,9 +200,7 @@ class Network:
             for link in self.links:
                 j = i + link.at[0]
                 if 0 <= j < cells:
-                    graph.add_edge(
-                        (link.source_kind, j), (link.kind, i), name=link.name, strength=float(link.strength)
-                    )
+                    graph.add_edge((link.source_kind, j), (link.kind, i), name=link.name, strength=float(link.strength))
         return graph
 
 

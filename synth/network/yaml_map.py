@@ -19,10 +19,11 @@ from typing import Any
 import yaml
 
 from synth.base.errors import Place, Problem
-from synth.base.units import UnitError, parse_number
+from synth.base.units import LONGEST_NUMBER, UnitError, parse_number
 
 DEEPEST = 40
 MOST_PROBLEMS = 100
+MOST_VALUES = 100_000
 
 
 @dataclass(frozen=True)
@@ -102,11 +103,13 @@ class Problems:
     """Collects what is wrong, so that a person sees all of it at once."""
 
     found: list[Problem] = field(default_factory=list)
+    count: int = 0  # of everything reported, also what is not kept
 
     def add(self, sentence: str, where: Node | Entry | Place | None = None) -> None:
         """Record one sentence at the place of a node, an entry's key, or a place."""
         place = where if isinstance(where, Place) or where is None else where.place
         problem = Problem(sentence, place)
+        self.count += 1
         if problem not in self.found and len(self.found) < MOST_PROBLEMS:
             self.found.append(problem)
 
@@ -115,7 +118,7 @@ class Problems:
         return sorted(self.found, key=lambda p: (0, 0) if p.place is None else (p.place.line, p.place.column))
 
 
-class _Stop(Exception):
+class _Stop(Exception):  # noqa: N818 - not an error of its own
     """Reading cannot go on; the reason is already recorded."""
 
 
@@ -155,6 +158,7 @@ class _Builder:
     def __init__(self, source: Source, problems: Problems) -> None:
         self.source = source
         self.problems = problems
+        self.values = 0
         loader: Any = getattr(yaml, "CSafeLoader", yaml.SafeLoader)
         self.events: Iterator[Any] = yaml.parse(source.text, Loader=loader)
 
@@ -162,7 +166,7 @@ class _Builder:
         return Place(self.source.file, mark.line + 1, mark.column + 1)
 
     def stop(self, sentence: str, mark: Any) -> _Stop:
-        self.problems.add(sentence, self.place(mark))
+        self.problems.add(f"{sentence}.", self.place(mark))
         return _Stop()
 
     def document(self) -> Node | None:
@@ -185,6 +189,9 @@ class _Builder:
             raise self.stop(f"the tag {event.tag!r} is not accepted; write the plain value", mark)
         if depth > DEEPEST:
             raise self.stop(f"the nesting is deeper than {DEEPEST} levels; no problem file needs that", mark)
+        self.values += 1
+        if self.values > MOST_VALUES:
+            raise self.stop(f"the file has more than {MOST_VALUES} values; no problem file needs that", mark)
         if isinstance(event, yaml.ScalarEvent):
             return self.scalar(event, path)
         if isinstance(event, yaml.SequenceStartEvent):
@@ -212,20 +219,25 @@ class _Builder:
             if not isinstance(event, yaml.ScalarEvent):
                 raise self.stop("a key must be a name, not an anchor, a list or a mapping", event.start_mark)
             if event.anchor is not None or event.tag is not None:
-                raise self.stop("anchors, aliases and tags are not accepted at a key; write the plain name", event.start_mark)
+                raise self.stop(
+                    "anchors, aliases and tags are not accepted at a key; write the plain name", event.start_mark
+                )
             key, place = event.value, self.place(event.start_mark)
             value = self.node(next(self.events), child(path, key), depth + 1)
             if key in entries:
                 first = entries[key].place
                 line = f" (first in line {first.line})" if first else ""
-                self.problems.add(f"the key {key!r} stands twice in {path or 'the file'}{line}; keep one of them.", place)
+                self.problems.add(
+                    f"the key {key!r} stands twice in {path or 'the file'}{line}; keep one of them.", place
+                )
                 continue
             entries[key] = Entry(key, place, value)
         return Table(path, self.place(mark), entries)
 
 
 def parse(text: str, file: str, problems: Problems) -> Node | None:
-    """Read a YAML text into a tree; what is wrong is added to ``problems``, and None returned if nothing can be used."""
+    """Read a YAML text into a tree; what is wrong is added to ``problems``, and None returned if nothing can be
+    used."""
     try:
         root = _Builder(Source(file, text), problems).document()
     except _Stop:
@@ -284,9 +296,10 @@ def from_python(value: object, problems: Problems, path: str = "", depth: int = 
         return Scalar(path, None, value, "" if value is None else str(value), style='"')
     try:
         if isinstance(value, (int, Fraction)):
-            if abs(value) > 10**309:
+            number = Fraction(value)
+            if max(abs(number.numerator), number.denominator) > 10**LONGEST_NUMBER:
                 raise UnitError("the number is too large")
-            return Scalar(path, None, Fraction(value), str(value))
+            return Scalar(path, None, number, str(number))
         if isinstance(value, (float, Decimal)):
             return Scalar(path, None, parse_number(repr(value) if isinstance(value, float) else str(value)), str(value))
     except UnitError:
