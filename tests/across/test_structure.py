@@ -73,9 +73,14 @@ def test_help_is_cheap() -> None:
     assert done.stdout.strip().splitlines()[-1] == "[]"
 
 
+# The stand-alone checker is shipped as one file, so it may be as long as its two routes need (docs/decisions/0001).
+LONGER = {"proof/check.py": 1000}
+
+
 @pytest.mark.parametrize("path", FILES, ids=str)
 def test_files_can_be_read_in_one_sitting(path: Path) -> None:
-    assert path.read_text(encoding="utf-8").count("\n") <= 450
+    most = LONGER.get(path.relative_to(ROOT).as_posix(), 450)
+    assert path.read_text(encoding="utf-8").count("\n") <= most
     assert "util" not in path.stem
 
 
