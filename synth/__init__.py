@@ -20,10 +20,10 @@ if TYPE_CHECKING:
     from synth import margin as margin
     from synth import simulate as simulate
     from synth.handoff.bundle import hand_off as hand_off
-    from synth.local.design import design as design
+    from synth.local import design as design
     from synth.network.reader import read as read
     from synth.proof.build import prove as prove
-    from synth.proof.verify import verify as verify
+    from synth.proof.certificate import verify as verify
 
 # `synth.margin` and `synth.simulate` are stages *and* the call that runs them: those two packages are callable.
 _WHERE = {

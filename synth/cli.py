@@ -1,7 +1,7 @@
 """The command line: `synth VERB FILE [options]`; results on standard output, progress on standard error.
 
-Exit codes: 0 done and proven (or verified); 1 done, but not proven, not verified, target not reached, obstruction found or
-violations seen; 2 the input is wrong; 3 something failed inside; 130 interrupted. No traceback reaches a user.
+Exit codes: 0 done and proven (or verified); 1 done, but not proven, not verified, target not reached, obstruction found
+or violations seen; 2 the input is wrong; 3 something failed inside; 130 interrupted. No traceback reaches a user.
 """
 
 from __future__ import annotations
@@ -31,7 +31,8 @@ class _Verbs(click.Group):
     def resolve_command(self, ctx: click.Context, args: list[str]) -> Any:
         if args and not args[0].startswith("-") and args[0] not in self.commands:
             known = ", ".join(self.commands)
-            raise click.UsageError(f"there is no verb {args[0]!r}{nearest(args[0], self.commands)}; the verbs are {known}.")
+            close = nearest(args[0], self.commands)
+            raise click.UsageError(f"there is no verb {args[0]!r}{close}; the verbs are {known}.")
         return super().resolve_command(ctx, args)
 
 
@@ -57,9 +58,13 @@ def _with(*options: Callable[[Any], Any]) -> Callable[[Any], Any]:
 
 FILE = click.argument("file", type=click.Path(path_type=Path))
 JSON = click.option("--json", "as_json", is_flag=True, help="Print exactly one JSON document instead of text.")
-OUT = click.option("--out", type=click.Path(path_type=Path), help="Folder for the results; it appears whole or not at all.")
+OUT = click.option(
+    "--out", type=click.Path(path_type=Path), help="Folder for the results; it appears whole or not at all."
+)
 TARGET = click.option("--target", type=float, help="Spectral radius to reach, between 0 and 1 (default: the file's).")
-SEED = click.option("--seed", type=click.IntRange(0), default=0, show_default=True, help="Fixes searches and random runs.")
+SEED = click.option(
+    "--seed", type=click.IntRange(0), default=0, show_default=True, help="Fixes searches and random runs."
+)
 GAINS = click.option(
     "--gains", type=click.Path(path_type=Path), help="Gain table (CSV or JSON) in service, instead of fresh gains."
 )
@@ -98,7 +103,14 @@ def design(file: Path, target: float | None, seed: int, as_json: bool, out: Path
 @click.option("--route", type=click.Choice(["auto", "peak", "storage"]), default="auto", show_default=True)
 @_with(TARGET, SEED, JSON, OUT, QUIET)
 def prove(
-    file: Path, gains: Path | None, route: str, target: float | None, seed: int, as_json: bool, out: Path | None, quiet: bool
+    file: Path,
+    gains: Path | None,
+    route: str,
+    target: float | None,
+    seed: int,
+    as_json: bool,
+    out: Path | None,
+    quiet: bool,
 ) -> None:
     """Build a certificate for fresh gains, or for gains already in service (--gains)."""
     from synth.proof import prove as make_proof
@@ -110,7 +122,8 @@ def prove(
     text = certificate.as_text()
     if path is None:
         text = text.rstrip() + "\nThe certificate was not kept; name a folder with --out to keep it.\n"
-    _deliver(document, text, as_json, out, {"proof.json": document}, lambda work: certificate.save(work / "certificate.json"))
+    files = {"proof.json": document}
+    _deliver(document, text, as_json, out, files, lambda work: certificate.save(work / "certificate.json"))
     _leave(certificate.proven)
 
 
@@ -138,7 +151,8 @@ def margin(
     for name in classes:
         if name not in network.classes():
             known = ", ".join(network.classes()) or "none"
-            raise InputError(f"--class {name}: no link class has this name{nearest(name, network.classes())}; known: {known}.")
+            close = nearest(name, network.classes())
+            raise InputError(f"--class {name}: no link class has this name{close}; known: {known}.")
     found = find_margin(
         network,
         used,
@@ -149,13 +163,15 @@ def margin(
     )
     document = found.as_json()
     _deliver(document, found.as_text(), as_json, out, {"margin.json": document})
-    _leave(document["proven_factor"] == "inf" or document["proven_factor"] >= 1)
+    _leave(found.proven_factor >= 1)
 
 
 @verbs.command()
 @_with(FILE, GAINS)
 @click.option("--units", type=click.IntRange(2), help="Number of cells simulated (default: the file's).")
-@click.option("--seconds", type=click.FloatRange(min=0, min_open=True), help="Length of each run (default: the file's).")
+@click.option(
+    "--seconds", type=click.FloatRange(min=0, min_open=True), help="Length of each run (default: the file's)."
+)
 @_with(SEED, JSON, OUT, QUIET)
 def simulate(
     file: Path,
@@ -205,9 +221,7 @@ def handoff(
 @_with(FILE, GAINS, TARGET, SEED, JSON)
 @click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder for everything; it appears whole.")
 @_with(QUIET)
-def run(
-    file: Path, gains: Path | None, target: float | None, seed: int, as_json: bool, out: Path, quiet: bool
-) -> None:
+def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json: bool, out: Path, quiet: bool) -> None:
     """Do the whole job: check, design, prove, margin, simulate, hand off, report."""
     from synth.base.files import refuse_foreign
     from synth.network import read_gains
@@ -216,16 +230,16 @@ def run(
     refuse_foreign(out)
     network = _read(file)
     in_service = None if gains is None else read_gains(gains, network)
-    job = run_whole_job(
-        network, out, gains=in_service, target=_target(target), seed=seed, progress=_progress(quiet)
-    )
+    job = run_whole_job(network, out, gains=in_service, target=_target(target), seed=seed, progress=_progress(quiet))
     _deliver(job.document, job.text, as_json, None, {})
     _leave(job.proven)
 
 
 @verbs.command()
 @click.argument("certificate", type=click.Path(path_type=Path))
-@click.option("--for", "problem", type=click.Path(path_type=Path), help="Also demand that it is about this problem file.")
+@click.option(
+    "--for", "problem", type=click.Path(path_type=Path), help="Also demand that it is about this problem file."
+)
 @_with(JSON)
 def verify(certificate: Path, problem: Path | None, as_json: bool) -> None:
     """Re-check a certificate in exact arithmetic, believing nothing in it."""

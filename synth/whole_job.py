@@ -1,4 +1,4 @@
-"""The whole job in one call: check, design, prove, margin, simulate, hand off, report, into one folder written whole."""
+"""The whole job in one call: check, design, prove, margin, simulate, hand off, report, into one whole folder."""
 
 from __future__ import annotations
 
@@ -19,7 +19,7 @@ from synth.network.model import Network
 
 @dataclass(frozen=True)
 class WholeJob:
-    """Everything `synth run` found: the JSON document of the contract, the text for a person, and whether it is proven."""
+    """What `synth run` found: the JSON document of the contract, the text for a person, and whether it is proven."""
 
     document: Mapping[str, Any]
     text: str
@@ -89,9 +89,7 @@ def run_whole_job(
         document = _document(described, chosen, gains, certificate, limits, trajectory, bundle, refusals, final)
         (work / "result.json").write_text(plain_json(document), encoding="utf-8")
         text = _text(described, chosen, certificate, limits, trajectory, bundle, refusals, final, work)
-        (work / "summary.txt").write_text(
-            wrapped(f"{text}\nCautions\n--------\n{cautions_text()}\n"), encoding="utf-8"
-        )
+        (work / "summary.txt").write_text(wrapped(f"{text}\nCautions\n--------\n{cautions_text()}\n"), encoding="utf-8")
     return WholeJob(document, text, certificate.proven, final)
 
 

@@ -35,12 +35,12 @@ def hauler(lag: Number = "0.5", limit: Number | None = "2.5", peak: Number = "0.
     )
 
 
-def convoy(strength: Number = "0.5", delay: Number = "0.1", offsets: tuple[int, ...] = (-1,), **changes: object) -> Network:
+def convoy(
+    strength: Number = "0.5", delay: Number = "0.1", offsets: tuple[int, ...] = (-1,), **changes: object
+) -> Network:
     """Haulers that follow the vehicles at ``offsets`` by relative links of the given strength (1/s^2)."""
     g = Fraction(strength)
-    links = tuple(
-        Link("follow", "hauler", "place", (at,), "hauler", "ahead", g, g, Fraction(delay)) for at in offsets
-    )
+    links = tuple(Link("follow", "hauler", "place", (at,), "hauler", "ahead", g, g, Fraction(delay)) for at in offsets)
     network = Network(
         title="Invented ore convoy",
         kinds=(hauler(),),
@@ -67,5 +67,13 @@ def scalar_kind(a: Number = 1, name: str = "tank", peak: Number = 1) -> Kind:
         (Signal("inflow", "m/s"),),
         (Signal("level", "m"),),
         (Signal("x", "m"),),
-        M([[-Fraction(a)]]), one, one, one, one, zero, one, zero, zero,
+        M([[-Fraction(a)]]),
+        one,
+        one,
+        one,
+        one,
+        zero,
+        one,
+        zero,
+        zero,
     )

@@ -1,10 +1,13 @@
 """The cautions that travel with every output that leaves the tool."""
 
 CAUTIONS: tuple[str, ...] = (
-    "Engineering aid, not an approval: the numbers hold for the model in the problem file and only as far as it describes the plant.",
-    "Local codes, the functional-safety procedure of the site and the judgement of the licensed engineer in charge take precedence.",
+    "Engineering aid, not an approval: the numbers hold for the model in the problem file and only as far as it "
+    "describes the plant.",
+    "Local codes, the functional-safety procedure of the site and the judgement of the licensed engineer in charge "
+    "take precedence.",
     "Commission in steps, with independent protection (brakes, trips, relief) that does not depend on these gains.",
-    "Gains are for the sign convention u = K y written beside them; a turned sign or a wrong unit can destabilise the plant.",
+    "Gains are for the sign convention u = K y written beside them; a turned sign or a wrong unit can destabilise the "
+    "plant.",
 )
 
 

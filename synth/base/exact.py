@@ -8,13 +8,13 @@ from __future__ import annotations
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
-from typing import TYPE_CHECKING, Union
+from typing import TYPE_CHECKING, TypeAlias
 
 if TYPE_CHECKING:
     import numpy as np
     from numpy.typing import NDArray
 
-Number = Union[int, float, str, Fraction]
+Number: TypeAlias = int | float | str | Fraction
 
 
 def exact(value: Number) -> Fraction:
@@ -57,9 +57,7 @@ class ExactMatrix:
     @staticmethod
     def identity(size: int) -> ExactMatrix:
         """The identity of the given size."""
-        return ExactMatrix(
-            tuple(tuple(Fraction(int(i == j)) for j in range(size)) for i in range(size)), (size, size)
-        )
+        return ExactMatrix(tuple(tuple(Fraction(int(i == j)) for j in range(size)) for i in range(size)), (size, size))
 
     def floats(self) -> NDArray[np.float64]:
         """The nearest doubles, as a writable array of the same shape."""

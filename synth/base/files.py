@@ -96,6 +96,7 @@ def _swap(work: Path, target: Path) -> None:
                 os.replace(aside, target)
             raise
     except OSError as error:
-        raise StorageFailure(f"cannot write {target}: {error.strerror or error}; the earlier content stands.") from error
+        reason = error.strerror or error
+        raise StorageFailure(f"cannot write {target}: {reason}; the earlier content stands.") from error
     if aside is not None:
         shutil.rmtree(aside, ignore_errors=True)

@@ -20,7 +20,8 @@ from synth.network.model import Kind, Link, Network
 class ClosedUnit:
     """A kind with its loop closed; all matrices exact, in the kind's declared units.
 
-    ``A`` n x n, ``D`` n x takes (neighbour's part only), ``E`` n x disturbances, ``H`` offers x n, ``F`` offers x takes,
+    ``A`` n x n, ``D`` n x takes (neighbour's part only), ``E`` n x disturbances, ``H`` offers x n,
+    ``F`` offers x takes,
     ``Fw`` offers x disturbances, ``U`` inputs x n and ``UV`` inputs x takes (the actuator's command u = U x + UV v).
     """
 

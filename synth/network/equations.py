@@ -25,7 +25,7 @@ DEEPEST = 60
 _ACCEPTED = "accepted are names, numbers, + - * / **, parentheses and sqrt, abs, min, max, sin, cos, exp of constants"
 
 
-class Refused(Exception):  # noqa: N818 - it says what happens to the expression
+class Refused(Exception):
     """An expression is not accepted: one sentence (without full stop) and the character at which the reason stands.
 
     An empty sentence means that the reason has been told already (a name whose declaration has a problem).

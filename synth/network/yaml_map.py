@@ -118,7 +118,7 @@ class Problems:
         return sorted(self.found, key=lambda p: (0, 0) if p.place is None else (p.place.line, p.place.column))
 
 
-class _Stop(Exception):  # noqa: N818 - not an error of its own
+class _Stop(Exception):
     """Reading cannot go on; the reason is already recorded."""
 
 

@@ -1,4 +1,4 @@
-"""The rules of the house: imports run one way, importing is cheap, files stay readable, public things are documented."""
+"""The rules of the house: imports run one way, importing is cheap, files stay readable."""
 
 from __future__ import annotations
 
@@ -56,7 +56,7 @@ def test_the_rule_would_notice_a_backward_import(tmp_path: Path) -> None:
     assert stages == ["report", None]
 
 
-@pytest.mark.parametrize("command", ["import synth", "import synth.cli", "import synth.network, synth.gain, synth.proof"])
+@pytest.mark.parametrize("command", ["import synth", "import synth.cli", "import synth.network, synth.proof"])
 def test_importing_is_cheap(command: str) -> None:
     heavy = ["numpy", "scipy", "matplotlib", "pandas", "networkx", "xarray", "cvxpy", "control", "flint"]
     code = f"import sys\n{command}\nprint([m for m in {heavy} if m in sys.modules])"

@@ -1,4 +1,4 @@
-"""The main job on the convoy: the contract's keys, a proven certificate, no violations, and refusals that are honest."""
+"""The main job on the convoy: the contract's keys, a proven certificate, no violations, honest refusals."""
 
 from __future__ import annotations
 
