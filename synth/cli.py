@@ -72,11 +72,12 @@ QUIET = click.option("--quiet", is_flag=True, help="No progress on standard erro
 
 
 @verbs.command()
-@_with(FILE, JSON, OUT)
-def check(file: Path, as_json: bool, out: Path | None) -> None:
+@_with(FILE, JSON, OUT, QUIET)
+def check(file: Path, as_json: bool, out: Path | None, quiet: bool) -> None:
     """Read FILE, explain the network, find what no local feedback can do."""
     from synth.network import describe
 
+    _progress(quiet)("reading and looking for obstructions")
     described = describe(_read(file))
     document = described.as_json()
     _deliver(document, described.as_text(), as_json, out, {"check.json": document})
@@ -117,13 +118,15 @@ def prove(
 
     network, used = _network_and_gains(file, gains, target, seed, quiet)
     certificate = make_proof(network, used, route=route, target=_target(target), progress=_progress(quiet))
-    path = None if out is None else str(out / "certificate.json")
-    document = {**certificate.as_json(), "certificate": path}
+    kept = out is not None and certificate.proven  # an unproven certificate is never written: it could be mistaken
+    document = {**certificate.as_json(), "certificate": str(out / "certificate.json") if out and kept else None}
     text = certificate.as_text()
-    if path is None:
+    if certificate.proven and not kept:
         text = text.rstrip() + "\nThe certificate was not kept; name a folder with --out to keep it.\n"
     files = {"proof.json": document}
-    _deliver(document, text, as_json, out, files, lambda work: certificate.save(work / "certificate.json"))
+    _deliver(
+        document, text, as_json, out, files, (lambda work: certificate.save(work / "certificate.json")) if kept else None
+    )
     _leave(certificate.proven)
 
 

@@ -66,7 +66,8 @@ def run_whole_job(
         used: Any = chosen if chosen is not None else gains
         progress("proving")
         certificate = prove(network, used, target=target, progress=progress)
-        certificate.save(work / "certificate.json")
+        if certificate.proven:
+            certificate.save(work / "certificate.json")
         limits = trajectory = bundle = None
         refusals: dict[str, str] = {}
         progress("finding the largest tolerable coupling")
@@ -112,7 +113,8 @@ def _document(
     designed = chosen.as_json() if chosen is not None else None
     if designed is None and gains is not None:
         designed = {"gains": {kind: gains[kind].as_dict() for kind in gains}, "in_service": True}
-    proof = {**certificate.as_json(), "certificate": str(final / "certificate.json")}
+    kept = str(final / "certificate.json") if certificate.proven else None
+    proof = {**certificate.as_json(), "certificate": kept}
     handed = stage(bundle, "handoff")
     if bundle is not None:
         handed["bundle"] = str(final / "bundle")

@@ -112,6 +112,15 @@ def test_a_table_with_a_turned_sign_is_not_proven(convoy_run: Run, tmp_path: Pat
     done = synth("prove", CONVOY, "--gains", table, "--json", "--quiet", "--out", tmp_path / "out")
     assert done.code == 1
     assert done.document["proven"] is False
+    assert done.document["certificate"] is None
+    assert not (tmp_path / "out" / "certificate.json").exists()
+    whole = synth("run", CONVOY, "--gains", table, "--json", "--quiet", "--out", tmp_path / "whole")
+    assert whole.code == 1
+    document = whole.document
+    assert document["proof"]["proven"] is False
+    assert document["handoff"]["proven"] is False
+    assert document["handoff"]["bundle"] is None
+    assert (tmp_path / "whole" / "report.html").is_file()
 
 
 @pytest.mark.parametrize("verb", ["check", "design"])
