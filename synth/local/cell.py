@@ -1,0 +1,210 @@
+"""The cell problem: state feedback for one unit whose neighbours promise sizes, as one linear matrix inequality.
+
+theory section 5, for a fixed decay a, linear in Q, Y, tau (K = Y Q^{-1}):
+
+    minimise max_k sqrt(H_k Q H_k')/c_k   subject to
+    [ AQ + QA' + BY + Y'B' + 2aQ , (D + B L) diag(z)/lambda , E ; . , -diag(tau) , . ; . , . , -diag(tau_w) ] <= 0
+    sum tau + sum tau_w <= 2a        one tau_w per disturbance component
+    [ omega Q , AQ + BY ; . , omega Q ] >= 0       AQ + BY + [.]' + 2 alpha Q <= 0
+    [ c^2 , Y_q ; . , Q ] >= 0 per actuator with budget c > 0
+
+The problem of one shape is built once and its numbers are parameters. No answer of the solver is used before the
+inequalities have been recomputed from it here.
+"""
+
+from __future__ import annotations
+
+import warnings
+from dataclasses import dataclass, field
+from functools import lru_cache
+from typing import Any
+
+import cvxpy as cp
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.base.errors import InputError
+
+Array = NDArray[np.float64]
+
+GRID = tuple(float(a) for a in np.geomspace(0.01, 0.9, 9))  # decay rates tried, in units of the disc radius
+_LOOSE = 1e-6  # an inequality may be broken by this much, relative to the size of its block
+
+
+@dataclass(frozen=True)
+class CellData:
+    """Numbers of one cell problem in scaled signals (time in 1/omega, so ``fastest`` is 1 unless narrowed).
+
+    ``intake`` (takes,) is sum |g| z over the links of each inlet, divided by the target; ``limit`` the actuator limits
+    (inf: none); ``L`` (inputs, takes) the gains on what the links deliver; ``size`` (offers,) the scale c_k of each
+    offered signal. ``E`` carries the disturbance peaks. Budgets are limit - sum |L| intake * target.
+    """
+
+    A: Array
+    B: Array
+    D: Array
+    E: Array
+    H: Array
+    intake: Array
+    limit: Array
+    size: Array
+    slowest: float
+    fastest: float
+    L: Array = field(default_factory=lambda: np.zeros((0, 0)))
+    target: float = 1.0
+
+    @property
+    def budget(self) -> Array:
+        """What each actuator has left for state feedback; InputError if neighbours use up an actuator's limit.
+
+        Refused here, before the entry c^2 is formed: a square would hide the sign (a negative budget would pass).
+        """
+        used = np.abs(self.L) @ self.intake * self.target if self.L.size else np.zeros(len(self.limit))
+        left = self.limit - used
+        for q, value in enumerate(left):
+            if not value > 0:
+                raise InputError(
+                    f"actuator {q + 1}: passing on what the neighbours send may already take {used[q]:.6g} of the "
+                    f"limit {self.limit[q]:.6g} (scaled); lower that gain or raise the limit."
+                )
+        return np.asarray(left)
+
+
+@dataclass(frozen=True)
+class CellAnswer:
+    """A solution whose inequalities were recomputed and hold; ``sizes`` (offers,) are sqrt(H_k Q H_k')."""
+
+    K: Array
+    Q: Array
+    Y: Array
+    tau: Array
+    tau_w: Array
+    decay: float
+    size: float
+    sizes: Array
+
+
+class CellProblem:
+    """The inequality of one shape, compiled once; ``solve`` sets its parameters.
+
+    Law: ``problem.is_dcp(dpp=True)``, so that a new solve never repeats the compilation.
+    """
+
+    def __init__(self, n: int, inputs: int, takes: int, disturbances: int, offers: int, limited: tuple[bool, ...]):
+        """Build for n states and the given numbers of signals; ``limited`` tells which actuators have a limit."""
+        self.limited = limited
+        self.Q = cp.Variable((n, n), symmetric=True)
+        self.Y = cp.Variable((inputs, n))
+        self.tau = cp.Variable(takes + disturbances, nonneg=True)
+        self.size2 = cp.Variable()
+        self.p_A = cp.Parameter((n, n))
+        self.p_a = cp.Parameter(nonneg=True)
+        self.p_slow = cp.Parameter(nonneg=True)
+        self.p_fast = cp.Parameter(nonneg=True)
+        self.p_B = cp.Parameter((n, inputs))
+        self.p_W = cp.Parameter((n, takes + disturbances))
+        self.p_rows = [cp.Parameter((n, n), symmetric=True) for _ in range(offers)]
+        self.p_budget2 = cp.Parameter(inputs, nonneg=True)
+        loop = self.p_A @ self.Q + self.p_B @ self.Y
+        both = loop + loop.T
+        width = takes + disturbances
+        constraints = [cp.sum(self.tau) <= 2 * self.p_a, self.Q >> 1e-9 * np.eye(n)]
+        if width:
+            constraints.append(
+                cp.bmat([[both + 2 * self.p_a * self.Q, self.p_W], [self.p_W.T, -cp.diag(self.tau)]]) << 0
+            )
+        else:
+            constraints.append(both + 2 * self.p_a * self.Q << 0)
+        constraints.append(cp.bmat([[self.p_fast * self.Q, loop], [loop.T, self.p_fast * self.Q]]) >> 0)
+        constraints.append(both + 2 * self.p_slow * self.Q << 0)
+        for q in range(inputs):
+            if limited[q]:
+                row = cp.reshape(self.Y[q], (1, n), order="C")
+                corner = cp.reshape(self.p_budget2[q], (1, 1), order="C")
+                constraints.append(cp.bmat([[corner, row], [row.T, self.Q]]) >> 0)
+        constraints.extend(cp.sum(cp.multiply(row, self.Q)) <= self.size2 for row in self.p_rows)
+        self.problem = cp.Problem(cp.Minimize(self.size2), constraints)
+
+    def solve(self, data: CellData, decay: float) -> CellAnswer | None:
+        """The rechecked optimum for one decay rate; None if the solver fails, stops short or its answer is wrong."""
+        budget = data.budget
+        into = data.D + data.B @ data.L if data.L.size else data.D
+        self.p_A.value, self.p_B.value = data.A, data.B
+        self.p_a.value, self.p_slow.value, self.p_fast.value = decay, data.slowest, data.fastest
+        self.p_W.value = np.concatenate((into * data.intake, data.E), axis=1)
+        for row, h, c in zip(self.p_rows, data.H, data.size, strict=True):
+            row.value = np.outer(h, h) / c**2
+        self.p_budget2.value = np.where(np.isfinite(budget), budget, 1.0) ** 2
+        try:
+            with warnings.catch_warnings():
+                warnings.simplefilter("ignore")  # an inaccurate answer is refused below, whatever cvxpy says about it
+                self.problem.solve(solver=cp.CLARABEL)
+        except (cp.SolverError, ValueError, ArithmeticError):
+            return None
+        if self.problem.status != cp.OPTIMAL or self.Q.value is None:
+            return None
+        takes = data.D.shape[1]
+        Q = 0.5 * (self.Q.value + self.Q.value.T)
+        return answer_of(data, decay, Q, self.Y.value, self.tau.value[:takes], self.tau.value[takes:])
+
+
+def answer_of(data: CellData, decay: float, Q: Array, Y: Array, tau: Array, tau_w: Array) -> CellAnswer | None:
+    """The answer with K = Y Q^{-1}; None if any inequality fails when recomputed from these numbers."""
+    if broken(data, decay, Q, Y, tau, tau_w):
+        return None
+    sizes = np.sqrt(np.maximum(np.einsum("ki,ij,kj->k", data.H, Q, data.H), 0.0))
+    K = np.asarray(np.linalg.solve(Q, Y.T).T, dtype=np.float64)
+    size = float((sizes / data.size).max()) if len(sizes) else 0.0
+    return CellAnswer(K, Q, Y, tau, tau_w, decay, size, sizes)
+
+
+def broken(data: CellData, decay: float, Q: Array, Y: Array, tau: Array, tau_w: Array) -> tuple[str, ...]:
+    """Names of the inequalities that do not hold for these numbers, recomputed by eigenvalues; empty if all hold."""
+    parts = (Q, Y, tau, tau_w)
+    if not all(np.all(np.isfinite(part)) for part in parts):
+        return ("finite numbers",)
+    found = []
+    if float(np.linalg.eigvalsh(Q).min(initial=np.inf)) <= 0:
+        return ("Q positive definite",)
+    if np.concatenate((tau, tau_w)).min(initial=0.0) < -_LOOSE * decay:
+        found.append("tau non-negative")
+    if tau.sum() + tau_w.sum() > 2 * decay * (1 + _LOOSE):
+        found.append("sum of tau within 2a")
+    loop = data.A @ Q + data.B @ Y
+    both = loop + loop.T
+    into = data.D + data.B @ data.L if data.L.size else data.D
+    W = np.concatenate((into * data.intake, data.E), axis=1)
+    corner = -np.diag(np.concatenate((tau, tau_w)))
+    if not _negative(np.block([[both + 2 * decay * Q, W], [W.T, corner]])):
+        found.append("dissipation")
+    if not _negative(-np.block([[data.fastest * Q, loop], [loop.T, data.fastest * Q]])):
+        found.append("disc of modes")
+    if not _negative(both + 2 * data.slowest * Q):
+        found.append("decay of modes")
+    for q, budget in enumerate(data.budget):
+        if np.isfinite(budget):
+            row = Y[q : q + 1]
+            if not _negative(-np.block([[np.array([[budget**2]]), row], [row.T, Q]])):
+                found.append(f"budget of actuator {q + 1}")
+    return tuple(found)
+
+
+def _negative(block: Array) -> bool:
+    """Whether the symmetric block has no eigenvalue above a sliver of its own size."""
+    values = np.linalg.eigvalsh(0.5 * (block + block.T))
+    return bool(values[-1] <= _LOOSE * max(1e-12, float(np.abs(values).max())))
+
+
+@lru_cache(maxsize=32)
+def cell_problem(*shape: Any) -> CellProblem:
+    """The compiled problem of a shape (n, inputs, takes, disturbances, offers, limited): one per shape and process."""
+    return CellProblem(*shape)
+
+
+def best_cell(data: CellData, grid: tuple[float, ...] = GRID) -> CellAnswer | None:
+    """The smallest size over the fixed grid of decay rates; None if no rate gives a usable answer."""
+    shape = (len(data.A), data.B.shape[1], data.D.shape[1], data.E.shape[1], len(data.H))
+    problem = cell_problem(*shape, tuple(bool(v) for v in np.isfinite(data.limit)))
+    answers = [problem.solve(data, decay) for decay in grid if decay >= data.slowest]
+    usable = [answer for answer in answers if answer is not None]
+    return min(usable, key=lambda answer: answer.size, default=None)

@@ -1,0 +1,259 @@
+"""The open units as scaled floating-point matrices: what every search of this stage works on.
+
+Time is counted in 1/omega, omega the radius of the mode disc, and every signal in a unit of its own chosen so that
+the non-zero entries of all matrices lie as close to one as scaling can bring them (least squares of their
+logarithms). The scaled problem is therefore the same whatever units the user declared.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+from fractions import Fraction
+
+import numpy as np
+from numpy.typing import NDArray
+
+from synth.base.exact import ExactMatrix
+from synth.gain.guide import connected_blocks
+from synth.network.model import Goal, Kind, Network
+
+Array = NDArray[np.float64]
+Mask = NDArray[np.bool_]
+
+
+@dataclass(frozen=True)
+class Plant:
+    """One open unit, scaled; own parts of relative links are folded in, so closing the loop is affine in K.
+
+    A_c = A + B K C, D_c = D + B K N, command u = K C x + K N v. ``E`` and ``Fw`` carry the declared disturbance peaks:
+    each scaled disturbance is bounded by one. ``H`` and ``F`` list the offers first, then the states with a band.
+    ``allowed`` (inputs, sensors) is the structure, ``bound`` the scaled bound of each gain (inf: none), ``limit``
+    the scaled actuator limits and ``band`` the scaled bands of the rows of ``H`` (inf: none).
+    """
+
+    kind: Kind
+    A: Array
+    B: Array
+    C: Array
+    D: Array
+    N: Array
+    E: Array
+    H: Array
+    F: Array
+    Fw: Array
+    allowed: Mask
+    bound: Array
+    limit: Array
+    band: Array
+    gain_unit: Array  # (inputs, sensors): user's gain = scaled gain * gain_unit
+    directions: tuple[Array, Array, Array, Array]  # derivatives of A, [D E], [H; U], [F Fw; UV 0] by each allowed gain
+
+    @property
+    def offers(self) -> int:
+        """Number of offered signals, the first rows of ``H``."""
+        return len(self.kind.offers)
+
+    def to_user(self, K: Array) -> Array:
+        """A scaled gain matrix in the user's units; entries outside the structure are exact zeros."""
+        return np.where(self.allowed, K * self.gain_unit, 0.0)
+
+    def to_scaled(self, K: Array) -> Array:
+        """A gain matrix in the user's units, scaled; entries outside the structure are dropped."""
+        return np.where(self.allowed, K / self.gain_unit, 0.0)
+
+
+@dataclass(frozen=True)
+class Field:
+    """All plants of a network with the scaled links between them.
+
+    ``strengths`` (all takes, all offers) sums |strength| of the links; ``slowest`` and ``fastest`` are in units of
+    ``omega`` (1/s); ``fastest_given`` tells whether the user set the disc or the search chose it.
+    """
+
+    network: Network
+    plants: tuple[Plant, ...]
+    strengths: Array
+    omega: float
+    slowest: float
+    fastest: float
+    fastest_given: bool
+    blocks: tuple[NDArray[np.intp], ...]
+
+    def takes(self, i: int) -> slice:
+        """Rows of ``strengths`` that belong to plant i."""
+        start = sum(len(p.kind.takes) for p in self.plants[:i])
+        return slice(start, start + len(self.plants[i].kind.takes))
+
+    def rows(self, i: int) -> slice:
+        """Columns of ``strengths`` (rows of the gain matrix) that belong to plant i."""
+        start = sum(p.offers for p in self.plants[:i])
+        return slice(start, start + self.plants[i].offers)
+
+
+def allowed_entries(kind: Kind, goal: Goal) -> Mask:
+    """Which entries (inputs, sensors) of K may differ from zero under ``goal.uses``."""
+    mask = np.ones((len(kind.inputs), len(kind.sensors)), dtype=bool)
+    for actuator, sensors in goal.uses.get(kind.name, {}).items():
+        row = kind.index("inputs", actuator)
+        mask[row] = [sensor.name in sensors for sensor in kind.sensors]
+    return mask
+
+
+def field_of(network: Network) -> Field:
+    """Fold, scale and collect the units of ``network``; pure arithmetic, raises nothing for a valid network."""
+    folded = [_folded(kind, network) for kind in network.kinds]
+    modes = [abs(v) for A, *_ in folded for v in np.linalg.eigvals(A.floats())] or [0.0]
+    slowest = float(network.goal.slowest or 0)
+    given = network.goal.fastest is not None
+    # Without a disc the radius falls for ever as gains grow; the search then keeps to a generous disc of its own.
+    omega = float(network.goal.fastest or 10 * max(*modes, 5 * slowest, 0.1))
+    tables = [_tables(kind, parts, omega) for kind, parts in zip(network.kinds, folded, strict=True)]
+    scales = _scales(network, tables)
+    plants = tuple(
+        _plant(kind, network.goal, table, scale)
+        for kind, table, scale in zip(network.kinds, tables, scales, strict=True)
+    )
+    strengths, pattern = _strengths(network, scales)
+    return Field(network, plants, strengths, omega, slowest / omega, 1.0, given, connected_blocks(pattern))
+
+
+def _folded(kind: Kind, network: Network) -> tuple[ExactMatrix, ExactMatrix]:
+    """Exact A and C with the unit's own part of every relative link folded in (theory section 1, case R1)."""
+    A, C = kind.A, kind.C
+    for link in network.links:
+        if link.kind != kind.name or not link.relative:
+            continue
+        take = kind.index("takes", link.take)
+        own = kind.H.row(kind.index("offers", link.offer)).scaled(link.own_strength)
+        A = A - kind.D.column(take) @ own
+        C = C - kind.N.column(take) @ own
+    return A, C
+
+
+def _tables(kind: Kind, folded: tuple[ExactMatrix, ExactMatrix], omega: float) -> dict[str, Array]:
+    """Unscaled float matrices with time in 1/omega and disturbances in units of their peaks."""
+    peaks = np.array([float(w.peak) for w in kind.disturbances])
+    return {
+        "A": folded[0].floats() / omega,
+        "B": kind.B.floats() / omega,
+        "C": folded[1].floats(),
+        "D": kind.D.floats() / omega,
+        "N": kind.N.floats(),
+        "E": kind.E.floats() / omega * peaks,
+        "H": kind.H.floats(),
+        "F": kind.F.floats(),
+        "Fw": kind.Fw.floats() * peaks,
+    }
+
+
+def _scales(network: Network, tables: list[dict[str, Array]]) -> list[dict[str, Array]]:
+    """Scale of every state, input, take, offer and sensor: one least-squares fit in logarithms for all kinds."""
+    places: list[dict[str, slice]] = []
+    count = 0
+    for kind in network.kinds:
+        place = {}
+        for group in ("states", "inputs", "takes", "offers", "sensors"):
+            size = len(getattr(kind, group))
+            place[group] = slice(count, count + size)
+            count += size
+        places.append(place)
+    rows: list[tuple[int, int, float]] = []  # log value + scale of column - scale of row = 0
+    for place, table in zip(places, tables, strict=True):
+        for name, to, source in (
+            ("A", "states", "states"), ("B", "states", "inputs"), ("D", "states", "takes"), ("H", "offers", "states"),
+            ("F", "offers", "takes"), ("C", "sensors", "states"), ("N", "sensors", "takes"),
+        ):  # fmt: skip
+            for i, j in zip(*np.nonzero(table[name]), strict=True):
+                if name != "A" or i != j:
+                    rows.append((place[to].start + i, place[source].start + j, float(abs(table[name][i, j]))))
+    names = {kind.name: i for i, kind in enumerate(network.kinds)}
+    for link in network.links:
+        if link.strength:
+            take = places[names[link.kind]]["takes"].start + network.kind(link.kind).index("takes", link.take)
+            offers = places[names[link.source_kind]]["offers"].start
+            offer = offers + network.kind(link.source_kind).index("offers", link.offer)
+            rows.append((take, offer, float(abs(link.strength))))
+    system = np.zeros((len(rows), count))
+    right = np.zeros(len(rows))
+    for r, (row, column, value) in enumerate(rows):
+        system[r, column] += 1.0
+        system[r, row] -= 1.0
+        right[r] = -np.log(value)
+    logs = np.linalg.lstsq(system, right, rcond=None)[0] if rows else np.zeros(count)
+    scale = np.exp(logs)
+    return [{group: scale[part] for group, part in place.items()} for place in places]
+
+
+def _plant(kind: Kind, goal: Goal, table: dict[str, Array], scale: dict[str, Array]) -> Plant:
+    """The plant in scaled signals: x = scale * x_scaled and so on."""
+    x, u, v, z, y = (scale[g] for g in ("states", "inputs", "takes", "offers", "sensors"))
+    banded = [i for i, s in enumerate(kind.states) if s.band is not None]
+    states = np.eye(len(kind.states))[banded]
+    allowed = allowed_entries(kind, goal)
+    unit = u[:, None] / y[None, :]
+    bound = np.full(allowed.shape, np.inf)
+    for actuator, entries in goal.gain_bounds.get(kind.name, {}).items():
+        for sensor, value in entries.items():
+            bound[kind.index("inputs", actuator), kind.index("sensors", sensor)] = float(value)
+    bands = [s.band for s in kind.offers] + [kind.states[i].band for i in banded]
+    heights = np.concatenate((z, x[banded]))
+    plant = Plant(
+        kind=kind,
+        A=table["A"] * x / x[:, None],
+        B=table["B"] * u / x[:, None],
+        C=table["C"] * x / y[:, None],
+        D=table["D"] * v / x[:, None],
+        N=table["N"] * v / y[:, None],
+        E=table["E"] / x[:, None],
+        H=np.concatenate((table["H"] * x / z[:, None], states)),
+        F=np.concatenate((table["F"] * v / z[:, None], np.zeros((len(banded), len(v))))),
+        Fw=np.concatenate((table["Fw"] / z[:, None], np.zeros((len(banded), table["Fw"].shape[1])))),
+        allowed=allowed,
+        bound=bound / unit,
+        limit=_bounds([a.limit for a in kind.inputs]) / u,
+        band=_bounds(bands) / heights,
+        gain_unit=unit,
+        directions=(),  # type: ignore[arg-type]
+    )
+    return replace(plant, directions=_directions(plant))
+
+
+def _directions(plant: Plant) -> tuple[Array, Array, Array, Array]:
+    """Derivatives of the closed matrices by every allowed gain, in the order of ``np.nonzero(allowed)``."""
+    rows, columns = np.nonzero(plant.allowed)
+    count, (n, w) = len(rows), plant.E.shape
+    takes, heads, actuators = plant.D.shape[1], plant.H.shape[0], plant.B.shape[1]
+    dA = np.einsum("ng,gm->gnm", plant.B[:, rows], plant.C[columns])
+    dD = np.zeros((count, n, takes + w))
+    dD[:, :, :takes] = np.einsum("ng,gt->gnt", plant.B[:, rows], plant.N[columns])
+    dH = np.zeros((count, heads + actuators, n))
+    dH[np.arange(count), heads + rows] = plant.C[columns]
+    dF = np.zeros((count, heads + actuators, takes + w))
+    dF[np.arange(count), heads + rows, :takes] = plant.N[columns]
+    return dA, dD, dH, dF
+
+
+def _bounds(values: list[Fraction | None]) -> Array:
+    return np.array([np.inf if value is None else float(value) for value in values], dtype=float)
+
+
+def _strengths(network: Network, scales: list[dict[str, Array]]) -> tuple[Array, Mask]:
+    """Scaled sums of |strength| (all takes, all offers), and which offer can feed which offer through a link."""
+    take_start, offer_start, takes, offers = {}, {}, 0, 0
+    for kind in network.kinds:
+        take_start[kind.name], offer_start[kind.name] = takes, offers
+        takes, offers = takes + len(kind.takes), offers + len(kind.offers)
+    index = {kind.name: i for i, kind in enumerate(network.kinds)}
+    strengths = np.zeros((takes, offers))
+    pattern = np.zeros((offers, offers), dtype=bool)
+    for link in network.links:
+        receiver, source = network.kind(link.kind), network.kind(link.source_kind)
+        take, offer = receiver.index("takes", link.take), source.index("offers", link.offer)
+        z, v = scales[index[source.name]]["offers"][offer], scales[index[receiver.name]]["takes"][take]
+        strengths[take_start[receiver.name] + take, offer_start[source.name] + offer] += (
+            float(abs(link.strength)) * z / v
+        )
+        if link.strength:
+            first = offer_start[receiver.name]
+            pattern[first : first + len(receiver.offers), offer_start[source.name] + offer] = True
+    return strengths, pattern

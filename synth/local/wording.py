@@ -1,0 +1,136 @@
+"""A design in words, tables and plain data."""
+
+from __future__ import annotations
+
+import math
+from fractions import Fraction
+from typing import TYPE_CHECKING
+
+from synth.base.caution import CAUTIONS, cautions_text
+
+if TYPE_CHECKING:
+    from synth.local.designing import Design
+
+
+def explanation(design: Design) -> str:
+    """What was reached, within which limits, and what blocks."""
+    lines = []
+    if math.isfinite(design.upper):
+        lines.append(f"The radius lies between {_ends(design.lower, design.upper)}; the target is {design.target:g}.")
+    else:
+        lines.append("With these gains a closed unit does not settle, so there is no finite radius.")
+    if design.reached:
+        lines.append(
+            "The target is reached and every limit holds; of the gains within the limits these make the radius"
+        )
+        lines.append("smallest, as far as the search could tell.")
+        near = [p for p in design.peaks if p.limit and p.value > 0.98 * float(p.limit)]
+        lines.extend(f"{p.kind}.{p.signal} uses {p.value / float(p.limit or 1):.1%} of its limit." for p in near)
+    lines.extend(f"Not kept: {broken.sentence}." for broken in design.broken)
+    if design.blocking is not None:
+        lines.append(design.blocking.sentence)
+    return "\n".join(lines)
+
+
+def document(design: Design) -> dict[str, object]:
+    """Plain data for JSON: numbers in the declared units, infinity as "inf", complex numbers as [re, im]."""
+    return {
+        "gains": {gain_set.kind: gain_set.as_dict() for gain_set in design.gains.sets},
+        "exact_gains": {gain_set.kind: gain_set.K.texts() for gain_set in design.gains.sets},
+        "units": {
+            kind.name: {
+                "signals": [s.unit for s in kind.sensors],
+                "actuators": [a.unit for a in kind.inputs],
+                "modes": "1/s",
+            }
+            for kind in design.network.kinds
+        },
+        "sign_convention": "u = K y",
+        "target": design.target,
+        "radius": {"lower": _plain(design.lower), "upper": _plain(design.upper)},
+        "reached": design.reached,
+        "blocking": None if design.blocking is None else design.blocking.as_json(),
+        "broken": [broken.sentence for broken in design.broken],
+        "modes": {
+            kind.name: [[v.real, v.imag] for v in modes]
+            for kind, modes in zip(design.network.kinds, design.modes, strict=True)
+        },
+        "peaks": {
+            f"{p.kind}.{p.role}.{p.signal}": {
+                "value": _plain(p.value), "in": p.unit, "limit": None if p.limit is None else float(p.limit)
+            }
+            for p in design.peaks
+        },
+        "history": list(design.history),
+        "provenance": design.provenance.as_dict(),
+        "cautions": list(CAUTIONS),
+    }  # fmt: skip
+
+
+def tables(design: Design) -> str:
+    """Gains, modes and peaks as text tables with units, then the explanation and the cautions."""
+    lines = [design.network.title, "", "Gains, u = K y", *_gains(design), "", "Modes of the closed units (1/s)"]
+    for kind, modes in zip(design.network.kinds, design.modes, strict=True):
+        shown = ", ".join(_mode(v) for v in sorted(modes, key=lambda v: (-v.real, v.imag)) if v.imag >= 0)
+        lines.append(f"  {kind.name}: {shown}")
+    lines.extend(("", "Guaranteed peaks under the declared disturbances, from rest", *_peaks(design), ""))
+    lines.extend((explanation(design), "", cautions_text()))
+    return "\n".join(lines)
+
+
+def _gains(design: Design) -> list[str]:
+    rows: list[tuple[str, ...]] = [("kind", "actuator", "signal", "gain", "unit")]
+    for kind, gain_set in zip(design.network.kinds, design.gains.sets, strict=True):
+        for i, actuator in enumerate(kind.inputs):
+            for j, sensor in enumerate(kind.sensors):
+                unit = f"({actuator.unit})/({sensor.unit})"
+                rows.append((kind.name, actuator.name, sensor.name, decimal(gain_set.K[i, j]), unit))
+    return _aligned(rows)
+
+
+def _peaks(design: Design) -> list[str]:
+    rows: list[tuple[str, ...]] = [("kind", "signal", "role", "peak", "limit", "unit")]
+    for p in design.peaks:
+        limit = "none" if p.limit is None else f"{float(p.limit):g}"
+        rows.append((p.kind, p.signal, p.role, f"{p.value:.4g}", limit, p.unit))
+    return _aligned(rows)
+
+
+def _aligned(rows: list[tuple[str, ...]]) -> list[str]:
+    widths = [max(len(row[k]) for row in rows) for k in range(len(rows[0]))]
+    return [
+        "  " + "  ".join(cell.ljust(width) for cell, width in zip(row, widths, strict=True)).rstrip() for row in rows
+    ]
+
+
+def decimal(value: Fraction) -> str:
+    """The exact decimal digits of a rational that has finitely many, else numerator/denominator."""
+    twos, fives, rest = 0, 0, value.denominator
+    while rest % 2 == 0:
+        twos, rest = twos + 1, rest // 2
+    while rest % 5 == 0:
+        fives, rest = fives + 1, rest // 5
+    if rest != 1:
+        return str(value)
+    places = max(twos, fives)
+    digits = str(abs(value.numerator) * 10**places // value.denominator).rjust(places + 1, "0")
+    sign = "-" if value < 0 else ""
+    return sign + (f"{digits[:-places]}.{digits[-places:]}" if places else digits)
+
+
+def _mode(value: complex) -> str:
+    if value.imag == 0:
+        return f"{value.real:.4g}"
+    return f"{value.real:.4g} +- {value.imag:.4g}j"
+
+
+def _ends(lower: float, upper: float) -> str:
+    """Both ends with enough digits to tell them apart, the lower rounded down and the upper rounded up."""
+    places = 6 - math.floor(math.log10(upper)) if upper > 0 else 6
+    unit = 10.0**-places
+    places = max(0, places)
+    return f"{math.floor(lower / unit) * unit:.{places}f} and {math.ceil(upper / unit) * unit:.{places}f}"
+
+
+def _plain(value: float) -> float | str:
+    return value if math.isfinite(value) else "inf"
