@@ -123,10 +123,12 @@ def prove(
     text = certificate.as_text()
     if certificate.proven and not kept:
         text = text.rstrip() + "\nThe certificate was not kept; name a folder with --out to keep it.\n"
-    files = {"proof.json": document}
-    _deliver(
-        document, text, as_json, out, files, (lambda work: certificate.save(work / "certificate.json")) if kept else None
-    )
+
+    def save(work: Path) -> None:
+        if kept:
+            certificate.save(work / "certificate.json")
+
+    _deliver(document, text, as_json, out, {"proof.json": document}, save)
     _leave(certificate.proven)
 
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from decimal import Decimal
 from math import inf, isinf
 
 from synth.base.caution import CAUTIONS
@@ -110,20 +111,24 @@ class Margin:
             word = "certified" if self.within_limits_certified else "computed, no certificate at that strength"
             lines.append(
                 f"Under the declared disturbances every actuator and band stays inside its bound up to "
-                f"{_number(self.within_limits_factor)} times today's strength ({word})."
+                f"{_number_below(self.within_limits_factor)} times today's strength ({word})."
             )
         if self.exact.with_delays:
             lines.append(f"With every link fresh: {_breaks(self.exact_no_delay, self.units_word)}.")
         for link in self.links:
             reach = "at least " if link.capped else ""
             lines.append(
-                f"{link.link}: the whole class may get {reach}{_number(link.tolerance)} times as strong, "
-                f"one single copy {_number(link.single)} times, others as they are."
+                f"{link.link}: the whole class may get {reach}{_number_below(link.tolerance)} times as strong, "
+                f"one single copy {_number_below(link.single)} times, others as they are."
             )
         if self.bottleneck:
             lines.append("Share in the radius: " + ", ".join(f"{n} {100 * s:.0f} %" for n, s in self.bottleneck) + ".")
         if self.redesigned is not None:
-            lines.append(f"With gains picked anew: proven at {_number(self.redesigned.factor)} times today's strength.")
+            if self.redesigned.factor > self.proven_factor:
+                times = _number_below(self.redesigned.factor)
+                lines.append(f"With gains picked anew: proven at {times} times today's strength.")
+            else:
+                lines.append("Picking the gains anew, within the limits of the design, was not found to give more.")
         lines += [f"Note: {note}" for note in self.notes]
         return "\n".join(lines) + "\n"
 
@@ -135,7 +140,7 @@ class Margin:
             first = f"Proven at every strength for any number of {self.units_word}"
         else:
             upto = "up to" if self.covered >= self.proven_factor else "at"
-            times = f"{_number(self.proven_factor)} times today's strength"
+            times = f"{_number_below(self.proven_factor)} times today's strength"
             first = f"Proven {upto} {times} for any number of {self.units_word}"
         if self.class_capped:
             second = "the class was not lost at any strength tried"
@@ -145,7 +150,7 @@ class Margin:
             second = f"the class is lost at {_number(self.class_limit)}"
         inside = ""
         if self.within_limits_factor is not None and self.within_limits_factor < self.proven_factor:
-            inside = f" (inside actuator limits and bands up to {_number(self.within_limits_factor)})"
+            inside = f" (inside actuator limits and bands up to {_number_below(self.within_limits_factor)})"
         return f"{first}{inside}; {second}; the nominal network {_breaks(self.exact, self.units_word)}."
 
     def __repr__(self) -> str:
@@ -183,3 +188,12 @@ def _number(value: float) -> str:
 
 def _plain(value: object) -> object:
     return "inf" if isinstance(value, float) and value == inf else value
+
+
+def _number_below(value: float) -> str:
+    """Four digits, rounded down: what is claimed up to a number must not be read as more."""
+    text = _number(value)
+    if isinf(value) or value <= 0 or float(text) <= value:
+        return text
+    step = Decimal(1).scaleb(Decimal(text).adjusted() - 3)
+    return f"{float(Decimal(text) - step):.4g}"

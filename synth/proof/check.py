@@ -856,6 +856,8 @@ def sentences(document: dict[str, Any]) -> tuple[str, list[str], list[str]]:
     ]
     if any(number(link["own_strength"], "g") for link in links):
         excludes.append("the own part of a relative link late, lost or away from its nominal strength")
+    if any(number(v, "N") for kind in document["model"]["kinds"] for row in kind["N"] for v in row):
+        excludes.append("a controller that hears a taken signal later, or otherwise, than it acts on its unit")
     return claim, covers, excludes
 
 

@@ -4,10 +4,14 @@ from __future__ import annotations
 
 from dataclasses import replace
 from fractions import Fraction
+from pathlib import Path
 
 from synth.base.exact import ExactMatrix
+from synth.network import read
 from synth.network.model import Actuator, Disturbance, Goal, Kind, Link, Network, Signal
 from tests.build import M, convoy, hauler
+
+CONVOY = Path(__file__).parents[2] / "case_studies" / "convoy" / "convoy.yaml"
 
 
 def light_unit(limit: str = "1.2") -> Network:
@@ -64,6 +68,7 @@ def bounded() -> Network:
 def cases() -> dict[str, Network]:
     """All of them by name."""
     return {
+        "case study convoy": read(CONVOY),
         "convoy": convoy(),
         "convoy, both neighbours": convoy(offsets=(-1, 1)),
         "convoy, no actuator limit": replace(convoy(), kinds=(hauler(limit=None),)),

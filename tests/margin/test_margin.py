@@ -18,6 +18,7 @@ from synth.margin import Margin
 from synth.margin.coupling import Scaling
 from synth.margin.limits import largest_within, worst_use
 from synth.margin.redesign import largest_redesigned
+from synth.margin.result import _number_below
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Actuator, Goal, Network, Signal
 from synth.proof import prove
@@ -258,3 +259,10 @@ def test_redesign_by_the_real_search() -> None:
     found = synth.margin(network, no_gains(network), redesign=True)
     assert found.redesigned is not None
     assert found.redesigned.factor == pytest.approx(8, rel=0.06)
+
+
+@given(st.floats(1e-6, 1e6))
+def test_a_printed_claim_is_never_more_than_the_claim(value: float) -> None:
+    """Law: four digits rounded down, so "proven up to" is never read as more than was proven."""
+    shown = float(_number_below(value))
+    assert shown <= value < shown * (1 + 2e-3) + 1e-12

@@ -11,6 +11,7 @@ import yaml
 
 from synth.base.errors import InputError
 from synth.network import read
+from synth.network.model import Goal
 from synth.network.yaml_map import DEEPEST, Problems, Scalar, Table, parse
 from tests.build import convoy
 from tests.network.files import CONVOY, GAP_ONLY, convoy_text, read_text, refusal
@@ -20,7 +21,7 @@ def test_the_convoy_file_is_the_convoy() -> None:
     """Two independent ways to the same network: the file, and the matrices written by hand in tests/build.py."""
     network = read(CONVOY)
     assert network.hash == convoy().hash
-    assert network.goal == convoy().goal
+    assert network.goal == Goal(Fraction("0.6"), Fraction("0.4"), Fraction("1.3"), Fraction("0.02"))
     assert (network.simulation.units, network.simulation.seconds) == (50, 60)
     assert network.kinds[0].equations["drive'"] == "(demand + ahead - drive)/lag"
     assert read(GAP_ONLY).classes() == ("follow", "ranging")
@@ -192,10 +193,10 @@ def test_own_strength_follows_the_unit_of_the_own_signal(tmp_path: Path) -> None
         ("takes: {ahead", "takes: {lambda", "reserved word"),
         ("takes: {ahead", "takes: {a-b", "cannot be a name"),
         ("slowest: 0.4", "slowest: -1", "zero or more"),
-        ("fastest: 8", "fastest: 0.4", "no mode fits"),
+        ("fastest: 1.3", "fastest: 0.4", "no mode fits"),
         ("period: 0.02 s", "period: 0 s", "above zero"),
         ("period: 0.02 s", "rounding: {}", "not honoured by this version"),
-        ("target: 0.9", "target: 1", "above 0 and below 1"),
+        ("target: 0.6", "target: 1", "above 0 and below 1"),
         ("units: 50", "units: 1", "from 2 to 100000"),
         ("seconds: 60 s", "seconds: 0 s", "above zero"),
         ("name: follow", "name: [a]", "the name of the link's class"),
@@ -206,7 +207,7 @@ def test_own_strength_follows_the_unit_of_the_own_signal(tmp_path: Path) -> None
         ("slot': speed", "slot: speed", 'is not the derivative of a state (did you mean "slot\'"?)'),
         ("dimension: 1", "dimension: 3", "not honoured"),
         ("title: Ore convoy", 'title: "Ore\\tconvoy\\u0007"\n#', "printable"),
-        ("target: 0.9", "target: 1e-200", "too large or too small"),
+        ("target: 0.6", "target: 1e-200", "too large or too small"),
         ("slot: m,", "slot: {in: m, tolerance: 2},", "not honoured"),
     ],
 )
