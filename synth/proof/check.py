@@ -122,6 +122,11 @@ def mul(X: Matrix, Y: Matrix, width: int) -> Matrix:
     return [[sum((x * Y[k][j] for k, x in enumerate(row) if x), Fraction(0)) for j in range(width)] for row in X]
 
 
+def plus(X: Matrix, Y: Matrix) -> Matrix:
+    """X + Y."""
+    return [[a + b for a, b in zip(*rows, strict=True)] for rows in zip(X, Y, strict=True)]
+
+
 def transpose(X: Matrix) -> Matrix:
     """The transpose of a matrix with at least one row."""
     return [list(column) for column in zip(*X, strict=True)]
@@ -248,14 +253,14 @@ def close(kind: dict[str, Any], links: list[dict[str, Any]], gains: dict[str, An
     offers, p, d = len(group["offers"]), len(group["sensors"]), len(waves)
     need(1 <= n <= 60, f"{name} must have 1 to 60 states")
     shape = {"A": (n, n), "B": (n, m), "D": (n, q), "E": (n, d), "C": (p, n), "N": (p, q), "H": (offers, n)}
-    shape |= {"F": (offers, q), "Fw": (offers, d)}
+    shape |= {"F": (offers, q), "Fw": (offers, d), "Fu": (offers, m)}
+    kind = {"Fu": [["0"] * m] * offers, **kind}
     X = {key: matrix(kind[key], *size, f"{name}.{key}") for key, size in shape.items()}
     for key, side in (("actuators", "inputs"), ("signals", "sensors")):
         need(gains[key] == [s[0] for s in group[side]], f"the gains of {name} do not name its {side} in order")
     K = matrix(gains["K"], m, p, f"the gains of {name}")
     KN, U = mul(K, X["N"], q), mul(K, X["C"], n)
-    D = [[a + b for a, b in zip(*rows, strict=True)] for rows in zip(X["D"], mul(X["B"], KN, q), strict=True)]
-    A = [[a + b for a, b in zip(*rows, strict=True)] for rows in zip(X["A"], mul(X["B"], U, n), strict=True)]
+    D, A = plus(X["D"], mul(X["B"], KN, q)), plus(X["A"], mul(X["B"], U, n))
     for link in links:
         own = number(link["own_strength"], "own_strength")
         if link["to"]["kind"] != name or own == 0:
@@ -263,13 +268,15 @@ def close(kind: dict[str, Any], links: list[dict[str, Any]], gains: dict[str, An
         take = [s[0] for s in group["takes"]].index(link["to"]["take"])
         need(link["from"]["offer"] in [s[0] for s in group["offers"]], f"{name} has no own value for a relative link")
         k = [s[0] for s in group["offers"]].index(link["from"]["offer"])
-        need(not any(X["F"][k] + X["Fw"][k]), f"relative link {link['name']} reads an offer with feed-through")
+        direct = X["F"][k] + X["Fw"][k] + X["Fu"][k]
+        need(not any(direct), f"relative link {link['name']} reads an offer with feed-through")
         A = [[a - D[i][take] * own * h for a, h in zip(A[i], X["H"][k], strict=True)] for i in range(n)]
         U = [[u - KN[i][take] * own * h for u, h in zip(U[i], X["H"][k], strict=True)] for i in range(m)]
     none, eye = [Fraction(0)] * d, [[Fraction(i == j) for j in range(n)] for i in range(n)]
+    H, F = plus(X["H"], mul(X["Fu"], U, n)), plus(X["F"], mul(X["Fu"], KN, q))  # z = H x + F v + Fu u, u = U x + KN v
     lines = []
     for role, side, x, v, w in (
-        ("offer", "offers", X["H"], X["F"], X["Fw"]),
+        ("offer", "offers", H, F, X["Fw"]),
         ("state", "states", eye, [[Fraction(0)] * q] * n, [none] * n),
         ("actuator", "inputs", U, KN, [none] * m),
     ):
@@ -287,12 +294,18 @@ def read_model(document: dict[str, Any]) -> tuple[list[Unit], list[Link]]:
     dimension = model["dimension"]
     need(type(dimension) is int and 1 <= dimension <= 9, "the dimension must be a whole number from 1 to 9")
     keys = "name states inputs disturbances takes offers sensors A B D E C N H F Fw"
-    kinds = [fields(kind, keys, "a kind") for kind in items(model["kinds"], "kinds")]
+    kinds = [fields(kind, keys + " Fu" * ("Fu" in kind), "a kind") for kind in items(model["kinds"], "kinds")]
     names = [text(kind["name"], "the name of a kind") for kind in kinds]
     need(bool(names) and len(set(names)) == len(names), "kinds must be present and have different names")
     gains = [fields(g, "kind actuators signals K", "gains") for g in items(document["gains"], "gains")]
     need([g["kind"] for g in gains] == names, "gains must be given for every kind, in order")
-    raw = [fields(x, "name from at to strength own_strength delay", "a link") for x in items(model["links"], "links")]
+    keys = "name from at to strength own_strength delay"
+    extra = {"sort": ("tolerance", "curve"), "own_part": (True,)}  # fields that stand only where they say something
+    raw = []
+    for x in items(model["links"], "links"):
+        more = [key for key in extra if key in x]
+        raw.append(fields(x, " ".join([keys, *more]), "a link"))
+        need(all(x[key] in extra[key] for key in more), "a link is of a sort that this version does not prove")
     links = []
     for link in raw:
         name = text(link["name"], "the name of a link")
@@ -306,6 +319,8 @@ def read_model(document: dict[str, Any]) -> tuple[list[Unit], list[Link]]:
         strength, own = number(link["strength"], name), number(link["own_strength"], name)
         delay = number(link["delay"], name)
         need(delay >= 0, f"link {name}: the delay is negative")
+        inside = source["kind"] == to["kind"] and not any(at) and delay == own == 0
+        need("sort" not in link or inside, f"{name} must stay inside its unit")
         end = (source["kind"], source["offer"])
         links.append(Link(name, end, to["kind"], takes.index(to["take"]), abs(strength), own, delay))
     return [close(kind, raw, g) for kind, g in zip(kinds, gains, strict=True)], links
@@ -831,6 +846,13 @@ def sentences(document: dict[str, Any]) -> tuple[str, list[str], list[str]]:
         "neighbours are read as zero while the own parts of relative links stay in force"
     ]
     for link in links:
+        if "sort" in link:
+            what = {
+                "tolerance": "any value, steady or varying in time, within the declared tolerance",
+                "curve": "any nonlinear term inside its sector, while its argument stays in the band",
+            }
+            covers.append(f"{link['name']} ({link['to']['kind']}): {what[link['sort']]}")
+            continue
         fresh = number(link["delay"], "delay") == 0
         age = (
             "the present value"
@@ -851,7 +873,8 @@ def sentences(document: dict[str, Any]) -> tuple[str, list[str], list[str]]:
     excludes = [
         "sampling, computation delay and rounding of the firmware: the proof is about the continuous loop",
         "a saturated actuator, and any state outside the region of validity",
-        "dynamics that the model leaves out, and model parameters or gains away from their stated values",
+        "dynamics that the model leaves out, and gains or model parameters away from their stated values"
+        + (" and tolerances" if any("sort" in link for link in links) else ""),
         "link values older, or strengths larger, than listed under covers; sensor noise and failed sensors",
     ]
     if any(number(link["own_strength"], "g") for link in links):
