@@ -9,14 +9,14 @@ from __future__ import annotations
 import os
 import signal
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from functools import wraps
 from pathlib import Path
 from typing import Any, NoReturn
 
 import click
 
-from synth.base.errors import InputError, SynthError, nearest
+from synth.base.errors import InputError, Problem, SynthError, nearest
 from synth.base.progress import Listener, silent
 
 HELP = {"help_option_names": ["-h", "--help"]}
@@ -72,15 +72,31 @@ QUIET = click.option("--quiet", is_flag=True, help="No progress on standard erro
 
 
 @verbs.command()
+@click.argument("name", type=click.Path(path_type=Path))
+def new(name: Path) -> None:
+    """Write NAME.yaml, a commented problem file to start from, and the schema that editors complete it with."""
+    from synth.network.starter import write_starter
+
+    click.echo(write_starter(name), nl=False)
+    _leave(True)
+
+
+@verbs.command()
 @_with(FILE, JSON, OUT, QUIET)
 def check(file: Path, as_json: bool, out: Path | None, quiet: bool) -> None:
-    """Read FILE, explain the network, find what no local feedback can do."""
+    """Read FILE, explain the network (with --out also as a picture), find what no local feedback can do."""
     from synth.network import describe
 
     _progress(quiet)("reading and looking for obstructions")
-    described = describe(_read(file))
+    network = _read(file)
+    described = describe(network)
     document = described.as_json()
-    _deliver(document, described.as_text(), as_json, out, {"check.json": document})
+    files: dict[str, Any] = {"check.json": document}
+    if out is not None:
+        from synth.report.picture import network_picture
+
+        files["network.svg"] = network_picture(network)
+    _deliver(document, described.as_text(), as_json, out, files)
     _leave(document["obstruction"] is None)
 
 
@@ -336,6 +352,8 @@ def _one_sentence(function: Callable[[], None]) -> Callable[[], None]:
             _fail(error.format_message(), 2)
         except (click.Abort, KeyboardInterrupt):
             _fail("interrupted; earlier results are intact.", 130)
+        except InputError as error:
+            _fail(str(error), error.exit_code, error.problems)
         except SynthError as error:
             _fail(str(error), error.exit_code)
         except BrokenPipeError:
@@ -353,12 +371,19 @@ def _one_sentence(function: Callable[[], None]) -> Callable[[], None]:
     return guarded
 
 
-def _fail(sentence: str, code: int) -> NoReturn:
-    """Sentences on standard error; with --json also one JSON document on standard output."""
+def _fail(sentence: str, code: int, problems: Sequence[Problem] = ()) -> NoReturn:
+    """Sentences on standard error; with --json also one JSON document on standard output.
+
+    ``problems`` are the sentences one by one with their places, for programs.
+    """
     if "--json" in sys.argv[1:] and code != 130:
         from synth.whole_job import plain_json
 
-        click.echo(plain_json({"error": sentence, "exit_code": code}), nl=False)
+        document: dict[str, object] = {"error": sentence, "exit_code": code}
+        if problems:
+            document["error"] = "\n".join(str(problem) for problem in problems)
+            document["problems"] = [problem.as_dict() for problem in problems]
+        click.echo(plain_json(document), nl=False)
     for line in sentence.splitlines():
         click.echo(line if line[:1].isspace() else f"synth: {line}", err=True)
     raise SystemExit(code)

@@ -95,6 +95,8 @@ def assemble(
     peaks = tuple(unit_engine(unit, unit.H.rows, alpha, width).gains(unit.D, unit.F) for unit in closed)
     entries: list[Entry] = []
     for link in links:
+        if link.weakens or link.choice:
+            raise InputError(f"link {link.name!r} may weaken or is an alternative; its row is not a sum.")
         column = place.get((link.source_kind, link.offer))
         if link.kind not in kinds or column is None:
             raise InputError(

@@ -5,6 +5,7 @@ of every relative link is folded in, so that only the neighbour's part is left a
 
     D_c = D + B K N        A_c = A + B K C - sum over relative links of D_c[:, l] g_own H[k, :]
     u   = U x + UV v       U   = K C - sum of (K N)[:, l] g_own H[k, :]      UV = K N
+    z   = H_c x + F_c v    H_c = H + Fu U - sum of F[:, l] g_own H[k, :]     F_c = F + Fu UV
 """
 
 from __future__ import annotations
@@ -20,9 +21,9 @@ from synth.network.model import Kind, Link, Network
 class ClosedUnit:
     """A kind with its loop closed; all matrices exact, in the kind's declared units.
 
-    ``A`` n x n, ``D`` n x takes (neighbour's part only), ``E`` n x disturbances, ``H`` offers x n,
-    ``F`` offers x takes,
-    ``Fw`` offers x disturbances, ``U`` inputs x n and ``UV`` inputs x takes (the actuator's command u = U x + UV v).
+    ``A`` n x n, ``D`` n x takes (neighbour's part only), ``E`` n x disturbances, ``H`` offers x n, ``F`` offers x
+    takes, ``Fw`` offers x disturbances, ``U`` inputs x n and ``UV`` inputs x takes (the actuator's command
+    u = U x + UV v).
     """
 
     kind: Kind
@@ -45,17 +46,20 @@ def close_unit(kind: Kind, links: tuple[Link, ...], K: ExactMatrix) -> ClosedUni
     KN = K @ kind.N
     D = kind.D + kind.B @ KN
     A = kind.A + kind.B @ K @ kind.C
-    U = K @ kind.C
+    U, H, F = K @ kind.C, kind.H, kind.F
     for link in links:
         if link.kind != kind.name or not link.relative:
             continue
         take, offer = kind.index("takes", link.take), kind.index("offers", link.offer)
-        if any(kind.F.rows[offer]) or any(kind.Fw.rows[offer]):
+        if any(kind.F.rows[offer]) or any(kind.Fw.rows[offer]) or (kind.Fu is not None and any(kind.Fu.rows[offer])):
             raise ValueError(f"relative link {link.name!r} reads the offer {link.offer!r}, which has feed-through")
         own = kind.H.row(offer).scaled(link.own_strength)
         A = A - D.column(take) @ own
         U = U - KN.column(take) @ own
-    return ClosedUnit(kind, K, A, D, kind.E, kind.H, kind.F, kind.Fw, U, KN)
+        H = H - F.column(take) @ own  # an offer that passes on what is taken passes on the own part too
+    if kind.Fu is not None:  # z = H x + F v + Fu u with u = U x + UV v
+        H, F = H + kind.Fu @ U, F + kind.Fu @ KN
+    return ClosedUnit(kind, K, A, D, kind.E, H, F, kind.Fw, U, KN)
 
 
 def close_network(network: Network, gains: Gains) -> tuple[ClosedUnit, ...]:

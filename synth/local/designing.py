@@ -131,6 +131,7 @@ def redesign(
 
 def _checked(network: Network, target: float | Fraction | None, seed: int, starts: int | None) -> float:
     """The target as a float, after the arguments were found in range."""
+    network.refuse_beyond_fixed_links("the design")
     aim = float(network.goal.target if target is None else target)
     if not 0 < aim < 1:
         raise InputError(

@@ -88,8 +88,8 @@ def _unit(plant: Plant, K: Array, steep: bool) -> Guide | None:
     return peak_gain_guide(
         plant.A + plant.B @ K @ plant.C,
         np.concatenate((plant.D + plant.B @ K @ plant.N, plant.E), axis=1),
-        np.concatenate((plant.H, K @ plant.C)),
-        np.block([[plant.F, plant.Fw], [K @ plant.N, np.zeros((actuators, w))]]),
+        np.concatenate((plant.H + plant.Fu @ K @ plant.C, K @ plant.C)),
+        np.block([[plant.F + plant.Fu @ K @ plant.N, plant.Fw], [K @ plant.N, np.zeros((actuators, w))]]),
         *(plant.directions if steep else (None,) * 4),
     )
 

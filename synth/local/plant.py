@@ -25,8 +25,9 @@ Mask = NDArray[np.bool_]
 class Plant:
     """One open unit, scaled; own parts of relative links are folded in, so closing the loop is affine in K.
 
-    A_c = A + B K C, D_c = D + B K N, command u = K C x + K N v. ``E`` and ``Fw`` carry the declared disturbance peaks:
-    each scaled disturbance is bounded by one. ``H`` and ``F`` list the offers first, then the states with a band.
+    A_c = A + B K C, D_c = D + B K N, command u = K C x + K N v, z = H x + F v + Fu u. ``E`` and ``Fw`` carry the
+    declared disturbance peaks: each scaled disturbance is bounded by one. ``H`` and ``F`` list the offers first, then
+    the states with a band.
     ``allowed`` (inputs, sensors) is the structure, ``bound`` the scaled bound of each gain (inf: none), ``limit``
     the scaled actuator limits and ``band`` the scaled bands of the rows of ``H`` (inf: none).
     """
@@ -41,6 +42,7 @@ class Plant:
     H: Array
     F: Array
     Fw: Array
+    Fu: Array
     allowed: Mask
     bound: Array
     limit: Array
@@ -117,9 +119,9 @@ def field_of(network: Network) -> Field:
     return Field(network, plants, strengths, omega, slowest / omega, 1.0, given, connected_blocks(pattern))
 
 
-def _folded(kind: Kind, network: Network) -> tuple[ExactMatrix, ExactMatrix]:
-    """Exact A and C with the unit's own part of every relative link folded in (theory section 1, case R1)."""
-    A, C = kind.A, kind.C
+def _folded(kind: Kind, network: Network) -> tuple[ExactMatrix, ExactMatrix, ExactMatrix]:
+    """Exact A, C and H with the unit's own part of every relative link folded in (theory section 1, case R1)."""
+    A, C, H = kind.A, kind.C, kind.H
     for link in network.links:
         if link.kind != kind.name or not link.relative:
             continue
@@ -127,10 +129,11 @@ def _folded(kind: Kind, network: Network) -> tuple[ExactMatrix, ExactMatrix]:
         own = kind.H.row(kind.index("offers", link.offer)).scaled(link.own_strength)
         A = A - kind.D.column(take) @ own
         C = C - kind.N.column(take) @ own
-    return A, C
+        H = H - kind.F.column(take) @ own
+    return A, C, H
 
 
-def _tables(kind: Kind, folded: tuple[ExactMatrix, ExactMatrix], omega: float) -> dict[str, Array]:
+def _tables(kind: Kind, folded: tuple[ExactMatrix, ExactMatrix, ExactMatrix], omega: float) -> dict[str, Array]:
     """Unscaled float matrices with time in 1/omega and disturbances in units of their peaks."""
     peaks = np.array([float(w.peak) for w in kind.disturbances])
     return {
@@ -140,8 +143,9 @@ def _tables(kind: Kind, folded: tuple[ExactMatrix, ExactMatrix], omega: float) -
         "D": kind.D.floats() / omega,
         "N": kind.N.floats(),
         "E": kind.E.floats() / omega * peaks,
-        "H": kind.H.floats(),
+        "H": folded[2].floats(),
         "F": kind.F.floats(),
+        "Fu": (kind.Fu or ExactMatrix.zeros(len(kind.offers), len(kind.inputs))).floats(),
         "Fw": kind.Fw.floats() * peaks,
     }
 
@@ -161,7 +165,7 @@ def _scales(network: Network, tables: list[dict[str, Array]]) -> list[dict[str, 
     for place, table in zip(places, tables, strict=True):
         for name, to, source in (
             ("A", "states", "states"), ("B", "states", "inputs"), ("D", "states", "takes"), ("H", "offers", "states"),
-            ("F", "offers", "takes"), ("C", "sensors", "states"), ("N", "sensors", "takes"),
+            ("F", "offers", "takes"), ("C", "sensors", "states"), ("N", "sensors", "takes"), ("Fu", "offers", "inputs"),
         ):  # fmt: skip
             for i, j in zip(*np.nonzero(table[name]), strict=True):
                 if name != "A" or i != j:
@@ -208,6 +212,7 @@ def _plant(kind: Kind, goal: Goal, table: dict[str, Array], scale: dict[str, Arr
         H=np.concatenate((table["H"] * x / z[:, None], states)),
         F=np.concatenate((table["F"] * v / z[:, None], np.zeros((len(banded), len(v))))),
         Fw=np.concatenate((table["Fw"] / z[:, None], np.zeros((len(banded), table["Fw"].shape[1])))),
+        Fu=np.concatenate((table["Fu"] * u / z[:, None], np.zeros((len(banded), len(u))))),
         allowed=allowed,
         bound=bound / unit,
         limit=_bounds([a.limit for a in kind.inputs]) / u,
@@ -227,8 +232,10 @@ def _directions(plant: Plant) -> tuple[Array, Array, Array, Array]:
     dD = np.zeros((count, n, takes + w))
     dD[:, :, :takes] = np.einsum("ng,gt->gnt", plant.B[:, rows], plant.N[columns])
     dH = np.zeros((count, heads + actuators, n))
+    dH[:, :heads] = np.einsum("og,gm->gom", plant.Fu[:, rows], plant.C[columns])
     dH[np.arange(count), heads + rows] = plant.C[columns]
     dF = np.zeros((count, heads + actuators, takes + w))
+    dF[:, :heads, :takes] = np.einsum("og,gt->got", plant.Fu[:, rows], plant.N[columns])
     dF[np.arange(count), heads + rows, :takes] = plant.N[columns]
     return dA, dD, dH, dF
 

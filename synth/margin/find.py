@@ -50,6 +50,7 @@ def margin(
     that do not fit. Law: proven_factor <= class_limit <= exact.upper (up to the widths), all as factors on today's
     strengths. Sources: theory (1), (2), (3), (15) and sections 6 and 9; the coverings are ours.
     """
+    network.refuse_beyond_fixed_links("the margin")
     gains = design_or_gains if isinstance(design_or_gains, Gains) else design_or_gains.gains
     chosen = _checked(network, gains, classes, width)
     scaling = Scaling(network, gains, chosen, own_parts, width / 20)
@@ -58,7 +59,8 @@ def margin(
     proven, certificate = _certify(scaling, limit, width)
     notes = _notes(scaling, limit, proven, certificate)
     progress("bracketing the strength at which the declared network breaks")
-    family = loop_family(network, gains, chosen, own_parts)
+    # The network as wired has its parameters at the middle of their tolerances and its curves on their centre lines.
+    family = loop_family(network.without_self_links(), gains, chosen, own_parts)
     exact, fresh = _exact(family, scaling, limit, width, progress)
     folded = scaling.folded(1.0)
     progress("looking at each link by itself")
@@ -180,6 +182,7 @@ def _links(scaling: Scaling, folded: Folded, limit: CouplingLimit, width: float)
     return tuple(
         LinkTolerance(link.name, _words(link), whole[link.name].proven, alone_factor, whole[link.name].capped)
         for link, alone_factor in zip(network.links, single, strict=True)
+        if link.sort == "link"  # tolerances and nonlinear terms are what they are; only couplings have a margin
     )
 
 

@@ -92,8 +92,10 @@ def polish(loop: Loop, theta: float, guess: complex) -> Root | None:
             step = np.linalg.solve(system, np.concatenate([-(M @ x), [1 - normal @ x]]))
         except np.linalg.LinAlgError:
             break  # a double root: the candidate itself is as good as it gets
+        if not np.all(np.abs(step) < 1e100):
+            return None  # a nearly singular system: the iteration has lost its way
         x, s = x + step[:size], s + complex(step[size])
-        if not np.isfinite(s) or abs(s - guess) > 1 + abs(guess):
+        if abs(s - guess) > 1 + abs(guess):
             return None
         if abs(step[size]) <= 1e-14 * (1 + abs(s)):
             break

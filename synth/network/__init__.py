@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
     from synth.network.description import Description, describe
+    from synth.network.export import kind_to_statespace, section_to_statespace
     from synth.network.gain_table import read_gains
     from synth.network.gains import Gains, GainSet
     from synth.network.model import Kind, Link, Network
@@ -23,6 +24,8 @@ _HOMES = {
     "read_gains": "gain_table",
     "obstruction": "obstructions",
     "Obstruction": "obstructions",
+    "kind_to_statespace": "export",
+    "section_to_statespace": "export",
     "describe": "description",
     "Description": "description",
     "Network": "model",
@@ -41,9 +44,11 @@ __all__ = [
     "Network",
     "Obstruction",
     "describe",
+    "kind_to_statespace",
     "obstruction",
     "read",
     "read_gains",
+    "section_to_statespace",
 ]
 
 

@@ -6,13 +6,19 @@ import math
 from collections.abc import Mapping
 
 
-def movement(theta: float) -> str:
-    """How the units move when the phase from one cell to the next is ``theta``."""
-    if theta == 0:
+def movement(theta: tuple[float, ...]) -> str:
+    """How the units move when the phases from one cell to the next are ``theta``."""
+    if not any(theta):
         return "all units moving together by the same amount"
-    if theta == math.pi:
-        return "neighbouring units moving in opposite directions"
-    return f"a wave along the line that repeats about every {2 * math.pi / theta:.3g} cells"
+    along = "" if len(theta) == 1 else f" along dimension {' and '.join(str(i + 1) for i, t in enumerate(theta) if t)}"
+    if all(t in (0, math.pi) for t in theta):
+        return f"neighbouring units moving in opposite directions{along}"
+    if len(theta) == 1:
+        return f"a wave along the line that repeats about every {abs(2 * math.pi / theta[0]):.3g} cells"
+    lengths = " and ".join(
+        f"{abs(2 * math.pi / t):.3g} cells along dimension {i + 1}" for i, t in enumerate(theta) if abs(t) > 1e-6
+    )
+    return f"a wave that repeats about every {lengths}"
 
 
 def _growth(s: complex) -> str:
@@ -24,38 +30,59 @@ def _growth(s: complex) -> str:
 
 
 def advise(
-    theta: float,
+    theta: tuple[float, ...],
     s: complex,
     direction: Mapping[str, complex],
     cause: str,
     helpful: tuple[str, ...],
     sensors: tuple[str, ...],
+    leaders: tuple[str, ...] = (),
 ) -> str:
-    """The advice of an obstruction: what moves, why no gains help, what to measure or drive.
+    """The advice of an obstruction of a pattern: what moves, why no gains help, what to measure or drive.
 
-    ``helpful`` are the states that would each make the mode visible; ``sensors`` what the controllers read now.
+    ``helpful`` are the states that would each make the mode visible; ``sensors`` what the controllers read now;
+    ``leaders`` the units that stand at an edge.
     """
     moving = " and ".join(direction)
     how = movement(theta)
     if cause == "not reached":
-        return (
-            f"No actuator reaches {moving} with {how}; this mode {_growth(s)}, so no gains can prove a decay. Give an "
-            f"actuator to a unit that moves {moving}, add a link that carries an actuator's effect there, or "
-            "correct the "
-            "model if the mode really decays."
-        )
+        return not_reached(moving, how, s)
     reads = f" (they read {', '.join(sensors)})" if sensors else ""
     remedy = " or ".join(helpful or tuple(direction))
-    text = (
+    text = not_seen(moving, how, s, reads)
+    if not any(theta):
+        fades = "along the line" if len(theta) <= 1 else "with the distance"
+        units = f" ({', '.join(leaders)})" if leaders else ""
+        return text + (
+            f"Measure {remedy} in the units themselves, against something outside the "
+            f"{'line' if len(theta) <= 1 else 'field'} (a position, a schedule, a common reference). A leader at the "
+            f"edge{units} does not help, because what it knows fades {fades}: the reference must reach units at "
+            f"bounded "
+            "gaps."
+        )
+    return text + f"Measure {remedy} in the units themselves, or change the offsets of the links that the sensors hear."
+
+
+def not_reached(moving: str, how: str, s: complex) -> str:
+    """The advice where no actuator reaches the mode."""
+    return (
+        f"No actuator reaches {moving} with {how}; this mode {_growth(s)}, so no gains can prove a decay. Give an "
+        f"actuator to a unit that moves {moving}, add a link that carries an actuator's effect there, or "
+        "correct the "
+        "model if the mode really decays."
+    )
+
+
+def not_seen(moving: str, how: str, s: complex, reads: str = "") -> str:
+    """The first sentence where no controller sees the mode."""
+    return (
         f"No controller{reads} sees a change of {moving} with {how}; this mode {_growth(s)}, "
         "so no gains can prove a decay. "
     )
-    if theta == 0:
-        return text + (
-            f"Measure {remedy} in the units themselves, against something outside the line (a position, a "
-            "schedule, a common "
-            "reference). A leader at the edge does not help, because what it knows fades along the line: the "
-            "reference must "
-            "reach units at bounded gaps."
-        )
-    return text + f"Measure {remedy} in the units themselves, or change the offsets of the links that the sensors hear."
+
+
+def several(names: tuple[str, ...], most: int = 4) -> str:
+    """A list of names that stays short."""
+    if len(names) <= most:
+        return " and ".join(names)
+    return f"{', '.join(names[:most])} and {len(names) - most} more"

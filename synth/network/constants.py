@@ -90,6 +90,22 @@ def _greatest(dimension: Dimension | None, *values: Fraction) -> tuple[Fraction,
     return max(values), dimension
 
 
+def _tangent(dimension: Dimension | None, value: Fraction) -> tuple[Fraction, Dimension | None]:
+    _plain(dimension, "tanh", value, 200)
+    if value == 0:
+        return Fraction(0), None
+    raised = Fraction(_CONTEXT.exp(_CONTEXT.divide(*_parts(2 * value))))
+    return _rounded((raised - 1) / (raised + 1)), NONE
+
+
+def _limited(dimension: Dimension | None, value: Fraction, limit: Fraction) -> tuple[Fraction, Dimension | None]:
+    return max(-limit, min(limit, value)), dimension
+
+
+def _rest(dimension: Dimension | None, value: Fraction, width: Fraction) -> tuple[Fraction, Dimension | None]:
+    return value - max(-width, min(width, value)), dimension
+
+
 FUNCTIONS: dict[str, Callable[..., tuple[Fraction, Dimension | None]]] = {
     "sqrt": _root,
     "abs": _absolute,
@@ -98,4 +114,19 @@ FUNCTIONS: dict[str, Callable[..., tuple[Fraction, Dimension | None]]] = {
     "sin": _wave("sin", 1),
     "cos": _wave("cos", 0),
     "exp": _exponential,
+    "tanh": _tangent,
+    "sat": _limited,
+    "deadzone": _rest,
 }
+
+
+def constant_power(base: Fraction, power: Fraction) -> Fraction:
+    """A power of a constant: exact if it is whole, otherwise rounded to 40 digits; UnitError if it is not real."""
+    if power.denominator == 1:
+        return base ** int(power)
+    if base < 0:
+        raise UnitError("a power that is not whole of a negative number is not real")
+    if base == 0:
+        return Fraction(0)
+    logarithm = _CONTEXT.ln(_CONTEXT.divide(*_parts(base)))
+    return _rounded(_CONTEXT.exp(_CONTEXT.multiply(logarithm, _CONTEXT.divide(*_parts(power)))))

@@ -2,14 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
-from dataclasses import dataclass, field
+from collections import Counter
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 
 from synth.base.caution import CAUTIONS, cautions_text
 from synth.base.provenance import Provenance
+from synth.network.describing import internal, kind_text, mode_text, variants_text
 from synth.network.model import Kind, Link, Network
-from synth.network.obstructions import Obstruction, obstruction
+from synth.network.obstructions import Obstruction, examine
+from synth.network.words import counted, link_words, said, strength_unit
+
+MOST_KINDS = 12
+MOST_LINKS = 12
 
 
 @dataclass(frozen=True)
@@ -17,13 +23,16 @@ class Description:
     """What ``synth check`` shows: the network, the open-loop modes of its kinds and an obstruction, if there is one.
 
     ``modes`` holds, per kind, the eigenvalues of A alone in 1/s, slowest decay first; ``intake`` the bound on what may
-    enter each ``kind.take``: the sum of |strength| over its links, in (taken unit)/(offered unit).
+    enter each ``kind.take``, in (taken unit)/(offered unit): the sum of |strength| over the links of one unit, the
+    largest unit where they differ, the largest choice where a rule leaves one. ``tested`` says what the search for an
+    obstruction looked at.
     """
 
     network: Network
     modes: Mapping[str, tuple[complex, ...]]
     intake: Mapping[str, Fraction]
     obstruction: Obstruction | None
+    tested: str
     provenance: Provenance = field(repr=False)
 
     def as_json(self) -> dict[str, object]:
@@ -35,9 +44,23 @@ class Description:
             "units": network.units,
             "description": network.description,
             "dimension": network.dimension,
-            "links": [_link_json(link, network) for link in network.links],
+            "links": [_link_json(link, network, count) for link, count in _counted_links(network)],
+            "rules": [
+                {"name": rule.name, "to": f"{rule.kind}.{rule.take}", "most": rule.most} for rule in network.rules
+            ],
+            "edges": [
+                {
+                    "side": edge.side,
+                    "units": [
+                        {"name": u.name, "kind": u.kind, "at": u.at, "instead_of": u.instead_of} for u in edge.units
+                    ],
+                    "links": [{**_link_json(e.link, network, 1), "to_place": e.to} for e in edge.links],
+                }
+                for edge in network.edges
+            ],
             "intake": {name: float(bound) for name, bound in self.intake.items()},
             "obstruction": None if self.obstruction is None else self.obstruction.as_json(),
+            "tested": self.tested,
             "cautions": list(CAUTIONS),
             "provenance": self.provenance.as_dict(),
         }
@@ -45,30 +68,23 @@ class Description:
     def as_text(self) -> str:
         """Lines for a person."""
         network = self.network
-        lines = [network.title, "=" * len(network.title), ""]
-        lines.append(
-            f"A pattern of dimension {network.dimension}: one cell ({', '.join(k.name for k in network.kinds)}) "
-            "repeated "
-            "without end, so what is proven holds for any number of units."
-        )
-        for kind in network.kinds:
-            lines += ["", *_kind_text(kind, self.modes[kind.name])]
-        lines += ["", "Links"]
-        for name in network.classes():
-            lines += [f"  {name}", *(_link_text(link, network) for link in network.links if link.name == name)]
-        if not network.links:
-            lines.append("  none: the units do not influence each other")
-        lines += ["", "Intake (sum of absolute strengths that enter a taken signal)"]
+        lines = [network.title, "=" * len(network.title), "", *_layout_text(network)]
+        shown = _one_of_each(network)
+        for kind in shown[:MOST_KINDS]:
+            lines += ["", *kind_text(kind, self.modes[kind.name]), *variants_text(network, kind)]
+        if len(shown) > MOST_KINDS:
+            lines += ["", f"... and {len(shown) - MOST_KINDS} more kinds (all of them with --json)."]
+        lines += ["", "Links", *_links_text(network), *_edges_text(network)]
+        lines += ["", "Intake (sum of absolute strengths that may enter a taken signal of one unit)"]
         lines += [
-            f"  {name:<24} {_said(bound)} {_intake_unit(name, network)}".rstrip() for name, bound in self.intake.items()
+            f"  {name:<24} {said(bound)} {_intake_unit(name, network)}".rstrip()
+            for name, bound in list(self.intake.items())[:MOST_KINDS]
         ] or ["  none"]
         lines += [
             "",
-            f"Uniform: {len(network.kinds)} kind{'s' if len(network.kinds) > 1 else ''}, every intake bounded as "
-            "above, the same in every "
-            "cell. What is left to the design is one decay for all closed units.",
+            *_uniform_text(network),
             "",
-            *_obstruction_text(self.obstruction),
+            *_obstruction_text(self.obstruction, self.tested),
             "",
             cautions_text(),
         ]
@@ -85,21 +101,76 @@ def describe(network: Network) -> Description:
         modes[kind.name] = tuple(
             sorted((complex(v) for v in values), key=lambda v: (-round(v.real, 9), abs(v.imag), v.imag))
         )
-    intake = {f"{kind.name}.{take.name}": Fraction(0) for kind in network.kinds for take in kind.takes}
+    found = examine(network)
+    return Description(network, modes, _intake(network), found.obstruction, found.tested, Provenance(network.hash))
+
+
+def _intake(network: Network) -> dict[str, Fraction]:
+    """The largest sum of absolute strengths into each taken signal that a user declared."""
+    intake = {
+        f"{kind.name}.{t.name}": Fraction(0) for kind in network.kinds for t in kind.takes if not internal(t.name)
+    }
+    if network.members is not None:
+        return _intake_of_members(network, intake)
+    choices: dict[tuple[str, str], Fraction] = {}
     for link in network.links:
-        intake[f"{link.kind}.{link.take}"] += abs(link.strength)
-    return Description(network, modes, intake, obstruction(network), Provenance(network.hash))
+        if link.sort != "link":
+            continue
+        name = f"{link.kind}.{link.take}"
+        if link.choice:
+            key = (name, link.choice)
+            more = max(abs(link.strength) - choices.get(key, Fraction(0)), Fraction(0))
+            choices[key] = choices.get(key, Fraction(0)) + more
+            intake[name] += more
+        else:
+            intake[name] += abs(link.strength)
+    for edge in network.edges:
+        extra: dict[tuple[str, int], Fraction] = {}
+        for single in edge.links:
+            at = (f"{single.link.kind}.{single.link.take}", single.to)
+            extra[at] = extra.get(at, Fraction(0)) + abs(single.link.strength)
+        regular = dict(intake)
+        for (name, _), more in extra.items():
+            intake[name] = max(intake[name], regular[name] + more)
+    return intake
 
 
-def _said(value: Fraction) -> str:
-    return f"{float(value):.6g}"
+def _intake_of_members(network: Network, intake: dict[str, Fraction]) -> dict[str, Fraction]:
+    """Exact: units with the same sorts of links, as many of each, are looked at once."""
+    members = network.members
+    assert members is not None  # the caller has looked
+    to, _, sort = (array.tolist() for array in members.expanded())
+    wired: dict[int, Counter[int]] = {}
+    for unit, link in zip(to, sort, strict=True):
+        wired.setdefault(unit, Counter())[link] += 1
+    for pattern in {frozenset(counter.items()) for counter in wired.values()}:
+        sums: dict[str, Fraction] = {}
+        for index, count in pattern:
+            link = network.links[index]
+            if link.sort == "link":
+                name = f"{link.kind}.{link.take}"
+                sums[name] = sums.get(name, Fraction(0)) + count * abs(link.strength)
+        for name, total in sums.items():
+            intake[name] = max(intake[name], total)
+    return intake
 
 
-def _mode_text(mode: complex) -> str:
-    real = 0.0 if abs(mode.real) < 1e-12 else mode.real
-    return (
-        f"{real:.4g}" if abs(mode.imag) < 1e-12 else f"{real:.4g} {'+' if mode.imag > 0 else '-'} {abs(mode.imag):.4g}i"
-    )
+def _counted_links(network: Network) -> list[tuple[Link, int]]:
+    """The links with the number of times each stands in the network (1 per cell of a pattern)."""
+    if network.members is None:
+        return [(link, 1) for link in network.links]
+    counts = Counter(network.members.expanded()[2].tolist())
+    return [(link, counts[k]) for k, link in enumerate(network.links)]
+
+
+def _one_of_each(network: Network) -> list[Kind]:
+    """One kind of those that differ only in the values of parameters."""
+    if network.members is None or not network.members.origins:
+        return list(network.kinds)
+    first: dict[str, Kind] = {}
+    for kind, (origin, _) in zip(network.kinds, network.members.origins, strict=True):
+        first.setdefault(origin, kind)
+    return list(first.values())
 
 
 def _kind_json(kind: Kind, modes: tuple[complex, ...]) -> dict[str, object]:
@@ -116,85 +187,132 @@ def _kind_json(kind: Kind, modes: tuple[complex, ...]) -> dict[str, object]:
         "sensors": [{"name": s.name, "in": s.unit} for s in kind.sensors],
         "equations": dict(kind.equations),
         "modes": [[mode.real, mode.imag] for mode in modes],
+        "inner": [
+            {"name": inner.take, "sort": inner.sort, "offer": inner.offer, "strength": float(inner.strength)}
+            for inner in kind.inner
+        ],
     }
 
 
-def _units(link: Link, network: Network) -> tuple[str, str]:
-    source, target = network.kind(link.source_kind), network.kind(link.kind)
-    return target.takes[target.index("takes", link.take)].unit, source.offers[source.index("offers", link.offer)].unit
-
-
-def _link_json(link: Link, network: Network) -> dict[str, object]:
-    taken, offered = _units(link, network)
+def _link_json(link: Link, network: Network, count: int) -> dict[str, object]:
     return {
         "name": link.name,
         "from": f"{link.source_kind}.{link.offer}",
         "at": list(link.at),
         "to": f"{link.kind}.{link.take}",
         "strength": float(link.strength),
-        "in": f"({taken})/({offered})",
+        "in": strength_unit(link, network),
         "own_strength": float(link.own_strength),
         "relative": link.relative,
         "delay_s": float(link.delay),
+        "sort": link.sort,
+        "weakens": link.weakens,
+        "own_part": link.own_part,
+        "count": count,
     }
 
 
-def _signals(label: str, parts: list[str]) -> list[str]:
-    return [f"  {label:<13} {', '.join(parts)}"] if parts else []
+def _names(kinds: Iterable[Kind]) -> str:
+    return ", ".join(kind.name for kind in kinds)
 
 
-def _kind_text(kind: Kind, modes: tuple[complex, ...]) -> list[str]:
-    def band(value: Fraction | None) -> str:
-        return "" if value is None else f", band {_said(value)}"
+def _layout_text(network: Network) -> list[str]:
+    members = network.members
+    if members is not None:
+        counts = Counter(members.kind.tolist())
+        origins = dict(enumerate(origin for origin, _ in members.origins))
+        by_kind: Counter[str] = Counter()
+        for k, count in counts.items():
+            by_kind[origins.get(k, network.kinds[k].name)] += count
+        parts = ", ".join(f"{count} {name}" for name, count in by_kind.items())
+        return [
+            f"{counted(len(members.names), 'unit')} ({parts}) and {counted(len(members.to), 'link')} between them, "
+            "each by name. What is proven holds for these units and links."
+        ]
+    if network.description == "rules":
+        return [
+            f"Units of the kinds {_names(network.kinds)}, any number of them, wired in any way that obeys the rules "
+            "below and rewired at any time: what is proven holds for all of these networks."
+        ]
+    where = "along a line" if network.dimension == 1 else f"in {network.dimension} dimensions"
+    cells = f"One cell ({_names(network.cell_kinds)}) repeated {where} without end"
+    ends = " and ".join(edge.side for edge in network.edges)
+    if ends:
+        return [f"{cells}, with its {ends} end: what is proven holds however long the line is."]
+    return [f"{cells}, so what is proven holds for any number of units."]
 
-    lines = [f"Kind {kind.name}"]
-    lines += _signals("states", [f"{s.name} ({s.unit}{band(s.band)})" for s in kind.states])
-    limits = ["unlimited" if a.limit is None else f"limit {_said(a.limit)}" for a in kind.inputs]
-    lines += _signals("inputs", [f"{a.name} ({a.unit}, {limit})" for a, limit in zip(kind.inputs, limits, strict=True)])
-    lines += _signals("disturbances", [f"{w.name} ({w.unit}, peak {_said(w.peak)})" for w in kind.disturbances])
-    lines += _signals("takes", [f"{s.name} ({s.unit})" for s in kind.takes])
-    lines += _signals("offers", [f"{s.name} ({s.unit}{band(s.band)})" for s in kind.offers])
-    lines += _signals("sensors", [f"{s.name} ({s.unit})" for s in kind.sensors])
-    lines += [f"  {key:<13} {text}" for key, text in kind.equations.items()]
-    lines.append(f"  {'modes alone':<13} {', '.join(_mode_text(m) for m in modes)} (1/s, before any feedback)")
+
+def _links_text(network: Network) -> list[str]:
+    lines: list[str] = []
+    counts = _counted_links(network)
+    most = {rule.name: rule.most for rule in network.rules}
+    for name in network.classes():
+        links = [(link, n) for link, n in counts if link.name == name and link.sort == "link" and not link.own_part]
+        lines.append(f"  {name}")
+        for link, count in links[:MOST_LINKS]:
+            times = f"{count} x " if network.members is not None else ""
+            limit = most.get(link.choice) if link.choice else None
+            if limit is None:
+                lines.append(f"    {times}{link_words(link, network)}")
+            else:
+                single = replace(link, strength=link.strength / limit)
+                lines.append(f"    {link_words(single, network)}, at most {limit} such into one unit")
+        if len(links) > MOST_LINKS:
+            lines.append(
+                f"    ... and {len(links) - MOST_LINKS} more strengths of this class (all of them with --json)"
+            )
+    return lines or ["  none: the units do not influence each other"]
+
+
+def _edges_text(network: Network) -> list[str]:
+    lines: list[str] = []
+    for edge in network.edges:
+        lines += ["", f"The {edge.side} end of the line"]
+        lines += [
+            f"  {unit.name}: a {unit.kind} at place {unit.at} instead of the {unit.instead_of}" for unit in edge.units
+        ]
+        for single in edge.links:
+            lines.append(f"  into place {single.to}, {single.link.name}: {link_words(single.link, network)}")
+        if not edge.units and not edge.links:
+            lines.append("  the pattern just ends: what would come from outside is not there")
     return lines
 
 
-def _place(at: int) -> str:
-    if at == 0:
-        return "in the same cell"
-    steps = "1 place" if abs(at) == 1 else f"{abs(at)} places"
-    return f"{steps} {'before' if at < 0 else 'behind'} (at {at})"
-
-
-def _link_text(link: Link, network: Network) -> str:
-    taken, offered = _units(link, network)
-    own = "minus the unit's own fresh value" if link.relative else "absolute"
-    late = f", up to {_said(link.delay)} s late" if link.delay else ", always fresh"
-    return (
-        f"    {link.source_kind}.{link.offer} {_place(link.at[0])} -> {link.kind}.{link.take}: "
-        f"strength {_said(link.strength)} ({taken} per {offered}), {own}{late}"
-    )
-
-
 def _intake_unit(name: str, network: Network) -> str:
-    units = {
-        f"({taken})/({offered})"
-        for link in network.links
-        if f"{link.kind}.{link.take}" == name
-        for taken, offered in [_units(link, network)]
-    }
+    units = {strength_unit(link, network) for link in network.links if f"{link.kind}.{link.take}" == name}
     return next(iter(units)) if len(units) == 1 else ""
 
 
-def _obstruction_text(found: Obstruction | None) -> list[str]:
+def _uniform_text(network: Network) -> list[str]:
+    if network.members is None:
+        places = "everywhere" if network.description == "rules" else "in every cell"
+        kinds = counted(len(network.kinds), "kind")
+        return [
+            f"Uniform: {kinds}, every intake bounded as above, the same {places}. What is left to the design is one "
+            "decay for all closed units."
+        ]
+    distinct = len(set(network.members.kind.tolist()))
+    sorts = len(set(network.members.form.tolist()))
+    return [
+        f"Uniform: {counted(distinct, 'different unit')} and {counted(sorts, 'different link')} make up "
+        "the network, every intake is bounded as above; equal ones are computed once. What is left to the "
+        "design is one decay for all closed units."
+    ]
+
+
+def _obstruction_text(found: Obstruction | None, tested: str) -> list[str]:
     if found is None:
         return [
-            "No obstruction found: every mode that does not decay is seen by a controller and reached by an actuator."
+            "No obstruction found: every mode that does not decay is seen by a controller and reached by an actuator.",
+            f"  looked at: {tested}",
         ]
-    direction = ", ".join(f"{name} {_mode_text(weight)}" for name, weight in found.direction.items())
+    weights = sorted(found.direction.items(), key=lambda item: -abs(item[1]))
+    direction = ", ".join(f"{name} {mode_text(weight)}" for name, weight in weights[:MOST_LINKS])
+    more = ", ..." if len(weights) > MOST_LINKS else ""
+    phase = ", ".join(f"{theta:.6g}" for theta in found.theta)
     return [
         f"OBSTRUCTION ({found.cause}): no local feedback can prove this network.",
-        f"  phase theta {found.theta[0]:.6g}, mode s = {_mode_text(found.s)} 1/s, direction {direction}",
+        f"  {f'phase theta {phase}, ' if phase else ''}mode s = {mode_text(found.s)} 1/s, direction {direction}{more}",
         f"  {found.advice}",
+        f"  looked at: {tested}",
     ]

@@ -1,8 +1,9 @@
-"""Linear expressions with units, read through a whitelist over Python's ``ast`` and never evaluated by it.
+"""Expressions with units, read through a whitelist over Python's ``ast`` and never evaluated by it.
 
-An expression is a sum of signals times constants. Constants are numbers and parameters joined by ``+ - * / **``,
-parentheses and ``sqrt abs min max sin cos exp``; arithmetic is exact except for irrational function values, which are
-rounded to 40 digits. Everything is held in SI units; ``coefficients_in`` converts to the declared units exactly.
+An expression is made of signals, numbers and parameters joined by ``+ - * / **``, parentheses and ``sqrt abs min max
+sin cos tanh exp sat deadzone``. It becomes a ``Formula``: exact coefficients of the signals, and nonlinear terms kept
+apart. Functions of constants are exact where their value is rational, otherwise rounded to 40 digits. Everything is
+held in SI units.
 
 Law: the dimension of every term of a sum is the same, and equals the one asked for; a zero fits every dimension.
 """
@@ -11,18 +12,21 @@ from __future__ import annotations
 
 import ast
 import warnings
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from fractions import Fraction
 
 from synth.base.errors import nearest
 from synth.base.units import NONE, Dimension, Unit, UnitError, dimension_text, parse_number
-from synth.network.constants import FUNCTIONS, LARGEST_BITS, PI_CONSTANT
+from synth.network.constants import FUNCTIONS, LARGEST_BITS, PI_CONSTANT, constant_power
+from synth.network.formula import Atom, Factor, Formula, Span, collected, product, whole_power
 
 LONGEST = 2000
 DEEPEST = 60
 
-_ACCEPTED = "accepted are names, numbers, + - * / **, parentheses and sqrt, abs, min, max, sin, cos, exp of constants"
+_ACCEPTED = (
+    "accepted are names, numbers, + - * / **, parentheses and sqrt, abs, min, max, sin, cos, tanh, exp, sat, deadzone"
+)
 
 
 class Refused(Exception):
@@ -31,31 +35,20 @@ class Refused(Exception):
     An empty sentence means that the reason has been told already (a name whose declaration has a problem).
     """
 
-    def __init__(self, sentence: str, offset: int) -> None:
-        """Keep the sentence and the character, counted from 0."""
+    def __init__(self, sentence: str, offset: int, length: int | None = None) -> None:
+        """Keep the sentence, the character (counted from 0) and how many characters are meant (None: a word)."""
         super().__init__(sentence)
         self.sentence = sentence
         self.offset = offset
-
-
-@dataclass(frozen=True)
-class Linear:
-    """``sum parts[name] * name + constant`` in SI units; ``dimension`` None is a plain zero, which fits everywhere."""
-
-    parts: Mapping[str, Fraction]
-    constant: Fraction
-    dimension: Dimension | None
-
-    def times(self, factor: Fraction, dimension: Dimension | None) -> Linear:
-        """The same expression times a number, with the dimension of the product."""
-        return Linear({name: c * factor for name, c in self.parts.items()}, self.constant * factor, dimension)
+        self.length = length
 
 
 @dataclass(frozen=True)
 class Scope:
     """The names an expression may use: parameters (SI value, dimension) and signals with their declared unit.
 
-    ``groups`` says for each signal what it is ('state', 'input', ...); ``allowed`` which of these may occur, and
+    ``uncertain`` names the parameters with a tolerance: they stay in the formula by name. ``groups`` says for each
+    signal what it is ('state', 'input', ...); ``allowed`` which of these may occur, and
     ``why_not`` ends the sentence that refuses one of the others.
     """
 
@@ -64,6 +57,7 @@ class Scope:
     groups: Mapping[str, str] = field(default_factory=dict)
     allowed: tuple[str, ...] = ("state", "input", "take", "disturbance")
     why_not: str = ""
+    uncertain: frozenset[str] = frozenset()
     broken: frozenset[str] = frozenset()  # names whose declaration has a problem of its own
 
 
@@ -124,7 +118,8 @@ class Evaluator:
 
     def refuse(self, sentence: str, node: ast.expr) -> Refused:
         """The reason against a node, at its place."""
-        return Refused(sentence, self.offset(node))
+        start = self.offset(node)
+        return Refused(sentence, start, self.character(node.end_col_offset) - start)
 
     def terms(self, node: ast.expr) -> list[tuple[int, ast.expr]]:
         """The terms of a sum with their signs, left to right; a single term counts as a sum of one."""
@@ -139,10 +134,15 @@ class Evaluator:
                 found.append((sign, part))
         return found
 
-    def total(self, node: ast.expr, wanted: Dimension | None, wanted_text: str, depth: int) -> Linear:
+    def span(self, node: ast.expr) -> Span:
+        """Where ``node`` stands in the text."""
+        start = self.offset(node)
+        return start, self.character(node.end_col_offset) - start
+
+    def total(self, node: ast.expr, wanted: Dimension | None, wanted_text: str, depth: int) -> Formula:
         """The value of a sum; every term must have the dimension ``wanted`` (None: that of the first term)."""
-        parts: dict[str, Fraction] = {}
-        constant = Fraction(0)
+        pairs = []
+        spans: dict[Atom, Span] = {}
         first = ""
         for sign, term in self.terms(node):
             value = self.value(term, depth)
@@ -151,10 +151,9 @@ class Evaluator:
                     wanted, first = value.dimension, self.words(term)
                 elif value.dimension != wanted:
                     raise self.refuse(self.mismatch(term, value.dimension, wanted, first, wanted_text), term)
-            for name, c in value.parts.items():
-                parts[name] = parts.get(name, Fraction(0)) + sign * c
-            constant += sign * value.constant
-        return Linear(parts, constant, wanted)
+            pairs += [(atom, sign * c) for atom, c in value.terms]
+            spans |= {atom: span for atom, span in value.spans.items() if atom not in spans}
+        return collected(pairs, wanted, spans)
 
     def mismatch(self, term: ast.expr, has: Dimension, wanted: Dimension, first: str, wanted_text: str) -> str:
         """The sentence for a term whose unit does not fit into its sum."""
@@ -167,7 +166,7 @@ class Evaluator:
             sentence += "; a number has no unit in an equation, so give it a name and a unit under 'parameters'"
         return sentence
 
-    def value(self, node: ast.expr, depth: int) -> Linear:
+    def value(self, node: ast.expr, depth: int) -> Formula:
         """The value of one node."""
         if depth > DEEPEST:
             raise self.refuse("this expression is nested too deeply; split it with parameters", node)
@@ -177,23 +176,22 @@ class Evaluator:
             return self.name(node)
         if isinstance(node, ast.UnaryOp) and isinstance(node.op, (ast.USub, ast.UAdd)):
             inner = self.value(node.operand, depth + 1)
-            return inner.times(Fraction(-1 if isinstance(node.op, ast.USub) else 1), inner.dimension)
+            return inner.scaled(Fraction(-1 if isinstance(node.op, ast.USub) else 1), inner.dimension)
         if isinstance(node, ast.Call):
             return self.call(node, depth)
         if isinstance(node, ast.BinOp):
             if isinstance(node.op, (ast.Add, ast.Sub)):
                 return self.total(node, None, "", depth + 1)
-            if isinstance(node.op, ast.Mult):
+            if isinstance(node.op, (ast.Mult, ast.Div)):
                 return self.product(node, depth)
-            if isinstance(node.op, ast.Div):
-                return self.quotient(node, depth)
             if isinstance(node.op, ast.Pow):
                 return self.power(node, depth)
             if isinstance(node.op, ast.BitXor):
-                raise self.refuse("'^' is not a power in an expression; write **", node)
+                sign = self.text.find("^", self.character(node.left.end_col_offset))
+                raise Refused("'^' is not a power in an expression; write **", sign, 1)
         raise self.refuse(f"{self.words(node)!r} is not accepted in an expression; {_ACCEPTED}", node)
 
-    def number(self, node: ast.Constant) -> Linear:
+    def number(self, node: ast.Constant) -> Formula:
         """A decimal number, exactly as written."""
         if isinstance(node.value, bool) or not isinstance(node.value, (int, float)):
             raise self.refuse(f"{self.words(node)!r} is not accepted in an expression; {_ACCEPTED}", node)
@@ -201,100 +199,109 @@ class Evaluator:
             value = parse_number(self.text[self.offset(node) : self.character(node.end_col_offset)])
         except UnitError as error:
             raise self.refuse(f"{error}; write a decimal number such as 0.5 or 1e-3", node) from None
-        return Linear({}, value, NONE if value else None)
+        return Formula.number(value, NONE if value else None)
 
-    def name(self, node: ast.Name) -> Linear:
+    def name(self, node: ast.Name) -> Formula:
         """A parameter, a signal or pi."""
-        scope = self.scope
+        scope, span = self.scope, self.span(node)
         if node.id in scope.parameters:
             value, dimension = scope.parameters[node.id]
-            return Linear({}, value, dimension)
+            if node.id in scope.uncertain:
+                return Formula.factor(Factor("parameter", node.id, dimension=dimension, span=span))
+            return Formula.number(value, dimension)
         if node.id in scope.signals:
             group = scope.groups.get(node.id, "state")
             if group not in scope.allowed:
                 raise self.refuse(f"the {group} {node.id!r} cannot be used here; {scope.why_not}", node)
-            return Linear({node.id: Fraction(1)}, Fraction(0), scope.signals[node.id].dimension)
+            return Formula.factor(Factor("signal", node.id, dimension=scope.signals[node.id].dimension, span=span))
         if node.id in scope.broken:
             raise Refused("", 0)
         if node.id == "pi":
-            return Linear({}, PI_CONSTANT, NONE)
+            return Formula.number(PI_CONSTANT)
         known = [*scope.parameters, *scope.signals, *FUNCTIONS]
         usable = [n for n in known if scope.groups.get(n, scope.allowed[0]) in scope.allowed and n not in FUNCTIONS]
         raise self.refuse(
             f"unknown name {node.id!r}{nearest(node.id, known)}; known here are {', '.join(usable)}", node
         )
 
-    def product(self, node: ast.BinOp, depth: int) -> Linear:
-        """A product, of which at most one factor may hold signals."""
+    def product(self, node: ast.BinOp, depth: int) -> Formula:
+        """A product or a quotient."""
         left, right = self.value(node.left, depth + 1), self.value(node.right, depth + 1)
-        if left.parts and right.parts:
-            raise self.nonlinear(node)
-        dimension = _joined(left.dimension, right.dimension, 1)
-        if right.parts:
-            left, right = right, left
-        self.bounded(right.constant, node)
-        return left.times(right.constant, dimension)
-
-    def quotient(self, node: ast.BinOp, depth: int) -> Linear:
-        """A quotient by a constant other than zero."""
-        left, right = self.value(node.left, depth + 1), self.value(node.right, depth + 1)
-        if right.parts:
-            raise self.nonlinear(node)
-        if right.constant == 0:
+        sign = 1 if isinstance(node.op, ast.Mult) else -1
+        if sign < 0 and not right.terms:
             raise self.refuse(f"{self.words(node.right)!r} is zero and cannot divide", node.right)
-        self.bounded(right.constant, node)
-        return left.times(1 / right.constant, _joined(left.dimension, right.dimension, -1))
+        for part in (left, right):
+            if part.plain is not None:
+                self.bounded(part.plain, node)
+        return product(left, right, _joined(left.dimension, right.dimension, sign), self.span(node), sign)
 
-    def power(self, node: ast.BinOp, depth: int) -> Linear:
-        """A whole power of a constant (or the first power of anything)."""
+    def power(self, node: ast.BinOp, depth: int) -> Formula:
+        """A power with a constant exponent; of a signal also one that is not whole (the base must then stay
+        positive)."""
         base, exponent = self.value(node.left, depth + 1), self.value(node.right, depth + 1)
-        if exponent.parts or (base.parts and exponent.constant != 1):
-            raise self.nonlinear(node)
-        n = exponent.constant
-        if n.denominator != 1 or abs(n) > 12 or exponent.dimension not in (None, NONE):
-            raise self.refuse("a power must be a whole number from -12 to 12; roots are written sqrt( )", node.right)
-        if base.parts:
+        n = exponent.plain
+        if n is None or exponent.dimension not in (None, NONE) or abs(n) > 12:
+            raise self.refuse("a power must be a number from -12 to 12 without unit and tolerance", node.right)
+        if n == 1:
             return base
-        if base.constant == 0 and n <= 0:
+        raised = None if base.dimension is None else [n * d for d in base.dimension]
+        if raised is not None and any(d.denominator != 1 for d in raised):
+            raise self.refuse(
+                f"the power {self.words(node.right)} of the unit {dimension_text(base.dimension or NONE)} is not whole",
+                node.right,
+            )
+        dimension = None if raised is None else tuple(int(d) for d in raised)
+        if base.plain == 0 and n <= 0:
             raise self.refuse(f"{self.words(node.left)!r} is zero and cannot have the power {n}", node)
-        self.bounded(base.constant, node, 12)
-        dimension = None if base.dimension is None else tuple(int(n) * d for d in base.dimension)
-        return Linear({}, base.constant ** int(n), dimension)
+        if base.plain is not None:
+            self.bounded(base.plain, node, 12)
+            try:
+                return Formula.number(constant_power(base.plain, n), dimension)
+            except UnitError as error:
+                raise self.refuse(str(error), node) from None
+        if n == 0:
+            return Formula.number(Fraction(1))
+        span = self.span(node)
+        if n.denominator == 1:
+            return whole_power(base, int(n), dimension, span)
+        return Formula.factor(Factor("power", "", (base,), n, dimension or NONE, span))
 
-    def call(self, node: ast.Call, depth: int) -> Linear:
-        """A function of constants."""
+    def call(self, node: ast.Call, depth: int) -> Formula:
+        """A function; exact or rounded to 40 digits where its arguments are constants."""
         name = node.func.id if isinstance(node.func, ast.Name) else ""
         if name not in FUNCTIONS or node.keywords or any(isinstance(a, ast.Starred) for a in node.args):
             raise self.refuse(
                 f"{self.words(node.func)!r} is not a function here{nearest(name, FUNCTIONS)}; {_ACCEPTED}", node
             )
         values = [self.value(argument, depth + 1) for argument in node.args]
-        if any(value.parts for value in values):
-            raise self.nonlinear(node)
-        several = name in ("min", "max")
-        if (several and len(values) < 2) or (not several and len(values) != 1):
-            raise self.refuse(f"{name} takes {'two or more arguments' if several else 'one argument'}", node)
+        least, most, said = {"min": (2, 99, "two or more arguments"), "max": (2, 99, "two or more arguments"),
+                             "sat": (2, 2, "a signal and its limit"), "deadzone": (2, 2, "a signal and its width")
+                             }.get(name, (1, 1, "one argument"))  # fmt: skip
+        if not least <= len(values) <= most:
+            raise self.refuse(f"{name} takes {said}", node)
         dimensions = {value.dimension for value in values if value.dimension is not None}
         if len(dimensions) > 1:
             raise self.refuse(f"the arguments of {name} have different units", node)
-        dimension = next(iter(dimensions), None)
-        function: Callable[..., tuple[Fraction, Dimension | None]] = FUNCTIONS[name]
         for value in values:
-            self.bounded(value.constant, node)
+            if value.plain is not None:
+                self.bounded(value.plain, node)
+        if name in ("sat", "deadzone") and (values[1].plain is None or values[1].plain <= 0):
+            raise self.refuse(f"the second argument of {name} must be a constant above zero, without tolerance", node)
         try:
-            result, dimension = function(dimension, *(value.constant for value in values))
+            # What is wrong with the unit is found by the constant one or zero in the place of the signals.
+            constants = [Fraction(0) if value.plain is None else value.plain for value in values]
+            result, dimension = FUNCTIONS[name](next(iter(dimensions), None), *constants)
         except UnitError as error:
             raise self.refuse(str(error), node) from None
-        return Linear({}, result, dimension)
+        if all(value.plain is not None for value in values):
+            return Formula.number(result, dimension)
+        factor = Factor(name, "", tuple(values), dimension=self.image(name, dimensions), span=self.span(node))
+        return Formula.factor(factor)
 
-    def nonlinear(self, node: ast.expr) -> Refused:
-        """The reason against a term that is not linear."""
-        return self.refuse(
-            f"the term {self.words(node)!r} is not linear in the signals; this version accepts signals times "
-            "constants: "
-            "linearise it about the operating point",
-            node,
-        )
+    def image(self, name: str, dimensions: set[Dimension]) -> Dimension:
+        """The dimension of a function's value."""
+        of = next(iter(dimensions), NONE)
+        return tuple(d // 2 for d in of) if name == "sqrt" else of
 
     def bounded(self, value: Fraction, node: ast.expr, factor: int = 1) -> None:
         """Refuse constants whose exact form grows without bound."""
@@ -308,23 +315,11 @@ def _joined(left: Dimension | None, right: Dimension | None, sign: int) -> Dimen
     return tuple(a + sign * b for a, b in zip(left, right, strict=True))
 
 
-def read_linear(text: str, scope: Scope, wanted: Unit | None = None, wanted_text: str = "") -> Linear:
-    """Read ``text`` as a linear expression without constant offset; Refused with a located sentence if it is none.
+def read_formula(text: str, scope: Scope, wanted: Unit | None = None, wanted_text: str = "") -> Formula:
+    """Read ``text`` as a formula; Refused with a located sentence if it is none.
 
     Every term must have the dimension of ``wanted``, which is called ``wanted_text`` in messages; without ``wanted``
     the first term decides.
     """
     walker = Evaluator(text, scope)
-    result = walker.total(walker.tree, None if wanted is None else wanted.dimension, wanted_text, 0)
-    if result.constant != 0:
-        raise Refused(
-            "this expression has a constant part; the model is about differences from the operating point, "
-            "so leave it out, or make it a disturbance with a peak",
-            walker.lead,
-        )
-    return result
-
-
-def coefficients_in(value: Linear, names: Mapping[str, Unit], result: Unit) -> list[Fraction]:
-    """The coefficients of ``names`` when each is counted in its declared unit and the value in ``result``'s unit."""
-    return [value.parts.get(name, Fraction(0)) * unit.factor / result.factor for name, unit in names.items()]
+    return walker.total(walker.tree, None if wanted is None else wanted.dimension, wanted_text, 0)

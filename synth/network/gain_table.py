@@ -12,7 +12,7 @@ import json
 import os
 import re
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 
 from synth.base.errors import InputError, Place, nearest
@@ -22,7 +22,7 @@ from synth.network.gains import Gains, gain_set
 from synth.network.model import Kind, Network
 from synth.network.reader import load_text
 from synth.network.sections import sized
-from synth.network.yaml_map import Listing, Node, Problems, Scalar, Table, from_python, parse
+from synth.network.yaml_map import Listing, Node, Problems, Scalar, Source, Table, from_python, parse
 
 COLUMNS = (
     "kind", "actuator", "signal", "gain", "gain_unit", "actuator_unit", "signal_unit", "sign_convention", "period_s",
@@ -51,6 +51,7 @@ def read_gains(path: str | os.PathLike[str], network: Network) -> Gains:
     """
     file, problems = os.fspath(path), Problems()
     text = load_text(file, "gain table", "a gain table (CSV or JSON)")
+    problems.source = Source(file, text)
     rows = _json_rows(text, file, problems) if text.lstrip().startswith("{") else _csv_rows(text, file, problems)
     if problems.found:
         raise InputError(problems.in_order())
@@ -247,7 +248,7 @@ def split_csv(text: str, file: str, problems: Problems) -> list[list[_Cell]]:
             else:
                 plain = re.compile(r"[^,\r\n]*").match(text, at)
                 cell, at = (plain[0], plain.end()) if plain else ("", at)
-            record.append(_Cell(cell, place))
+            record.append(_Cell(cell, replace(place, length=max(len(cell), 1))))
             if not text.startswith(",", at):
                 break
             at += 1
@@ -276,7 +277,7 @@ def _json_rows(text: str, file: str, problems: Problems) -> list[_Row]:
     except (ValueError, RecursionError) as error:
         problems.add(f"this JSON cannot be read: {error}.", Place(file, 1, 1))
         return []
-    trial = Problems()
+    trial = Problems(source=problems.source)
     root = parse(text.replace("\t", " "), file, trial)  # a tab stands only between JSON values and may be a space
     twice = [problem for problem in trial.found if "stands twice" in problem.sentence]
     if root is None:

@@ -6,14 +6,17 @@ from collections.abc import Mapping
 from fractions import Fraction
 
 from synth.base.errors import nearest
-from synth.base.exact import ExactMatrix
-from synth.base.units import Dimension, Unit, UnitError, parse_quantity
-from synth.network.equations import Linear, coefficients_in
-from synth.network.matrices import read_matrices
-from synth.network.model import Actuator, Disturbance, Kind, Signal
-from synth.network.outputs import Draft, Output, positive, read_expression, read_offers, read_sensors
-from synth.network.sections import Declared, Section, named_entries, quantity, section, sized, text_of, unit_of
-from synth.network.yaml_map import Entry, Problems, Scalar, Table
+from synth.base.units import Unit, UnitError, parse_quantity
+from synth.network.assembling import Model, assembled
+from synth.network.files_of_matrices import plant_matrices, plant_object, read_matrix_file
+from synth.network.formula import Formula
+from synth.network.intervals import Interval
+from synth.network.matrices import UncertainEntry, read_matrices
+from synth.network.model import Kind
+from synth.network.outputs import Draft, positive, read_expression, read_offers, read_sensors
+from synth.network.sections import Declared, Section, named_entries, section, sized, text_of, unit_of
+from synth.network.tolerances import has_tolerance, parse_tolerance
+from synth.network.yaml_map import Entry, Foreign, Node, Problems, Scalar, Table
 
 SECOND = Unit(Fraction(1), tuple(int(i == 2) for i in range(7)))
 
@@ -26,22 +29,41 @@ def read_kind(entry: Entry, problems: Problems) -> Kind | None:
         return None
     groups = [part.get(g) for g in ("parameters", "states", "inputs", "disturbances", "takes")]
     written = frozenset(name for group in groups if isinstance(group, Table) for name in group.entries)
-    draft = Draft(entry.key, problems, written=written)
+    draft = Draft(entry.key, problems, written=written, pointed=part.get("operating_point") is not None)
     _parameters(part, draft)
     _states(part, draft)
     _inputs(part, draft)
     _disturbances(part, draft)
     _takes(part, draft)
-    matrices = part.get("matrices")
+    if part.get("states") is None:
+        return None  # said already; everything below would be about missing states
+    ways = [way for way in ("equations", "matrices", "file", "plant") if part.get(way) is not None]
+    matrices = read_matrix_file(file, problems) if (file := part.get("file")) is not None else part.get("matrices")
     given = section(matrices, "matrices", problems, "{A: [[0, 1], [0, -1]], B: [[0], [1]]}")
-    read_offers(part, draft, given is not None and given.get("H") is not None)
-    read_sensors(part, draft, given is not None and given.get("C") is not None)
-    if matrices is not None and part.get("equations") is not None:
-        problems.add(f"{entry.value.path}: give either 'equations' or 'matrices', not both.", part.table)
+    plant = plant_object(part.get("plant"), problems)
+    read_offers(part, draft, _by_matrix(given, "H", plant, part.get("offers"), bool({"file", "plant"} & set(ways))))
+    read_sensors(part, draft, _by_matrix(given, "C", plant, part.get("sensors"), bool({"file", "plant"} & set(ways))))
+    if len(ways) > 1:
+        problems.add(f"{entry.value.path}: give one of {' and '.join(map(repr, ways))}, not more.", entry)
         return None
-    if matrices is not None:
+    if "plant" in ways:
+        given = plant_matrices(plant, part, draft) if plant is not None and problems.count == before else None
+    if ways and ways != ["equations"]:
         return _from_matrices(given, part, draft, before)
     return _from_equations(part, draft, before)
+
+
+def _by_matrix(given: Section | None, name: str, plant: Foreign | None, outputs: Node | None, unread: bool) -> bool:
+    """Whether a matrix gives the rows of the offers or sensors; of a plant, a mapping names its outputs with units.
+
+    ``unread``: the matrices stand elsewhere; if that has a problem, what they would give is not asked for here.
+    """
+    if plant is not None or (unread and given is None):
+        written = outputs.entries.values() if isinstance(outputs, Table) else ()
+        return isinstance(outputs, Table) and not any(
+            isinstance(entry.value, Table) and "is" in entry.value.entries for entry in written
+        )
+    return given is not None and given.get(name) is not None
 
 
 def _fresh(name: str, draft: Draft, where: Entry) -> bool:
@@ -66,9 +88,8 @@ def _parameters(part: Section, draft: Draft) -> None:
             continue
         if isinstance(node, Scalar) and isinstance(node.value, Fraction):
             draft.parameters[entry.key] = (node.value, Unit().dimension)
-        elif "+-" in text or "±" in text:
-            quantity(node, Declared("1", Unit()), draft.problems)  # records that tolerances are not honoured
-            draft.parameters[entry.key] = _nominal(text)
+        elif has_tolerance(text):
+            _with_tolerance(entry, text, draft)
         else:
             try:
                 value, unit, _ = parse_quantity(text)
@@ -77,13 +98,23 @@ def _parameters(part: Section, draft: Draft) -> None:
                 draft.problems.add(f"{node.path}: {error}; accepted is for example '0.5 s'.", node)
 
 
-def _nominal(text: str) -> tuple[Fraction, Dimension]:
-    """The value before the tolerance, so that the equations do not report its name as unknown as well."""
+def _with_tolerance(entry: Entry, text: str, draft: Draft) -> None:
+    """A parameter that lies anywhere in a range; one of width zero is an ordinary one."""
+    node = entry.value
     try:
-        value, unit, _ = parse_quantity(text.replace("±", "+-").split("+-")[0])
-    except UnitError:
-        return Fraction(1), Unit().dimension
-    return value * unit.factor, unit.dimension
+        range_ = parse_tolerance(text)
+    except UnitError as error:
+        draft.problems.add(f"{node.path}: {error}.", node)
+        return
+    low, nominal, high = (value * range_.unit.factor for value in (range_.low, range_.nominal, range_.high))
+    if not all(map(sized, (low, nominal, high))):
+        draft.problems.add(
+            f"{node.path}: {text[:40]} is too large or too small to compute with (1e-100 to 1e100).", node
+        )
+        return
+    draft.parameters[entry.key] = (nominal, range_.unit.dimension)
+    if low < high:
+        draft.ranges[entry.key] = Interval(low, high)
 
 
 def _declared(entry: Entry, sort: str, draft: Draft) -> tuple[Declared | None, Section | None]:
@@ -136,9 +167,11 @@ def _disturbances(part: Section, draft: Draft) -> None:
 
 def _takes(part: Section, draft: Draft) -> None:
     for entry in named_entries(part.get("takes"), draft.problems, "{ahead: m/s^2}"):
-        declared, _ = _declared(entry, "take", draft)
+        declared, details = _declared(entry, "take", draft)
         if _fresh(entry.key, draft, entry) and declared is not None:
             draft.takes[entry.key] = declared
+            band = details.get("band") if details else None
+            draft.take_bands[entry.key] = positive(band, declared, "the band", draft.problems)
 
 
 def _from_equations(part: Section, draft: Draft, before: int) -> Kind | None:
@@ -148,7 +181,7 @@ def _from_equations(part: Section, draft: Draft, before: int) -> Kind | None:
     if not isinstance(node, Table):
         draft.problems.add(f"{node.path}: a mapping is expected here, such as '{{level': inflow/area}}'.", node)
         return None
-    rows: dict[str, Linear] = {}
+    rows: dict[str, Formula] = {}
     texts: dict[str, str] = {}
     keys = [f"{name}'" for name in draft.states]
     for key, entry in node.entries.items():
@@ -165,9 +198,7 @@ def _from_equations(part: Section, draft: Draft, before: int) -> Kind | None:
             continue
         state = draft.states[key[:-1]]
         rate = Declared(f"{state.text} per second", state.unit / SECOND)
-        value = read_expression(
-            entry.value, draft.scope(("state", "input", "take", "disturbance")), rate, draft.problems
-        )
+        value = read_expression(entry.value, draft.scope(("state", "input", "take", "disturbance")), rate, draft)
         if value is not None and isinstance(entry.value, Scalar):
             rows[key[:-1]] = value
             texts[key] = entry.value.text
@@ -179,32 +210,17 @@ def _from_equations(part: Section, draft: Draft, before: int) -> Kind | None:
     if draft.problems.count > before:
         return None
 
-    def matrix(table: dict[str, Declared]) -> ExactMatrix:
-        names = {n: d.unit for n, d in table.items()}
-        lines = [coefficients_in(rows[s], names, d.unit / SECOND) for s, d in draft.states.items()]
-        for line, state in zip(lines, draft.states, strict=True):
-            if not all(map(sized, line)):
-                draft.problems.add(
-                    f"{node.path}.{state}': a coefficient is too large or too small to compute with.",
-                    node.entries[f"{state}'"],
-                )
-        return ExactMatrix.of(lines, (len(draft.states), len(table)))
-
-    blocks = {
-        "A": matrix(draft.states),
-        "B": matrix(draft.inputs),
-        "D": matrix(draft.takes),
-        "E": matrix(draft.disturbances),
-    }
-    return _kind(draft, blocks, part, before, texts)
+    return assembled(draft, Model(part.table, rows, node, texts, part.get("operating_point")), before)
 
 
 def _from_matrices(given: Section | None, part: Section, draft: Draft, before: int) -> Kind | None:
-    if part.get("parameters") is not None:
-        draft.problems.add(
-            f"{part.table.path}.parameters: parameters belong to equations; matrices carry numbers. Take them out.",
-            part.get("parameters"),
-        )
+    for key, what in (("parameters", "parameters belong"), ("operating_point", "an operating point belongs")):
+        if part.get(key) is not None:
+            draft.problems.add(
+                f"{part.table.path}.{key}: {what} to equations; matrices carry numbers. Take "
+                f"{'them' if key == 'parameters' else 'it'} out.",
+                part.get(key),
+            )
     if given is None:
         return None
     sizes = {
@@ -212,40 +228,6 @@ def _from_matrices(given: Section | None, part: Section, draft: Draft, before: i
         "disturbances": len(draft.disturbances), "offers": len(draft.offers), "sensors": len(draft.sensors),
     }  # fmt: skip
     declared_whole = draft.problems.count == before
-    blocks = read_matrices(given, sizes, declared_whole)
-    return None if draft.problems.count > before else _kind(draft, blocks, part, before, {})
-
-
-def _kind(
-    draft: Draft, blocks: dict[str, ExactMatrix], part: Section, before: int, texts: dict[str, str]
-) -> Kind | None:
-    """Put the parts together; rows that expressions give are converted to declared units here."""
-
-    def rows(outputs: dict[str, Output], table: dict[str, Declared]) -> ExactMatrix:
-        names = {n: d.unit for n, d in table.items()}
-        lines = [coefficients_in(o.value, names, o.declared.unit) for o in outputs.values() if o.value is not None]
-        if not all(sized(v) for line in lines for v in line):
-            draft.problems.add(
-                f"{part.table.path}: a coefficient of an offer or a sensor is too large or too small to compute with.",
-                part.table,
-            )
-        return ExactMatrix.of(lines, (len(outputs), len(table)))
-
-    if "H" not in blocks:
-        blocks |= {"H": rows(draft.offers, draft.states), "F": rows(draft.offers, draft.takes)}
-        blocks |= {"Fw": rows(draft.offers, draft.disturbances)}
-    if "C" not in blocks:
-        blocks |= {"C": rows(draft.sensors, draft.states), "N": rows(draft.sensors, draft.takes)}
-    if draft.problems.count > before:
-        return None
-    return Kind(
-        name=draft.name,
-        states=tuple(Signal(n, d.text, draft.bands[n]) for n, d in draft.states.items()),
-        inputs=tuple(Actuator(n, d.text, draft.limits[n]) for n, d in draft.inputs.items()),
-        disturbances=tuple(Disturbance(n, d.text, draft.peaks[n]) for n, d in draft.disturbances.items()),
-        takes=tuple(Signal(n, d.text) for n, d in draft.takes.items()),
-        offers=tuple(Signal(n, o.declared.text, o.band) for n, o in draft.offers.items()),
-        sensors=tuple(Signal(n, o.declared.text) for n, o in draft.sensors.items()),
-        equations=texts,
-        **blocks,
-    )
+    uncertain: list[UncertainEntry] = []
+    blocks = read_matrices(given, sizes, declared_whole, uncertain)
+    return assembled(draft, Model(part.table, blocks=blocks, uncertain=tuple(uncertain)), before)

@@ -12,13 +12,25 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
+from functools import cached_property
 from typing import TYPE_CHECKING
 
+from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.base.provenance import canonical, sha256
+from synth.network.layout import Edge, Members, Rule
 
 if TYPE_CHECKING:
     import networkx as nx
+
+    from synth.network.dynamics import Dynamics
+
+_DESCRIPTIONS = {
+    "pattern": ("a pattern", "patterns"),
+    "edge pattern": ("a pattern with an edge", "edge patterns"),
+    "rules": ("rules", "networks given by rules"),
+    "members": ("members", "members"),
+}
 
 
 @dataclass(frozen=True)
@@ -49,6 +61,19 @@ class Disturbance:
 
 
 @dataclass(frozen=True)
+class SelfLink:
+    """An internal connection of a unit to itself that stands for a tolerance or a nonlinear term (theory section 6).
+
+    ``sort`` is 'tolerance' or 'curve'; ``strength`` bounds |what is taken| / |what is offered| at every time.
+    """
+
+    offer: str
+    take: str
+    strength: Fraction
+    sort: str
+
+
+@dataclass(frozen=True)
 class Kind:
     """One kind of unit: its signals and its exact matrices (shapes by number of states n, inputs m, sensors p, ...)."""
 
@@ -69,6 +94,18 @@ class Kind:
     F: ExactMatrix  # offers x takes
     Fw: ExactMatrix  # offers x disturbances
     equations: Mapping[str, str] = field(default_factory=dict)
+    Fu: ExactMatrix | None = None  # offers x inputs: feed-through from the unit's own commands (None: none)
+    inner: tuple[SelfLink, ...] = ()  # what tolerances and nonlinear terms add; every network of this kind has them
+    dynamics: Dynamics | None = field(
+        default=None, compare=False, repr=False
+    )  # the equations as written, if not linear
+
+    def self_links(self, dimension: int) -> tuple[Link, ...]:
+        """``inner`` as links of a network whose links have ``dimension`` whole numbers in ``at`` (all zero here)."""
+        at = (0,) * dimension
+        return tuple(
+            Link(s.take, self.name, s.offer, at, self.name, s.take, s.strength, sort=s.sort) for s in self.inner
+        )
 
     def index(self, group: str, name: str) -> int:
         """Position of ``name`` among the ``group`` ('states', 'inputs', ...); KeyError if it is not there."""
@@ -85,6 +122,17 @@ class Link:
     ``strength`` multiplies the neighbour's offered signal; ``own_strength`` multiplies the unit's own fresh value,
     which is subtracted (equal to ``strength`` for a relative link as written, zero for an absolute one).
     ``delay`` bounds the age, in seconds, of the neighbour's value that is used; zero means always fresh.
+    ``sort`` says where the link comes from: 'link' is a connection the user wrote; 'tolerance' and 'curve' are
+    self-links (``at`` all zero) that stand for an uncertain parameter or a nonlinear term; they are never scaled as
+    couplings. ``at`` has one whole number per dimension of the pattern, and none in networks given by members or rules.
+
+    ``weakens`` (case R2): the strength may be anything from zero to ``strength``, changing at any time; the row entry
+    is p max(|strength| s_source, |own_strength| s_self) with the own part folded. ``own_part``: a self-link that
+    carries the unit's own value of a relative link which is not folded (case R3, or the width of an interval of
+    strengths). ``choice``: links of one kind that share a choice are alternatives, and a row counts the largest of
+    their terms only.
+
+    Law: taken literally, the links of one written link are the member of its class with the largest absolute strength.
     """
 
     name: str
@@ -96,6 +144,10 @@ class Link:
     strength: Fraction
     own_strength: Fraction = Fraction(0)
     delay: Fraction = Fraction(0)
+    sort: str = "link"
+    weakens: bool = False
+    own_part: bool = False
+    choice: str = ""
 
     @property
     def relative(self) -> bool:
@@ -130,7 +182,13 @@ class SimulationPlan:
 
 @dataclass(frozen=True)
 class Network:
-    """A cell with one unit of each kind, repeated along the lattice Z^dimension without end."""
+    """Units of some kinds and the links between them, by one of four descriptions (theory section 1).
+
+    'pattern': a cell with one unit of each kind, repeated along the lattice Z^dimension without end.
+    'edge pattern': the same on half lines, with the ``edges``; ``cell`` names the kinds that make up the cell.
+    'rules': every wiring in which no unit receives more than its ``rules`` allow, of any size, rewired at any time.
+    'members': the units and links of ``members``; ``links`` then holds each sort of link once.
+    """
 
     title: str
     kinds: tuple[Kind, ...]
@@ -140,11 +198,50 @@ class Network:
     dimension: int = 1
     description: str = "pattern"
     file: str | None = None
+    edges: tuple[Edge, ...] = ()
+    cell: tuple[str, ...] | None = None
+    rules: tuple[Rule, ...] = ()
+    members: Members | None = None
 
     @property
     def units(self) -> int | None:
-        """Number of units, None for a pattern: it has no end."""
-        return None
+        """Number of units of explicit members; None where there is no end or any number."""
+        return None if self.members is None else len(self.members.names)
+
+    @property
+    def cell_kinds(self) -> tuple[Kind, ...]:
+        """The kinds of which every cell of the pattern has one unit (all, where no edge adds others)."""
+        return self.kinds if self.cell is None else tuple(kind for kind in self.kinds if kind.name in self.cell)
+
+    def refuse_beyond(self, stage: str, *supported: str) -> None:
+        """Raise InputError unless the description is one of ``supported``; ``stage`` names the work: 'design'."""
+        if self.description in supported:
+            return
+        given, plural = _DESCRIPTIONS[self.description]
+        offered = " and ".join(_DESCRIPTIONS[name][1] for name in supported)
+        raise InputError(
+            f"this network is given by {given}; {stage} of {plural} is not offered by this version "
+            f"({offered or 'nothing'} {'are' if offered else 'is'})."
+        )
+
+    def refuse_beyond_fixed_links(self, stage: str) -> None:
+        """Raise InputError unless this is a pattern of links whose strengths do not weaken and are no alternatives.
+
+        The gain rows of links that weaken (case R2) or are alternatives (rules) are not sums, so the stages that work
+        with sums must not take them.
+        """
+        self.refuse_beyond(stage, "pattern")
+        for link in self.links:
+            if link.weakens or link.choice:
+                raise InputError(
+                    f"link {link.name!r} may weaken down to zero; {stage} with such links is not offered by this "
+                    "version: write a fixed strength, or an interval that does not reach zero."
+                )
+
+    def without_self_links(self) -> Network:
+        """The same network with every tolerance at its middle and every nonlinear term on its centre line."""
+        still = tuple(link if link.sort == "link" else replace(link, strength=Fraction(0)) for link in self.links)
+        return replace(self, links=still)
 
     def kind(self, name: str) -> Kind:
         """The kind of that name; KeyError if there is none."""
@@ -155,7 +252,7 @@ class Network:
 
     def classes(self) -> tuple[str, ...]:
         """Names of the link classes in order of first appearance."""
-        return tuple(dict.fromkeys(link.name for link in self.links))
+        return tuple(dict.fromkeys(link.name for link in self.links if link.sort == "link"))
 
     def scaled(self, factor: Fraction, classes: tuple[str, ...] | None = None, own_parts: bool = True) -> Network:
         """The same network with link strengths times ``factor`` (of the given classes, or all).
@@ -165,74 +262,54 @@ class Network:
         changed = tuple(
             replace(
                 link,
-                strength=link.strength * factor,
+                strength=link.strength * factor if own_parts or not link.own_part else link.strength,
                 own_strength=link.own_strength * factor if own_parts else link.own_strength,
             )
-            if classes is None or link.name in classes
+            if link.sort == "link" and (classes is None or link.name in classes)
             else link
             for link in self.links
         )
-        return replace(self, links=changed)
+        edges = tuple(
+            replace(
+                edge,
+                links=tuple(
+                    replace(
+                        e, link=replace(self, links=(e.link,), edges=()).scaled(factor, classes, own_parts).links[0]
+                    )
+                    for e in edge.links
+                ),
+            )
+            for edge in self.edges
+        )
+        return replace(self, links=changed, edges=edges)
 
     def model_document(self) -> dict[str, object]:
-        """Exact plain data of everything a proof is about (no title, no goal, no simulation)."""
-        return {
-            "description": self.description,
-            "dimension": self.dimension,
-            "kinds": [_kind_document(kind) for kind in self.kinds],
-            "links": [_link_document(link) for link in self.links],
-        }
+        """Exact plain data of everything a proof is about (no title, no goal, no simulation).
 
-    @property
+        Kinds and links of a pattern stand in the order of the file; of rules and members, where order means nothing,
+        they are sorted.
+        """
+        from synth.network.document import model_document
+
+        return model_document(self)
+
+    @cached_property
     def hash(self) -> str:
         """SHA-256 of the canonical model document: equal for equal networks however they were written."""
         return sha256(canonical(self.model_document()))
 
+    def same_model(self, other: Network) -> bool:
+        """Whether both describe the same units and links, in whatever order they list them."""
+        from synth.network.document import sorted_document
+
+        return sorted_document(self) == sorted_document(other)
+
     def to_networkx(self, cells: int = 3) -> nx.MultiDiGraph:
-        """A finite section of the pattern as a networkx graph with ``cells`` cells and open ends, for looking at."""
-        import networkx as nx
+        """The members as a networkx graph that ``read`` accepts again, or a finite section of a pattern to look at.
 
-        graph = nx.MultiDiGraph(title=self.title)
-        for i in range(cells):
-            for kind in self.kinds:
-                graph.add_node((kind.name, i), kind=kind.name)
-        for i in range(cells):
-            for link in self.links:
-                j = i + link.at[0]
-                if 0 <= j < cells:
-                    graph.add_edge((link.source_kind, j), (link.kind, i), name=link.name, strength=float(link.strength))
-        return graph
+        A section has ``cells`` cells along every dimension and open ends; at an edge it begins with the edge's units.
+        InputError for rules (they describe every wiring) and for members whose own parts were scaled apart.
+        """
+        from synth.network.graphs import graph_of
 
-
-def _text(value: Fraction | None) -> str | None:
-    return None if value is None else str(value)
-
-
-def _kind_document(kind: Kind) -> dict[str, object]:
-    def signals(group: tuple[Signal, ...]) -> list[dict[str, object]]:
-        return [{"name": s.name, "in": s.unit, "band": _text(s.band)} for s in group]
-
-    document: dict[str, object] = {
-        "name": kind.name,
-        "states": signals(kind.states),
-        "inputs": [{"name": a.name, "in": a.unit, "limit": _text(a.limit)} for a in kind.inputs],
-        "disturbances": [{"name": w.name, "in": w.unit, "peak": str(w.peak)} for w in kind.disturbances],
-        "takes": signals(kind.takes),
-        "offers": signals(kind.offers),
-        "sensors": signals(kind.sensors),
-    }
-    for name in ("A", "B", "D", "E", "C", "N", "H", "F", "Fw"):
-        document[name] = getattr(kind, name).texts()
-    return document
-
-
-def _link_document(link: Link) -> dict[str, object]:
-    return {
-        "name": link.name,
-        "from": {"kind": link.source_kind, "offer": link.offer},
-        "at": list(link.at),
-        "to": {"kind": link.kind, "take": link.take},
-        "strength": str(link.strength),
-        "own_strength": str(link.own_strength),
-        "delay": str(link.delay),
-    }
+        return graph_of(self, cells)

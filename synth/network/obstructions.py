@@ -1,49 +1,48 @@
 """What no local feedback can prove, found before any search: theory (26).
 
-The network written in waves e^{i theta k} has the matrix A^(theta), the sensors C^(theta) and the actuators B. If for
-some theta and some s with Re s >= 0 a direction x has A^ x = s x and C^ x = 0 ('not seen'), or a left direction x has
-x A^ = s x and x B = 0 ('not reached'), then that mode stays where it is whatever the gains, and the radius is at least
-one. With several actuators, a mode is also fixed if the actuators that reach it hear none of the sensors that see it.
+The network written in waves e^{i theta . k} has the matrix A^(theta), the sensors C^(theta) and the actuators
+B^(theta). If for some theta and some s with Re s >= 0 a direction x has A^ x = s x and C^ x = 0 ('not seen'), or a left
+direction x has x A^ = s x and x B^ = 0 ('not reached'), then that mode stays where it is whatever the gains, and the
+radius is at least one. With several actuators, a mode is also fixed if the actuators that reach it hear none of the
+sensors that see it.
 
 A delay bounds the age of what a link carries, so the delay zero belongs to the class; the test is made for that member,
-and at s = 0 every constant delay gives the same matrices anyway.
+and at s = 0 every constant delay gives the same matrices anyway. The same holds for intervals of strengths and for
+links that weaken: the test is made at full strength. Tolerances and curves are tested at their nominal.
 
-At theta = 0 and pi everything is exact: the unseen subspace by rational elimination and the sign of its modes by
-Routh's array, so that a triple integrator is not a matter of rounding. Between them the smallest singular value is
-taken on a grid with refinement.
+What is tested depends on the description, and ``examine`` says it: phases of a pattern; of an edge pattern also the
+modes that live on the outermost cells alone; of rules a choice of wirings that obey them; of members that network.
 """
 
 from __future__ import annotations
 
 import itertools
-import math
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from fractions import Fraction
 
 import numpy as np
-from numpy.typing import NDArray
-from scipy.linalg import matrix_balance
 
-from synth.network.advice import advise
-from synth.network.model import Network
-from synth.network.rational import Rows, characteristic, hurwitz, null_space, rank, transposed, unseen
-from synth.network.symbol import Symbol, array_of, symbol_of
+from synth.network.advice import advise, not_reached, not_seen, several
+from synth.network.blind import member_finding
+from synth.network.edges import least_cells, section_of
+from synth.network.layout import Edge
+from synth.network.model import Link, Network
+from synth.network.phases import Finding, corners, exact_findings, exact_mode, findings, heard_by_any
+from synth.network.rational import characteristic, hurwitz, transposed, unseen
+from synth.network.symbol import Symbol, member_symbol, stacked_symbol, symbol_of
 
-GRID = 60
-SEEN = 1e-9
-ON_THE_AXIS = 1e-9
-NEAR = 0.01
-MOST_ACTUATORS = 8
+EDGE_STATES = 40
+MOST_WIRINGS = 400
 
 
 @dataclass(frozen=True)
 class Obstruction:
     """A mode of the network that no local feedback can move.
 
-    ``theta`` is the phase from one cell to the next (radians, one per dimension), ``s`` the mode in 1/s, ``direction``
-    the weight of each ``kind.state`` in declared units (largest absolute value 1), ``cause`` 'not seen' or
-    'not reached', ``advice`` what would remove it, in plain words.
+    ``theta`` is the phase from one cell to the next (radians, one per dimension; empty for rules, members and edges),
+    ``s`` the mode in 1/s, ``direction`` the weight of each ``kind.state`` (or ``unit.state``) in declared units
+    (largest absolute value 1), ``cause`` 'not seen' or 'not reached', ``advice`` what would remove it, in plain words.
     """
 
     theta: tuple[float, ...]
@@ -64,234 +63,80 @@ class Obstruction:
 
 
 @dataclass(frozen=True)
-class _Finding:
-    theta: float
-    s: complex
-    direction: NDArray[np.complex128]
-    cause: str
-    split: tuple[int, ...] = ()  # actuators that reach the mode but hear nothing of it
+class Examination:
+    """The obstruction, if one was found, and one sentence that says what was looked at."""
+
+    obstruction: Obstruction | None
+    tested: str
 
 
 def obstruction(network: Network) -> Obstruction | None:
     """Find a mode that no local feedback can move, or None if the test finds none: theory (26).
 
-    A None is no promise that a target can be met. At theta = 0 and pi the answer is exact; in between it is taken on a
-    grid of ``GRID`` steps with refinement.
+    A None is no promise that a target can be met. ``examine`` says what was tested.
     """
+    return examine(network).obstruction
+
+
+def examine(network: Network) -> Examination:
+    """Look for an obstruction, and say what was looked at."""
+    if network.members is not None:
+        announced, tested = member_finding(network)
+        return Examination(None if announced is None else Obstruction(*announced), tested)
+    if network.rules:
+        return _examine_rules(network)
     symbol = symbol_of(network)
-    finding = next(_findings(symbol), None)
-    if finding is None:
-        return None
+    finding = next(findings(symbol, network.dimension), None)
+    tested = (
+        "every phase 0 and pi exactly, the phases between them on a grid with refinement (a small but nonzero phase "
+        "can hide between its points)"
+    )
+    if finding is not None or not network.edges:
+        return Examination(None if finding is None else _announced(network, symbol, finding), tested)
+    for edge in network.edges:
+        found, cells = _edge_obstruction(network, edge)
+        tested += f"; at the {edge.side} edge, exactly, the modes that live on its outermost {cells} cells alone"
+        if found is not None:
+            return Examination(found, tested)
+    return Examination(None, tested)
+
+
+def _weights(names: tuple[str, ...], finding: Finding) -> dict[str, complex]:
     direction = finding.direction / finding.direction[int(np.argmax(np.abs(finding.direction)))]
-    weights = {
+    return {
         name: complex(v) if abs(v.imag) > 1e-9 else complex(v.real)
-        for name, v in zip(symbol.names, direction, strict=True)
+        for name, v in zip(names, direction, strict=True)
         if abs(v) > 1e-9
     }
-    advice = advise(
-        finding.theta, finding.s, weights, finding.cause, _helpful(symbol, finding, weights), symbol.sensors
+
+
+def _announced(network: Network, symbol: Symbol, finding: Finding) -> Obstruction:
+    """The obstruction of a pattern with its advice."""
+    weights = _weights(symbol.names, finding)
+    leaders = tuple(unit.name for edge in network.edges for unit in edge.units)
+    helpful = _helpful(symbol, finding, weights)
+    advice = advise(finding.theta, finding.s, weights, finding.cause, helpful, symbol.sensors, leaders)
+    return Obstruction(finding.theta, finding.s, weights, finding.cause, advice + split_advice(symbol, finding))
+
+
+def split_advice(symbol: Symbol, finding: Finding) -> str:
+    """What to add where some actuators reach the mode and others see it."""
+    if not finding.split:
+        return ""
+    reach = ", ".join(symbol.actuators[i] for i in finding.split)
+    return (
+        f" The actuators that could move it ({reach}) hear none of the sensors that see it: let them use those sensors."
     )
-    if finding.split:
-        reach = ", ".join(symbol.actuators[i] for i in finding.split)
-        advice += (
-            f" The actuators that could move it ({reach}) hear none of the sensors that see it: "
-            "let them use those sensors."
-        )
-    return Obstruction((finding.theta,), finding.s, weights, finding.cause, advice)
 
 
-def _findings(symbol: Symbol) -> Iterator[_Finding]:
-    used = sorted(frozenset().union(*symbol.hears)) if symbol.hears else []
-    for wave, theta in ((1, 0.0), (-1, math.pi)):
-        pair = symbol.exact(wave)
-        if pair is not None:
-            A, C = pair
-            yield from _exact_mode(A, [C[i] for i in used], theta, "not seen")
-            yield from _exact_mode(
-                transposed(A, len(A)), transposed(symbol.B, len(symbol.actuators)), theta, "not reached"
-            )
-            yield from _exact_split(symbol, A, C, theta)
-    yield from _between(symbol, used)
-
-
-def _exact_mode(A: Rows, C: Rows, theta: float, cause: str) -> Iterator[_Finding]:
-    """The unseen modes at a phase where all is rational, if any of them does not decay."""
-    basis, inner = unseen(A, C)
-    if not basis or hurwitz(characteristic(inner)):
-        return
-    span = np.array([[float(v) for v in vector] for vector in basis]).T
-    still, _ = null_space(inner, len(inner))
-    if still:
-        yield _Finding(theta, 0j, (span @ np.array([float(v) for v in still[0]])).astype(complex), cause)
-        return
-    values, vectors = np.linalg.eig(np.array([[float(v) for v in row] for row in inner]))
-    worst = int(np.argmax(values.real))
-    s = complex(max(values[worst].real, 0.0), abs(values[worst].imag))
-    vector = vectors[:, worst] if values[worst].imag >= 0 else vectors[:, worst].conj()
-    yield _Finding(theta, s, span @ vector, cause)
-
-
-def _splits(symbol: Symbol) -> Iterator[tuple[tuple[int, ...], list[int]]]:
-    """Every proper choice of actuators, with the sensors that the others hear."""
-    count = len(symbol.actuators)
-    if 2 <= count <= MOST_ACTUATORS:
-        for size in range(1, count):
-            for chosen in itertools.combinations(range(count), size):
-                others = [symbol.hears[i] for i in range(count) if i not in chosen]
-                yield chosen, sorted(frozenset().union(*others))
-
-
-def _exact_split(symbol: Symbol, A: Rows, C: Rows, theta: float) -> Iterator[_Finding]:
-    """Fixed modes at s = 0: rank [A, B_I; C_J, 0] < n, J what the actuators outside I hear."""
-    n = len(A)
-    if rank(A, n) == n:
-        return
-    for chosen, heard in _splits(symbol):
-        rows = [[*A[i], *(symbol.B[i][q] for q in chosen)] for i in range(n)]
-        rows += [[*C[j], *(Fraction(0) for _ in chosen)] for j in heard]
-        if rank(rows, n + len(chosen)) < n:
-            basis, _ = null_space([*A, *(C[j] for j in heard)], n)
-            yield _Finding(theta, 0j, np.array([float(v) for v in basis[0]], dtype=complex), "not seen", chosen)
-
-
-def _modes(A: NDArray[np.complex128], scale: float) -> list[complex]:
-    """Modes that do not decay: eigenvalues, and the means of close groups (a defective group's mean is accurate)."""
-    values = np.linalg.eigvals(A)
-    found: list[complex] = []
-    for value in values:
-        near = values[np.abs(values - value) < 1e-3 * scale]
-        for s in (complex(value), complex(near.mean())):
-            if s.real >= -ON_THE_AXIS * scale and all(abs(s - other) > 1e-12 * scale for other in found):
-                found.append(s)
-    return found
-
-
-def _smallest(matrix: NDArray[np.complex128]) -> tuple[float, NDArray[np.complex128]]:
-    """The n-th singular value (n columns; zero where rows are missing) and its right direction."""
-    _, values, right = np.linalg.svd(matrix, full_matrices=False)
-    n = matrix.shape[1]
-    return (float(values[n - 1]) if len(values) >= n else 0.0), right[n - 1].conj()
-
-
-def _unit_rows(rows: NDArray[np.complex128], size: NDArray[np.float64], scale: float) -> NDArray[np.complex128]:
-    """Rows divided by ``size`` and brought to the size of the matrix, so that units do not matter; zero rows
-    stay zero."""
-    return rows / np.where(size > 0, size, 1.0)[:, None] * scale
-
-
-def _worst_at(symbol: Symbol, theta: float, used: list[int]) -> tuple[float, _Finding] | None:
-    """The mode at this phase that is seen, reached or split least, with its relative singular value."""
-    pair = symbol.floating(theta)
-    if pair is None:
-        return None
-    _, (scaling, _) = matrix_balance(np.abs(pair[0]), permute=False, separate=True)
-    d = np.asarray(scaling, dtype=float)  # states counted in units of d: diag(1/d) A^ diag(d)
-    A = pair[0] * d / d[:, None]
-    n = len(A)
-    scale = max(1e-12, float(np.linalg.norm(A, 2)))
-    seen = pair[1] * d
-    C = _unit_rows(seen, np.maximum(symbol.sensor_sizes(d), np.linalg.norm(seen, axis=1)), scale)
-    B = array_of(symbol.B, len(symbol.actuators)) / d[:, None]
-    BT = _unit_rows(B.T, np.linalg.norm(B, axis=0), scale)
-    best: tuple[float, _Finding] | None = None
-    for s in _modes(A, scale):
-        shifted = A - s * np.eye(n)
-        mode = complex(max(s.real, 0.0), s.imag)
-        size, direction = _smallest(np.vstack([shifted, C[used]]))
-        tests = [(size, _Finding(theta, mode, direction * d, "not seen"))]
-        size, direction = _smallest(np.vstack([shifted.T, BT]))
-        tests.append((size, _Finding(theta, mode, direction / d, "not reached")))
-        for chosen, heard in _near_splits(symbol, shifted, C, BT, scale):
-            zero = np.zeros((len(heard), len(chosen)))
-            wide = np.vstack([np.hstack([shifted, BT.T[:, list(chosen)]]), np.hstack([C[heard], zero])])
-            values = np.linalg.svd(wide, compute_uv=False)
-            _, direction = _smallest(np.vstack([shifted, C[heard]]))
-            size = float(values[n - 1]) if len(values) >= n else 0.0
-            tests.append((size, _Finding(theta, mode, direction * d, "not seen", chosen)))
-        least = min(tests, key=lambda test: test[0])
-        if best is None or least[0] / scale < best[0]:
-            best = (least[0] / scale, least[1])
-    return best
-
-
-def _near_splits(
-    symbol: Symbol,
-    shifted: NDArray[np.complex128],
-    C: NDArray[np.complex128],
-    BT: NDArray[np.complex128],
-    scale: float,
-) -> Iterator[tuple[tuple[int, ...], list[int]]]:
-    """The splits that can fail at this mode: every chosen actuator reaches it badly, every other one hears it badly.
-
-    Rows only raise a singular value, so what one actuator hears or reaches alone decides for all splits with it.
-    """
-    count = len(symbol.actuators)
-    if not 2 <= count <= MOST_ACTUATORS:
-        return
-    deaf, weak = set(), set()
-    for q in range(count):
-        if _smallest(np.vstack([shifted, C[sorted(symbol.hears[q])]]))[0] < NEAR * scale:
-            deaf.add(q)
-        if _smallest(np.vstack([shifted.T, BT[[q]]]))[0] < NEAR * scale:
-            weak.add(q)
-        elif q not in deaf:
-            return  # this actuator reaches and hears the mode well, so it can be in neither part
-    for chosen, heard in _splits(symbol):
-        if weak.issuperset(chosen) and deaf.issuperset(set(range(count)) - set(chosen)):
-            yield chosen, heard
-
-
-def _between(symbol: Symbol, used: list[int]) -> Iterator[_Finding]:
-    """Phases strictly between 0 and pi: a grid, then a search around each low point of the singular value."""
-    steps = GRID if len(symbol.A) <= 40 else 12
-    grid = [math.pi * k / steps for k in range(1, steps)]
-    seen = [_worst_at(symbol, theta, used) for theta in grid]
-    for found in seen:
-        if found is not None and found[0] < SEEN:
-            yield found[1]
-    sizes = [math.inf if found is None else found[0] for found in seen]
-    for k in range(1, len(grid) - 1):
-        if sizes[k] < 0.2 and sizes[k] <= min(sizes[k - 1], sizes[k + 1]):
-            low = _refined(symbol, used, grid[k - 1], grid[k + 1])
-            if low is not None and low[0] < SEEN:
-                yield low[1]
-
-
-def _refined(symbol: Symbol, used: list[int], left: float, right: float) -> tuple[float, _Finding] | None:
-    """Golden-section search for the least singular value between two phases; it stops where none can be near zero."""
-    ratio = (math.sqrt(5) - 1) / 2
-    steepest = 10 * max((abs(at) for _, _, at, _ in symbol.neighbour), default=1)
-    best: tuple[float, _Finding] | None = None
-
-    def size(theta: float) -> float:
-        nonlocal best
-        found = _worst_at(symbol, theta, used)
-        if found is not None and (best is None or found[0] < best[0]):
-            best = found
-        return math.inf if found is None else found[0]
-
-    a, b = right - ratio * (right - left), left + ratio * (right - left)
-    at_a, at_b = size(a), size(b)
-    while right - left > 1e-12 and min(at_a, at_b) < steepest * (right - left) + SEEN:
-        if at_a < at_b:
-            right, b, at_b = b, a, at_a
-            a = right - ratio * (right - left)
-            at_a = size(a)
-        else:
-            left, a, at_a = a, b, at_b
-            b = left + ratio * (right - left)
-            at_b = size(b)
-    return best
-
-
-def _helpful(symbol: Symbol, finding: _Finding, weights: Mapping[str, complex]) -> tuple[str, ...]:
+def _helpful(symbol: Symbol, finding: Finding, weights: Mapping[str, complex]) -> tuple[str, ...]:
     """States whose measurement alone would make the unseen mode visible, at a phase where this can be decided
     exactly."""
-    wave = {0.0: 1, math.pi: -1}.get(finding.theta)
-    if finding.cause != "not seen" or wave is None or (pair := symbol.exact(wave)) is None:
+    wave = {theta: wave for wave, theta in corners(len(finding.theta))}.get(finding.theta)
+    if finding.cause != "not seen" or wave is None or (blocks := symbol.exact(wave)) is None:
         return tuple(weights) if finding.cause == "not seen" else ()
-    A, C = pair
-    used = sorted(frozenset().union(*symbol.hears)) if symbol.hears else []
+    A, _, C = blocks
+    used = heard_by_any(symbol)
     helpful = []
     for k, name in enumerate(symbol.names):
         if name in weights:
@@ -300,3 +145,98 @@ def _helpful(symbol: Symbol, finding: _Finding, weights: Mapping[str, complex]) 
             if not basis or hurwitz(characteristic(inner)):
                 helpful.append(name)
     return tuple(helpful)
+
+
+def _edge_obstruction(network: Network, edge: Edge) -> tuple[Obstruction | None, int]:
+    """A mode that lives on the outermost cells of a half line alone, exactly; and how many cells were looked at.
+
+    A direction that is zero beyond a cell is a mode of the whole half line if the cells beyond hear nothing of it, so
+    what they hear counts as another sensor (and what they drive, as another actuator).
+    """
+    reach = max([abs(link.at[0]) for link in network.links] + [abs(e.link.at[0]) for e in edge.links], default=0)
+    least = least_cells(edge)
+    per_cell = sum(len(kind.states) for kind in network.cell_kinds)
+    cells = max(least, min(least + 3, EDGE_STATES // per_cell))
+    whole = section_of(network, edge, cells + reach + 1)
+    symbol = member_symbol(whole)
+    inside = [k for k, name in enumerate(symbol.names) if k < _states_in(whole, cells * len(network.cell_kinds))]
+    outside = [k for k in range(len(symbol.names)) if k not in set(inside)]
+    blocks = symbol.exact(())
+    if blocks is None:
+        return None, cells
+    A, B, C = blocks
+    near = [[A[i][j] for j in inside] for i in inside]
+    sensed = [[C[i][j] for j in inside] for i in heard_by_any(symbol)] + [[A[i][j] for j in inside] for i in outside]
+    driven = [[B[i][q] for i in inside] for q in range(len(symbol.actuators))]
+    driven += [[A[i][j] for i in inside] for j in outside]
+    tests = [(near, sensed, "not seen"), (transposed(near, len(near)), driven, "not reached")]
+    for matrix, rows, cause in tests:
+        finding = next(exact_mode(matrix, rows, (), cause), None)
+        if finding is not None:
+            weights = _weights(tuple(symbol.names[k] for k in inside), finding)
+            moving, how = several(tuple(weights)), f"the units at the {edge.side} edge moving alone"
+            if cause == "not reached":
+                advice = not_reached(moving, how, finding.s)
+            else:
+                advice = (
+                    not_seen(moving, how, finding.s) + f"Measure {several(tuple(weights))} in the units themselves."
+                )
+            return Obstruction((), finding.s, weights, cause, advice), cells
+    return None, cells
+
+
+def _states_in(network: Network, units: int) -> int:
+    assert network.members is not None
+    return sum(len(network.kinds[k].states) for k in network.members.kind[:units].tolist())
+
+
+def _examine_rules(network: Network) -> Examination:
+    """Wirings that obey the rules, each written by the kinds that move together: one with an obstruction is enough.
+
+    Looked at are wirings in which every unit of a kind hears the same: no link of a class, or the most it may, from one
+    of its sources, all of whose units move with it, or against it, or half of each.
+    """
+    kinds = network.kinds
+    names = tuple(kind.name for kind in kinds)
+    place = {name: i for i, name in enumerate(names)}
+    options = [list(_intakes(network.links, rule.name, rule.most)) for rule in network.rules]
+    count = 0
+    for choice in itertools.islice(itertools.product(*options), MOST_WIRINGS):
+        count += 1
+        links = [(place[link.kind], place[link.source_kind], link) for intake in choice for link in intake[1]]
+        symbol = stacked_symbol(network, kinds, names, links)
+        finding = next(exact_findings(symbol, (), ()), None)
+        if finding is not None:
+            weights = _weights(symbol.names, finding)
+            words = "; ".join(said for said, _ in choice)
+            how = f"the units of each kind moving together, in a wiring that the rules allow ({words})"
+            moving = " and ".join(weights)
+            if finding.cause == "not reached":
+                advice = not_reached(moving, how, finding.s)
+            else:
+                helpful = " or ".join(_helpful(symbol, finding, weights) or tuple(weights))
+                advice = not_seen(moving, how, finding.s, f" (they read {', '.join(symbol.sensors)})") + (
+                    f"Measure {helpful} in the units themselves, or forbid such wirings."
+                )
+            found = Obstruction((), finding.s, weights, finding.cause, advice + split_advice(symbol, finding))
+            return Examination(found, f"{count} wirings that obey the rules, exactly")
+    return Examination(None, f"{count} wirings that obey the rules, exactly, and no others")
+
+
+def _intakes(links: tuple[Link, ...], rule: str, most: int) -> Iterator[tuple[str, list[Link]]]:
+    """What a unit may hear by one rule: words, and the links of the quotient over kinds."""
+    mine = [link for link in links if link.name == rule]
+    own = sum((link.own_strength for link in mine), Fraction(0))
+    itself = [link for link in mine if link.own_part]
+    yield f"no {rule} link", []
+    for link in mine:
+        if link.own_part:
+            continue
+        signal = f"{link.source_kind}.{link.offer}"
+        shares = [(Fraction(1), f"{most} x {signal}"), (Fraction(-1), f"{most} x {signal} moving oppositely")]
+        if most % 2 == 0:
+            shares.append((Fraction(0), f"{most} x {signal}, half of them moving oppositely"))
+        for share, words in shares:
+            # The own part stays as it is whoever is heard, so it is put back on the one source that is.
+            heard = replace(link, strength=link.strength * share, own_strength=own, choice="")
+            yield f"{rule}: {words}", [heard, *itself]

@@ -7,7 +7,9 @@ from dataclasses import dataclass, field
 from fractions import Fraction
 
 from synth.base.units import Dimension, Unit
-from synth.network.equations import Linear, Refused, Scope, read_linear
+from synth.network.equations import Refused, Scope, read_formula
+from synth.network.formula import Formula, curved
+from synth.network.intervals import Interval
 from synth.network.sections import Declared, Section, name_is_good, named_entries, quantity, section, text_of, unit_of
 from synth.network.yaml_map import Entry, Listing, Node, Problems, Scalar, Table
 
@@ -31,6 +33,9 @@ class Draft:
     peaks: dict[str, Fraction] = field(default_factory=dict)
     offers: dict[str, Output] = field(default_factory=dict)
     sensors: dict[str, Output] = field(default_factory=dict)
+    take_bands: dict[str, Fraction | None] = field(default_factory=dict)  # for nonlinear terms only
+    ranges: dict[str, Interval] = field(default_factory=dict)  # of the parameters with a tolerance, in SI units
+    pointed: bool = False  # whether the kind names an operating point
     written: frozenset[str] = frozenset()  # every declared name, also those whose declaration has a problem
 
     def scope(self, allowed: tuple[str, ...], why_not: str = "") -> Scope:
@@ -39,7 +44,7 @@ class Draft:
         signals = {n: d.unit for table in groups.values() for n, d in table.items()}
         names = {n: g for g, table in groups.items() for n in table}
         broken = self.written - set(signals) - set(self.parameters)
-        return Scope(self.parameters, signals, names, allowed, why_not, broken)
+        return Scope(self.parameters, signals, names, allowed, why_not, frozenset(self.ranges), broken)
 
 
 @dataclass(frozen=True)
@@ -47,8 +52,9 @@ class Output:
     """An offered signal or a sensor: its unit, its expression (None where matrices give it) and its allowed peak."""
 
     declared: Declared
-    value: Linear | None
+    value: Formula | None
     band: Fraction | None = None
+    node: Node | None = None  # where the expression stands
 
 
 def positive(
@@ -109,19 +115,19 @@ def _output(entry: Entry, sort: str, draft: Draft, scope: Scope, by_matrix: bool
         if by_matrix:
             declared = unit_of(node, draft.problems)
             return None if declared is None else Output(declared, None)
-    value: Linear | None = None
+    value: Formula | None = None
     if not by_matrix:
-        value = read_expression(inside, scope, declared, draft.problems)
+        value = read_expression(inside, scope, declared, draft)
         if value is None:
             return None
         declared = declared or _derived(inside, value, draft)
     if declared is None:
         return None
     band = positive(part.get("band"), declared, "the allowed peak 'band'", draft.problems) if part else None
-    return Output(declared, value, band)
+    return Output(declared, value, band, inside)
 
 
-def _derived(node: Node | None, value: Linear, draft: Draft) -> Declared:
+def _derived(node: Node | None, value: Formula, draft: Draft) -> Declared:
     """The unit of an expression: that of the signal if it is one alone, otherwise the SI unit of its dimension."""
     name = node.text.strip() if isinstance(node, Scalar) else ""
     for table in (draft.states, draft.takes, draft.disturbances):
@@ -131,18 +137,26 @@ def _derived(node: Node | None, value: Linear, draft: Draft) -> Declared:
     return Declared(unit.text, unit)
 
 
-def read_expression(node: Node | None, scope: Scope, declared: Declared | None, problems: Problems) -> Linear | None:
-    """The linear expression written at ``node``; a reason against it is recorded at its character."""
+def read_expression(node: Node | None, scope: Scope, declared: Declared | None, draft: Draft) -> Formula | None:
+    """The formula written at ``node``; a reason against it is recorded at its character."""
+    problems = draft.problems
     text = text_of(node, problems, "an expression, such as '(demand - drive)/lag',")
     if text is None or not isinstance(node, Scalar):
         return None
     unit = None if declared is None else declared.unit
     try:
-        return read_linear(text, scope, unit, "" if declared is None else declared.text)
+        found = read_formula(text, scope, unit, "" if declared is None else declared.text)
+        if found.constant and not draft.pointed and not found.parameters and not any(True for _ in curved(found)):
+            raise Refused(
+                "this expression has a constant part; the model is about differences from the operating point, "
+                "so leave it out, or make it a disturbance with a peak",
+                len(text) - len(text.lstrip()),
+            )
     except Refused as error:
         if error.sentence or not problems.found:
-            problems.add(f"{node.path}: {error.sentence}.", node.place_at(error.offset))
+            problems.add(f"{node.path}: {error.sentence}.", node.place_at(error.offset, error.length))
         return None
+    return found
 
 
 def read_offers(part: Section, draft: Draft, by_matrix: bool) -> None:

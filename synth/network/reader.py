@@ -12,15 +12,19 @@ from collections.abc import Mapping
 from fractions import Fraction
 from pathlib import Path
 
-from synth.base.errors import InputError, Place
+from synth.base.errors import InputError, Place, Problem
+from synth.network.inner import with_self_links
 from synth.network.kinds import read_kind
-from synth.network.links import read_links, table_names
+from synth.network.links import table_names
+from synth.network.members import spread_goal
 from synth.network.model import Kind, Network
 from synth.network.sections import named_entries, section, text_of
 from synth.network.settings import read_goal, read_simulation
+from synth.network.wiring import Surroundings, read_wiring
 from synth.network.yaml_map import Node, Problems, Scalar, Table, from_python, parse
 
 LARGEST_FILE = 5_000_000
+LARGEST_TABLE = 500_000_000
 LONGEST_TITLE = 200
 
 
@@ -29,21 +33,39 @@ def read(source: str | os.PathLike[str] | Mapping[str, object]) -> Network:
 
     All numbers end as exact rationals in the units the file declares, time in seconds. A float in a mapping counts as
     the decimal Python prints for it. Raises InputError with every problem found, each with ``file:line:column`` (a
-    mapping has no lines; its sentences name the path of keys).
+    mapping has no lines; its sentences name the path of keys). In a mapping, ``network.members.graph`` may be a
+    networkx graph. Other files that a problem file names are looked for beside it.
     """
     problems = Problems()
+    graph: object | None = None
     if isinstance(source, Mapping):
+        source, graph = _without_graph(source)
         file, root = None, from_python(source, problems)
     else:
         file = os.fspath(source)
         root = parse(load_text(file, "problem file", "a YAML problem file"), file, problems)
-    network = None if root is None else _network(root, file, problems)
+    network = None if root is None else _network(root, file, graph, problems)
     if problems.found or network is None:
         raise InputError(problems.in_order())
     return network
 
 
-def load_text(path: str | os.PathLike[str], what: str, wanted: str) -> str:
+def _without_graph(source: Mapping[str, object]) -> tuple[Mapping[str, object], object | None]:
+    """The mapping without the graph object in it, and the graph."""
+    network = source.get("network")
+    members = network.get("members") if isinstance(network, Mapping) else None
+    graph = members.get("graph") if isinstance(members, Mapping) else members
+    if not isinstance(network, Mapping) or not (hasattr(graph, "nodes") and hasattr(graph, "edges")):
+        return source, None
+    return {**source, "network": {**network, "members": {"graph": "an object"}}}, graph
+
+
+def load_table(path: Path, what: str, wanted: str) -> str:
+    """The text of a table or graph of members, which may be larger than a problem file; raises like ``load_text``."""
+    return load_text(path, what, wanted, LARGEST_TABLE)
+
+
+def load_text(path: str | os.PathLike[str], what: str, wanted: str, largest: int = LARGEST_FILE) -> str:
     """The UTF-8 text of a file; InputError if it is missing, a folder, unreadable, too large or not UTF-8."""
     file = Path(path)
     try:
@@ -51,28 +73,39 @@ def load_text(path: str | os.PathLike[str], what: str, wanted: str) -> str:
             raise InputError(f"{file} is a folder; name {wanted} inside it.")
         if not stat.S_ISREG(file.stat().st_mode):
             raise InputError(f"{file} is not a file; name {wanted}.")
-        if file.stat().st_size > LARGEST_FILE:
-            raise InputError(f"{file} is larger than {LARGEST_FILE // 10**6} MB, which no {what} needs; name {wanted}.")
+        if file.stat().st_size > largest:
+            raise InputError(f"{file} is larger than {largest // 10**6} MB, which no {what} needs; name {wanted}.")
         with file.open("rb") as stream:
-            data = stream.read(LARGEST_FILE + 1)
+            data = stream.read(largest + 1)
     except FileNotFoundError:
         raise InputError(f"{file} does not exist; check the name and the folder.") from None
     except (OSError, ValueError) as error:
         reason = getattr(error, "strerror", None) or str(error)
         raise InputError(f"{file} cannot be read ({reason}); name {wanted} that you may read.") from None
-    if len(data) > LARGEST_FILE:
-        raise InputError(f"{file} is larger than {LARGEST_FILE // 10**6} MB, which no {what} needs; name {wanted}.")
+    if len(data) > largest:
+        raise InputError(f"{file} is larger than {largest // 10**6} MB, which no {what} needs; name {wanted}.")
     try:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
-        before = data[: error.start]
-        line = before.count(b"\n") + 1
-        column = len(before[before.rfind(b"\n") + 1 :].decode("utf-8", "replace")) + 1
-        place = Place(os.fspath(path), line, column)
-        raise InputError(f"the {what} is not UTF-8 text from here on; save it as UTF-8.", place) from None
+        raise InputError(_not_utf8(os.fspath(path), data, error.start, what)) from None
 
 
-def _network(root: Node, file: str | None, problems: Problems) -> Network | None:
+def _not_utf8(file: str, data: bytes, at: int, what: str) -> Problem:
+    """The place of the first byte that is not UTF-8, with its line as far as it can be read."""
+    if data.startswith((b"\xff\xfe", b"\xfe\xff")):
+        return Problem(f"the {what} is UTF-16 text; save it as UTF-8.", Place(file, 1, 1))
+    before = data[:at]
+    start = before.rfind(b"\n") + 1
+    column = len(before[start:].decode("utf-8", "replace")) + 1
+    line = data[start : start + 2000].split(b"\n")[0].decode("utf-8", "replace").rstrip("\r")
+    return Problem(
+        f"the {what} is not UTF-8 text from here on; save it as UTF-8.",
+        Place(file, before.count(b"\n") + 1, column),
+        line,
+    )
+
+
+def _network(root: Node, file: str | None, graph: object | None, problems: Problems) -> Network | None:
     part = section(root, "problem", problems, "synth: 1")
     if part is None:
         return None
@@ -91,12 +124,20 @@ def _network(root: Node, file: str | None, problems: Problems) -> Network | None
             "kinds: at least one kind of unit is needed, such as '{tank: {states: {level: m}, ...}}'.", kinds_node
         )
     declared = table_names(kinds_node)
-    links, dimension = read_links(
-        part.need("network", "network: {pattern: {dimension: 1, links: [...]}}"), kinds, declared, problems
+    around = Surroundings(Path(file).parent if file is not None else Path(), load_table, graph)
+    entries = kinds_node.entries if isinstance(kinds_node, Table) else {}
+    wired = read_wiring(
+        part.need("network", "network: {pattern: {dimension: 1, links: [...]}}"), entries, kinds, around, problems
     )
     goal = read_goal(part.get("design"), kinds, declared, problems)
     simulation = read_simulation(part.get("simulation"), problems)
-    return Network(title, tuple(kinds.values()), links, goal, simulation, dimension, "pattern", file)
+    if wired.members is not None and wired.kinds is not None:
+        goal = spread_goal(goal, wired.kinds, wired.members.origins)
+    network = Network(
+        title, tuple(kinds.values()) if wired.kinds is None else wired.kinds, wired.links, goal, simulation,
+        wired.dimension, wired.description, file, wired.edges, wired.cell, wired.rules, wired.members,
+    )  # fmt: skip
+    return with_self_links(network)
 
 
 def _title(node: Node | None, problems: Problems) -> str:

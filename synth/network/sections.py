@@ -20,17 +20,23 @@ KEYS: dict[str, tuple[str, ...]] = {
     "problem": ("synth", "title", "kinds", "network", "design", "simulation"),
     "kind": (
         "parameters", "states", "inputs", "disturbances", "takes", "offers", "sensors", "equations", "matrices",
+        "file", "plant", "operating_point",
     ),
     "state": ("in", "band"),
     "input": ("in", "limit"),
     "disturbance": ("in", "peak"),
-    "take": ("in",),
+    "take": ("in", "band"),
     "offer": ("is", "in", "band"),
     "sensor": ("is", "in"),
     "matrices": ("A", "B", "D", "E", "C", "N", "H", "F", "Fw"),
-    "network": ("pattern", "classes"),
+    "network": ("pattern", "classes", "edge", "rules", "members"),
     "pattern": ("dimension", "links"),
-    "link": ("name", "from", "at", "to", "strength", "relative", "late", "delay"),
+    "link": ("name", "from", "at", "to", "strength", "relative", "late", "delay", "weakens"),
+    "edge": ("side", "units", "links"),
+    "edge_unit": ("at", "kind", "instead_of"),
+    "edge_link": ("name", "from", "to", "strength", "relative", "late", "delay", "weakens"),
+    "rule": ("to", "from", "most", "strength", "relative", "late", "delay", "weakens"),
+    "members": ("units", "links", "graph"),
     "class": ("sign",),
     "design": ("target", "slowest", "fastest", "period", "gain_bounds", "uses"),
     "simulation": ("units", "seconds"),
@@ -38,17 +44,22 @@ KEYS: dict[str, tuple[str, ...]] = {
 
 LATER: dict[str, tuple[str, ...]] = {
     "problem": ("tables", "operating_points", "measures", "scenarios"),
-    "kind": ("curves", "operating_points", "tables", "estimator", "transport", "diffusion", "file"),
+    "kind": ("curves", "operating_points", "tables", "estimator", "transport", "diffusion"),
     "state": ("tolerance", "peak", "rounding"),
     "input": ("rate_limit", "rounding", "lag", "tolerance", "delay"),
     "disturbance": ("variation", "spectrum"),
-    "take": ("band", "most"),
+    "take": ("most",),
     "offer": ("rounding",),
     "sensor": ("noise", "rounding", "delay", "band"),
     "matrices": ("L",),
-    "network": ("edge", "members", "rules", "file"),
+    "network": ("file",),
     "pattern": ("cell", "boundary"),
     "link": ("loss", "losses", "silence", "hold", "jitter", "rewired", "variation", "tolerance", "message", "most"),
+    "edge": (),
+    "edge_unit": (),
+    "edge_link": (),
+    "rule": (),
+    "members": (),
     "class": ("tolerance", "cause", "strength", "most"),
     "design": (
         "rounding", "operating_points", "tables", "estimator", "messages", "feed_through", "effort", "noise", "jitter",
@@ -57,7 +68,7 @@ LATER: dict[str, tuple[str, ...]] = {
     "simulation": ("losses", "silence", "leader", "step", "effects"),
 }  # fmt: skip
 
-RESERVED = ("sqrt", "abs", "min", "max", "sin", "cos", "exp", "pi")
+RESERVED = ("sqrt", "abs", "min", "max", "sin", "cos", "tanh", "exp", "sat", "deadzone", "pi")
 LARGEST = Fraction(10) ** 100
 
 

@@ -11,18 +11,21 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from decimal import Decimal
 from fractions import Fraction
+from functools import cached_property
 from typing import Any
 
 import yaml
 
-from synth.base.errors import Place, Problem
+from synth.base.errors import InputError, Place, Problem
 from synth.base.units import LONGEST_NUMBER, UnitError, parse_number
+from synth.network.yaml_syntax import syntax_problem
 
 DEEPEST = 40
 MOST_PROBLEMS = 100
+LONGEST_SENTENCE = 1500
 MOST_VALUES = 100_000
 
 
@@ -32,6 +35,20 @@ class Source:
 
     file: str
     text: str
+
+    def line(self, number: int) -> str | None:
+        """Line ``number`` (from 1) without its end, None beyond the last."""
+        lines = self.lines
+        return lines[number - 1] if 0 < number <= len(lines) else None
+
+    @cached_property
+    def lines(self) -> list[str]:
+        """The lines as YAML counts them."""
+        return _BREAK.split(self.text)
+
+
+# The line breaks that the parser counts: those of YAML 1.1, which has three more than YAML 1.2.
+_BREAK = re.compile("\r\n|[\n\r\x85\u2028\u2029]")
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,8 +69,11 @@ class Scalar(Node):
     start: int = 0
     style: str | None = None
 
-    def place_at(self, offset: int) -> Place | None:
-        """The place of character ``offset`` of the text; the start of the value where escapes hide the way."""
+    def place_at(self, offset: int, length: int | None = None) -> Place | None:
+        """The place of character ``offset`` of the text; the start of the value where escapes hide the way.
+
+        ``length`` is how many characters are meant; by default the word or number that starts there.
+        """
         if self.source is None or self.place is None:
             return None
         ahead = sum(not c.isspace() for c in self.text[:offset])
@@ -71,8 +91,11 @@ class Scalar(Node):
                     break
                 ahead -= 1
             at += 1
-        before = written[:at]
-        return Place(self.source.file, before.count("\n") + 1, at - (before.rfind("\n") + 1) + 1)
+        if length is None:
+            word = _WORD.match(written, at)
+            length = len(word[0]) if word else 1
+        before = list(_BREAK.finditer(written, 0, at))
+        return Place(self.source.file, len(before) + 1, at - (before[-1].end() if before else 0) + 1, length)
 
 
 @dataclass(frozen=True, eq=False)
@@ -98,20 +121,48 @@ class Table(Node):
     entries: Mapping[str, Entry]
 
 
+@dataclass(frozen=True, eq=False)
+class Foreign(Node):
+    """An object of another library that only a Python mapping can hold, such as a ``control.StateSpace``."""
+
+    value: object
+
+
 @dataclass
 class Problems:
     """Collects what is wrong, so that a person sees all of it at once."""
 
     found: list[Problem] = field(default_factory=list)
     count: int = 0  # of everything reported, also what is not kept
+    source: Source | None = None  # the text that places are in, so that messages can show its lines
+    others: list[Source] = field(default_factory=list)  # the texts of further files
 
     def add(self, sentence: str, where: Node | Entry | Place | None = None) -> None:
-        """Record one sentence at the place of a node, an entry's key, or a place."""
+        """Record one sentence at the place of a node, an entry's key, or a place.
+
+        Once ``MOST_PROBLEMS`` are found, InputError is raised at once: nobody reads more, and looking for them takes
+        time.
+        """
+        sentence = "".join(c if c.isprintable() else "\N{REPLACEMENT CHARACTER}" for c in sentence)
+        if len(sentence) > LONGEST_SENTENCE:
+            sentence = f"{sentence[:LONGEST_SENTENCE]}... (shortened)."
         place = where if isinstance(where, Place) or where is None else where.place
-        problem = Problem(sentence, place)
+        line = None if place is None else self._line(place)
+        if place is not None and line is not None and place.length == 1:
+            word = _WORD.match(line, place.column - 1)
+            place = replace(place, length=len(word[0])) if word else place
+        problem = Problem(sentence, place, line)
         self.count += 1
-        if problem not in self.found and len(self.found) < MOST_PROBLEMS:
+        if problem not in self.found:
             self.found.append(problem)
+        if len(self.found) >= MOST_PROBLEMS:
+            last = Problem(f"these are the first {MOST_PROBLEMS} problems; there may be more behind them.")
+            raise InputError([*self.in_order(), last])
+
+    def _line(self, place: Place) -> str | None:
+        known = [self.source] if self.source is not None else []
+        source = next((s for s in (*known, *self.others) if s.file == place.file), None)
+        return None if source is None else source.line(place.line)
 
     def in_order(self) -> list[Problem]:
         """All problems, those without a place first, then in file order."""
@@ -126,6 +177,7 @@ _NULLS = {"", "~", "null", "Null", "NULL"}
 _TRUE, _FALSE = {"true", "True", "TRUE"}, {"false", "False", "FALSE"}
 _INTEGER = re.compile(r"[-+]?[0-9]+", re.ASCII)
 _RADIX = re.compile(r"0o[0-7]+|0x[0-9a-fA-F]+", re.ASCII)
+_WORD = re.compile(r"\w+(?:\.\w+)*'?|\*\*")
 _FLOAT = re.compile(r"[-+]?(?:\.[0-9]+|[0-9]+(?:\.[0-9]*)?)(?:[eE][-+]?[0-9]+)?", re.ASCII)
 _NOT_FINITE = re.compile(r"[-+]?\.(?:inf|Inf|INF)|\.(?:nan|NaN|NAN)")
 
@@ -148,7 +200,8 @@ def plain_value(text: str) -> Fraction | bool | str | None:
 
 
 def child(path: str, key: str) -> str:
-    """The path of a key below ``path``."""
+    """The path of a key below ``path``, for messages: very long keys are shortened."""
+    key = key if len(key) <= 70 else f"{key[:60]}..."
     return f"{path}.{key}" if path else key
 
 
@@ -162,11 +215,13 @@ class _Builder:
         loader: Any = getattr(yaml, "CSafeLoader", yaml.SafeLoader)
         self.events: Iterator[Any] = yaml.parse(source.text, Loader=loader)
 
-    def place(self, mark: Any) -> Place:
-        return Place(self.source.file, mark.line + 1, mark.column + 1)
+    def place(self, mark: Any, end: Any = None) -> Place:
+        """The place of a mark; ``end`` is the mark behind what is meant (the carets stop at the end of the line)."""
+        length = 1 if end is None else max(end.index - mark.index, 1)
+        return Place(self.source.file, mark.line + 1, mark.column + 1, length)
 
-    def stop(self, sentence: str, mark: Any) -> _Stop:
-        self.problems.add(f"{sentence}.", self.place(mark))
+    def stop(self, sentence: str, event: Any) -> _Stop:
+        self.problems.add(f"{sentence}.", self.place(event.start_mark, event.end_mark))
         return _Stop()
 
     def document(self) -> Node | None:
@@ -175,35 +230,49 @@ class _Builder:
         for event in self.events:
             if isinstance(event, yaml.DocumentStartEvent):
                 if root is not None:
-                    raise self.stop("a second document starts here; a problem file is one document", event.start_mark)
+                    raise self.stop("a second document starts here; a problem file is one document", event)
                 if event.version is not None and event.version != (1, 2):
-                    raise self.stop("the problem file is YAML 1.2; take out the %YAML line", event.start_mark)
+                    raise self.stop("the problem file is YAML 1.2; take out the %YAML line", event)
                 root = self.node(next(self.events), "", 0)
         return root
 
-    def node(self, event: Any, path: str, depth: int) -> Node:
-        mark = event.start_mark
+    def node(self, event: Any, path: str, depth: int, key: Place | None = None) -> Node:
+        """The value that starts with ``event``; ``key`` is the place of the key it belongs to.
+
+        A value in block style has no bracket of its own that a message could point at, so it stands at its key.
+        """
         if isinstance(event, yaml.AliasEvent) or getattr(event, "anchor", None) is not None:
-            raise self.stop("anchors (&) and aliases (*) are not accepted; write the value out where it is used", mark)
+            raise self.stop("anchors (&) and aliases (*) are not accepted; write the value out where it is used", event)
         if getattr(event, "tag", None) is not None:
-            raise self.stop(f"the tag {event.tag!r} is not accepted; write the plain value", mark)
+            raise self.stop(f"the tag {event.tag!r} is not accepted; write the plain value", event)
         if depth > DEEPEST:
-            raise self.stop(f"the nesting is deeper than {DEEPEST} levels; no problem file needs that", mark)
+            raise self.stop(f"the nesting is deeper than {DEEPEST} levels; no problem file needs that", event)
         self.values += 1
         if self.values > MOST_VALUES:
-            raise self.stop(f"the file has more than {MOST_VALUES} values; no problem file needs that", mark)
+            raise self.stop(f"the file has more than {MOST_VALUES} values; no problem file needs that", event)
         if isinstance(event, yaml.ScalarEvent):
             return self.scalar(event, path)
         if isinstance(event, yaml.SequenceStartEvent):
+            start = event
             items: list[Node] = []
             while not isinstance(event := next(self.events), yaml.SequenceEndEvent):
                 items.append(self.node(event, f"{path}[{len(items)}]", depth + 1))
-            return Listing(path, self.place(mark), tuple(items))
-        return self.table(mark, path, depth)
+            return Listing(path, self.extent(start, event, key), tuple(items))
+        return self.table(event, path, depth, key)
+
+    def extent(self, start: Any, end: Any, key: Place | None) -> Place:
+        """The place of a list or a mapping from its first event to its last."""
+        if start.flow_style:
+            return self.place(start.start_mark, end.end_mark)
+        if key is not None:
+            return key
+        word = _WORD.match(self.source.text, start.start_mark.index)
+        place = self.place(start.start_mark)
+        return replace(place, length=len(word[0])) if word else place
 
     def scalar(self, event: Any, path: str) -> Scalar:
         value: Fraction | bool | str | None = event.value
-        place = self.place(event.start_mark)
+        place = self.place(event.start_mark, event.end_mark)
         if event.style is None or event.style == "":
             try:
                 value = plain_value(event.value)
@@ -213,62 +282,41 @@ class _Builder:
         style = event.style or None
         return Scalar(path, place, value, event.value, self.source, event.start_mark.index, style)
 
-    def table(self, mark: Any, path: str, depth: int) -> Table:
+    def table(self, start: Any, path: str, depth: int, above: Place | None) -> Table:
+        """The mapping that starts with ``start``; ``above`` is the place of the key it belongs to."""
         entries: dict[str, Entry] = {}
         while not isinstance(event := next(self.events), yaml.MappingEndEvent):
             if not isinstance(event, yaml.ScalarEvent):
-                raise self.stop("a key must be a name, not an anchor, a list or a mapping", event.start_mark)
+                raise self.stop("a key must be a name, not an anchor, a list or a mapping", event)
             if event.anchor is not None or event.tag is not None:
-                raise self.stop(
-                    "anchors, aliases and tags are not accepted at a key; write the plain name", event.start_mark
-                )
-            key, place = event.value, self.place(event.start_mark)
-            value = self.node(next(self.events), child(path, key), depth + 1)
+                raise self.stop("anchors, aliases and tags are not accepted at a key; write the plain name", event)
+            key, place = event.value, self.place(event.start_mark, event.end_mark)
+            value = self.node(next(self.events), child(path, key), depth + 1, place)
             if key in entries:
                 first = entries[key].place
                 line = f" (first in line {first.line})" if first else ""
                 self.problems.add(
-                    f"the key {key!r} stands twice in {path or 'the file'}{line}; keep one of them.", place
+                    f"the key {key[:70]!r} stands twice in {path or 'the file'}{line}; keep one of them.", place
                 )
                 continue
             entries[key] = Entry(key, place, value)
-        return Table(path, self.place(mark), entries)
+        return Table(path, self.extent(start, event, above), entries)
 
 
 def parse(text: str, file: str, problems: Problems) -> Node | None:
     """Read a YAML text into a tree; what is wrong is added to ``problems``, and None returned if nothing can be
     used."""
+    source = problems.source = Source(file, text)
     try:
-        root = _Builder(Source(file, text), problems).document()
+        root = _Builder(source, problems).document()
     except _Stop:
         return None
     except yaml.YAMLError as error:
-        problems.add(_syntax_sentence(error), _syntax_place(error, file, text))
+        problems.add(*syntax_problem(error, source.lines, file))
         return None
     if root is None:
         problems.add("the file is empty; a problem file starts with 'synth: 1'.", Place(file, 1, 1))
     return root
-
-
-def _syntax_place(error: yaml.YAMLError, file: str, text: str) -> Place:
-    mark = getattr(error, "problem_mark", None) or getattr(error, "context_mark", None)
-    if mark is not None:
-        return Place(file, mark.line + 1, mark.column + 1)
-    for number, line in enumerate(text.split("\n"), 1):
-        for column, character in enumerate(line, 1):
-            if not character.isprintable() and character not in "\t\r\x85\ufeff":
-                return Place(file, number, column)
-    return Place(file, 1, 1)
-
-
-def _syntax_sentence(error: yaml.YAMLError) -> str:
-    said = str(getattr(error, "problem", None) or getattr(error, "reason", None) or "it cannot be read")
-    if "\\t" in said or "cannot start any token" in said:
-        return (
-            "this is not valid YAML: a character stands here that cannot start a value "
-            "(a tab, or one of % @ `); indent with spaces and put quotes around such text."
-        )
-    return f"this is not valid YAML: {said}; check the indentation, the colons and the brackets up to here."
 
 
 def from_python(value: object, problems: Problems, path: str = "", depth: int = 0) -> Node | None:
@@ -287,6 +335,8 @@ def from_python(value: object, problems: Problems, path: str = "", depth: int = 
             if node is not None:
                 entries[name] = Entry(name, None, node)
         return Table(path, None, entries)
+    if type(value).__module__.partition(".")[0] == "control":
+        return Foreign(path, None, value)
     plain = getattr(value, "tolist", None)  # numpy arrays and scalars
     value = plain() if callable(plain) else value
     if isinstance(value, Sequence) and not isinstance(value, (str, bytes)):

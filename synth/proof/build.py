@@ -46,6 +46,7 @@ def prove(
     says why. Raises InputError for an unknown route, target or gains that do not fit, SolverFailure if the two
     programs disagree.
     """
+    network.refuse_beyond_fixed_links("the proof")
     if route not in ROUTES:
         raise InputError(f"route {route!r} is not known; use one of {', '.join(ROUTES)}.")
     goal = Fraction(network.goal.target if target is None else target)

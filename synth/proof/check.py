@@ -260,7 +260,7 @@ def close(kind: dict[str, Any], links: list[dict[str, Any]], gains: dict[str, An
         need(gains[key] == [s[0] for s in group[side]], f"the gains of {name} do not name its {side} in order")
     K = matrix(gains["K"], m, p, f"the gains of {name}")
     KN, U = mul(K, X["N"], q), mul(K, X["C"], n)
-    D, A = plus(X["D"], mul(X["B"], KN, q)), plus(X["A"], mul(X["B"], U, n))
+    D, A, H = plus(X["D"], mul(X["B"], KN, q)), plus(X["A"], mul(X["B"], U, n)), X["H"]
     for link in links:
         own = number(link["own_strength"], "own_strength")
         if link["to"]["kind"] != name or own == 0:
@@ -272,8 +272,9 @@ def close(kind: dict[str, Any], links: list[dict[str, Any]], gains: dict[str, An
         need(not any(direct), f"relative link {link['name']} reads an offer with feed-through")
         A = [[a - D[i][take] * own * h for a, h in zip(A[i], X["H"][k], strict=True)] for i in range(n)]
         U = [[u - KN[i][take] * own * h for u, h in zip(U[i], X["H"][k], strict=True)] for i in range(m)]
+        H = [[o - X["F"][i][take] * own * h for o, h in zip(H[i], X["H"][k], strict=True)] for i in range(offers)]
     none, eye = [Fraction(0)] * d, [[Fraction(i == j) for j in range(n)] for i in range(n)]
-    H, F = plus(X["H"], mul(X["Fu"], U, n)), plus(X["F"], mul(X["Fu"], KN, q))  # z = H x + F v + Fu u, u = U x + KN v
+    H, F = plus(H, mul(X["Fu"], U, n)), plus(X["F"], mul(X["Fu"], KN, q))  # z = H x + F v + Fu u, u = U x + KN v
     lines = []
     for role, side, x, v, w in (
         ("offer", "offers", H, F, X["Fw"]),
@@ -879,6 +880,10 @@ def sentences(document: dict[str, Any]) -> tuple[str, list[str], list[str]]:
     ]
     if any(number(link["own_strength"], "g") for link in links):
         excludes.append("the own part of a relative link late, lost or away from its nominal strength")
+    if any("sort" in link for link in links):
+        excludes.append(
+            "how tolerances and sectors follow from the equations: the reader of the problem file bounds them"
+        )
     if any(number(v, "N") for kind in document["model"]["kinds"] for row in kind["N"] for v in row):
         excludes.append("a controller that hears a taken signal later, or otherwise, than it acts on its unit")
     return claim, covers, excludes

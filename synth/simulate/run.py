@@ -60,13 +60,21 @@ def simulate(
     """
     chosen = _check(scenarios, units, seconds)
     gains = plant_gains if plant_gains is not None else getattr(design_or_gains, "gains", design_or_gains)
-    section = build_section(network, gains, units if units is not None else network.simulation.units)
+    network.refuse_beyond_fixed_links("the simulation")
+    cells = units if units is not None else network.simulation.units
+    section = build_section(network.without_self_links(), gains, cells)
     job = prepare(
         section, certificate, float(seconds if seconds is not None else network.simulation.seconds), saturate, progress
     )
     _run_wired(job, chosen, seed)
+    inner = any(link.sort != "link" for link in network.links)
+    if inner:
+        job.notes.append(
+            "runs as wired: parameters at the middle of their tolerances, nonlinear terms on their centre lines; the "
+            "adversary over the class moves all of them freely within their ranges"
+        )
     if "adversary" in chosen:
-        _run_class(job)
+        _run_class(job, build_section(network, gains, cells) if inner else section)
         _run_late(job)
     if "held" in chosen:
         _run_held(job, network)
@@ -160,11 +168,11 @@ def _collect(job: Job, watch: Watch, recorder: Recorder, names: Sequence[tuple[s
                 job.peaks[role] = np.maximum(job.peaks.get(role, np.zeros_like(here)), here)
 
 
-def _run_class(job: Job) -> None:
+def _run_class(job: Job, section: Section) -> None:
     """The adversary over every link of the class, once with the declared peaks and, where it differs, once with equal
     sizes for G.
     """
-    section = replace_cells(job.section, min(job.section.cells, CLASS_CELLS))
+    section = replace_cells(section, min(section.cells, CLASS_CELLS))
     if not section.block.sizes[2]:
         return
     flavours: list[tuple[str, Array, float | None]] = []

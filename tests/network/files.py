@@ -21,11 +21,12 @@ def read_text(text: str, folder: Path) -> Network:
 
 
 def refusal(text: str, folder: Path) -> str:
-    """The message with which a text is refused; an assertion fails if it is accepted."""
+    """The sentences with which a text is refused, one a line; an assertion fails if it is accepted."""
     try:
         read_text(text, folder)
     except InputError as error:
-        return str(error).replace(str(folder / "problem.yaml"), "problem.yaml")
+        said = "\n".join(str(problem) for problem in error.problems)
+        return said.replace(str(folder / "problem.yaml"), "problem.yaml")
     raise AssertionError("the text was accepted")
 
 

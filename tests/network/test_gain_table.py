@@ -37,7 +37,8 @@ def gains_of(text: str, folder: Path) -> Gains:
 def refusal(text: str, folder: Path) -> str:
     with pytest.raises(InputError) as caught:
         gains_of(text, folder)
-    return str(caught.value).replace(str(folder / "gains"), "gains")
+    said = "\n".join(str(problem) for problem in caught.value.problems)
+    return said.replace(str(folder / "gains"), "gains")
 
 
 def test_both_forms_give_the_gains_back(tmp_path: Path) -> None:

@@ -239,7 +239,7 @@ def test_the_symbol_has_the_modes_of_the_ring(cells: int) -> None:
     symbol = symbol_of(network)
     modes = []
     for k in range(cells):
-        pair = symbol.floating(2 * math.pi * k / cells)
+        pair = symbol.floating((2 * math.pi * k / cells,))
         assert pair is not None
         modes.extend(np.poly(pair[0] + 10 * np.eye(3)))  # compared by polynomials: the ring has defective modes
     whole = np.poly(ring(network, np.zeros((1, 3)), cells) + 10 * np.eye(3 * cells))

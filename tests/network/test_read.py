@@ -205,7 +205,7 @@ def test_own_strength_follows_the_unit_of_the_own_signal(tmp_path: Path) -> None
         ("period: 0.02 s", "gain_bounds: {hauler: {demand: {speed: 6 1/s^2}}}", "has the unit 1/s^2"),
         ("period: 0.02 s", "gain_bounds: {hauler: {demnd: {speed: 6}}}", "did you mean 'demand'"),
         ("slot': speed", "slot: speed", 'is not the derivative of a state (did you mean "slot\'"?)'),
-        ("dimension: 1", "dimension: 3", "not honoured"),
+        ("dimension: 1", "dimension: 4", "from 1 to 3"),
         ("title: Ore convoy", 'title: "Ore\\tconvoy\\u0007"\n#', "printable"),
         ("target: 0.6", "target: 1e-200", "too large or too small"),
         ("slot: m,", "slot: {in: m, tolerance: 2},", "not honoured"),

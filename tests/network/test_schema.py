@@ -27,7 +27,9 @@ class CoreLoader(yaml.SafeLoader):
 
 
 def test_every_key_of_the_reader_is_in_the_schema() -> None:
-    assert set(SCHEMA["$defs"]) - {"name", "unit", "quantity", "expression", "matrix"} == set(KEYS) - {"problem"}
+    assert set(SCHEMA["$defs"]) - {"name", "unit", "quantity", "strength", "expression", "matrix"} == set(KEYS) - {
+        "problem"
+    }
     for sort, keys in KEYS.items():
         part = SCHEMA if sort == "problem" else SCHEMA["$defs"][sort]
         assert list(part["properties"]) == list(keys), sort
@@ -45,7 +47,7 @@ def test_the_examples_are_valid(path: Any) -> None:
     jsonschema.validate(yaml.load(path.read_text(encoding="utf-8"), CoreLoader), SCHEMA)
 
 
-@pytest.mark.parametrize("name", ["unknown_key", "wrong_type", "missing_peak", "not_honoured", "dimension_two"])
+@pytest.mark.parametrize("name", ["unknown_key", "wrong_type", "missing_peak", "not_honoured"])
 def test_what_the_schema_can_say_it_says(name: str) -> None:
     data = yaml.load((BROKEN / f"{name}.yaml").read_text(encoding="utf-8"), CoreLoader)
     with pytest.raises(jsonschema.ValidationError):
