@@ -99,7 +99,8 @@ def polish(loop: Loop, theta: float, guess: complex) -> Root | None:
             return None
         if abs(step[size]) <= 1e-14 * (1 + abs(s)):
             break
-    residual = float(np.linalg.norm(loop.matrix(angle, np.array([s]))[0] @ x) / np.linalg.norm(x)) / scale
+    with np.errstate(over="ignore", invalid="ignore"):  # e^{-s d} may overflow far to the left: then it is no root
+        residual = float(np.abs(loop.matrix(angle, np.array([s]))[0] @ x).max() / np.abs(x).max()) / scale
     return Root(s, theta, residual) if residual < 1e-9 else None
 
 
