@@ -20,7 +20,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.network.model import Kind, Link, Network
-from synth.network.rational import Rows, reduced, transposed
+from synth.network.rational import Rows, reduced
 
 Complex = NDArray[np.complex128]
 
@@ -112,10 +112,17 @@ def array_of(rows: Rows, width: int) -> NDArray[np.complex128]:
 
 
 def _product(left: Rows, right: Rows, width: int) -> Rows:
-    columns = transposed(right, width)
-    return [
-        [sum((a * b for a, b in zip(row, c, strict=True) if a and b), Fraction(0)) for c in columns] for row in left
-    ]
+    """The product of two matrices that are mostly zero: only what is not zero is looked at."""
+    filled = [[(j, b) for j, b in enumerate(row) if b] for row in right]
+    rows: Rows = []
+    for row in left:
+        sums = [Fraction(0)] * width
+        for k, a in enumerate(row):
+            if a:
+                for j, b in filled[k]:
+                    sums[j] += a * b
+        rows.append(sums)
+    return rows
 
 
 def _sum(left: Rows, right: Rows) -> Rows:

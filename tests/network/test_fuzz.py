@@ -139,7 +139,7 @@ def run_within_limits(data: bytes, folder: Path) -> None:
     assert done.returncode in (0, 1, 2), done.stderr[-2000:]
     assert b"Traceback" not in done.stderr
     if done.returncode == 2:
-        assert done.stderr.startswith(b"synth: f.yaml")
+        assert b"synth: f.yaml" in done.stderr
 
 
 def test_damaged_tables_of_members(tmp_path: Path) -> None:
