@@ -62,8 +62,11 @@ class Scale:
         if self.log:
             share = math.log(inside / self.low) / math.log(self.high / self.low)
         else:
-            # halves, so that a domain from -1e308 to 1e308 does not overflow
-            share = (inside / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
+            width = self.high - self.low
+            if math.isinf(width):  # halves, so that a domain from -1e308 to 1e308 does not overflow
+                share = (inside / 2 - self.low / 2) / (self.high / 2 - self.low / 2)
+            else:
+                share = (inside - self.low) / width
         share = min(max(share, 0.0), 1.0)
         return self.start + share * (self.end - self.start)
 
