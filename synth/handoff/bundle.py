@@ -15,6 +15,7 @@ from synth.base.exact import ExactMatrix
 from synth.base.files import MARK, whole_folder
 from synth.base.provenance import sha256
 from synth.handoff.metadata import csvw, data_package
+from synth.handoff.operating import operating_values
 from synth.handoff.readme import NOT_AS_FLASHED, readme_text
 from synth.handoff.scaling import Facts, exact_peaks, scaling
 from synth.handoff.statement import MANIFEST, PROVENANCE, manifest, provenance
@@ -199,6 +200,13 @@ def _table_document(network: Network, rows: tuple[GainRow, ...], facts: Mapping[
         "meaning": "actuator = sum over its rows of gain * signal; deviations from the operating point; time in s",
         "rows": [row.as_dict() for row in rows],
         "signals": {kind.name: _definitions(kind) for kind in network.kinds},
+        "at_rest": {
+            kind: {
+                group: {name: {"value": value, "unit": unit} for name, (value, unit) in named.items()}
+                for group, named in values.items()
+            }
+            for kind, values in operating_values(network).items()
+        },
         "scaling": dict(facts),
         "proven_continuous": True,
         "proven_as_flashed": False,

@@ -8,6 +8,7 @@ from collections.abc import Mapping, Sequence
 from synth.base.caution import CAUTIONS
 from synth.base.files import MARK
 from synth.handoff.digits import digits
+from synth.handoff.operating import operating_values
 from synth.handoff.scaling import Facts
 from synth.handoff.table import SIGN_CONVENTION, GainRow
 from synth.network.model import Network
@@ -135,10 +136,32 @@ def _use(network: Network, rows: Sequence[GainRow]) -> str:
             ]
             text += f"\n  {kind.name}: {actuator.name} [{actuator.unit}] =\n"
             text += "".join(f"      {'+ ' if i else '  '}{term}\n" for i, term in enumerate(terms))
+    text += _at_rest(network)
     period = network.goal.period
     if period is None:
         return text + "\nNo sample period was declared.\n"
     return text + f"\nDeclared sample period: {rows[0].period_s if rows else period} s.\n"
+
+
+def _at_rest(network: Network) -> str:
+    """Where equations were written about an operating point: its values, which the code must subtract and add."""
+    lines = [
+        (f"{kind}: {group} {name}", repr(value), unit)
+        for kind, values in operating_values(network).items()
+        for group, named in values.items()
+        for name, (value, unit) in named.items()
+    ]
+    if not lines:
+        return ""
+    return (
+        "\n"
+        + _paragraph(
+            "These gains are about an operating point: command = value at rest of the actuator + sum of gain * (signal "
+            "- value at rest of the signal)."
+        )
+        + "\n"
+        + _columns([("at rest", "value", "unit"), *lines])
+    )
 
 
 def _gains(rows: Sequence[GainRow]) -> str:
