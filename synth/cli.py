@@ -261,10 +261,12 @@ def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json
 @click.option(
     "--for", "problem", type=click.Path(path_type=Path), help="Also demand that it is about this problem file."
 )
-@_with(JSON)
-def verify(certificate: Path, problem: Path | None, as_json: bool) -> None:
+@_with(JSON, QUIET)
+def verify(certificate: Path, problem: Path | None, as_json: bool, quiet: bool) -> None:
     """Re-check a certificate in exact arithmetic, believing nothing in it."""
     from synth.proof import verify as check_again
+
+    _progress(quiet)("deriving every number again")
 
     network = None if problem is None else _read(problem)
     found = check_again(certificate, network)

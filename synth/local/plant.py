@@ -108,7 +108,8 @@ def field_of(network: Network) -> Field:
     slowest = float(network.goal.slowest or 0)
     given = network.goal.fastest is not None
     # Without a disc the radius falls for ever as gains grow; the search then keeps to a generous disc of its own.
-    omega = float(network.goal.fastest or 10 * max(*modes, 5 * slowest, 0.1))
+    natural = max(*modes, 5 * slowest)
+    omega = float(network.goal.fastest or 10 * (natural if natural > 0 else 0.1))
     tables = [_tables(kind, parts, omega) for kind, parts in zip(network.kinds, folded, strict=True)]
     scales = _scales(network, tables)
     plants = tuple(

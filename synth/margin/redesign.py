@@ -1,7 +1,8 @@
 """How much stronger the links may get if the gains are picked anew at each strength.
 
 The search goes up from the factor that today's gains already prove, in steps of a quarter, then bisects. A factor
-counts only if the new gains are proven there by a certificate; it is a lower bound on what other gains could do.
+counts only if the new gains keep every limit of the design and are proven there by a certificate; it is a lower bound
+on what other gains could do.
 """
 
 from __future__ import annotations
@@ -89,6 +90,6 @@ def _attempt(scaling: Scaling, factor: float, cap: float) -> Redesigned | None:
         certificate = prove(network, chosen.gains, route="peak", target=NEAR_ONE)
     except SynthError:  # an obstruction, no stabilising gains, a solver that gave up: no gains at this strength
         return None
-    if not certificate.proven:
+    if not certificate.proven or chosen.broken:  # gains that leave the design's own limits are no answer
         return None
     return Redesigned(float(kappa), chosen.gains, certificate, None, cap)

@@ -119,7 +119,7 @@ class Margin:
             reach = "at least " if link.capped else ""
             lines.append(
                 f"{link.link}: the whole class may get {reach}{_number_below(link.tolerance)} times as strong, "
-                f"one single copy {_number_below(link.single)} times, others as they are."
+                f"one single copy, its own part as it is, {_number_below(link.single)} times."
             )
         if self.bottleneck:
             lines.append("Share in the radius: " + ", ".join(f"{n} {100 * s:.0f} %" for n, s in self.bottleneck) + ".")

@@ -16,9 +16,11 @@ The sentences of a certificate are made here from its numbers and must agree let
 
 from __future__ import annotations
 
+import csv
 import hashlib
 import json
 import operator
+import os
 import re
 import sys
 from collections.abc import Callable, Iterator, Sequence
@@ -1005,6 +1007,23 @@ def check_text(content: str) -> list[str]:
     return check_document(document)
 
 
+def beside(path: str, proven: dict[tuple[str, str, str], str]) -> int:
+    """Compare the gain table that lies beside the certificate, if one does: 0 the same gains, 1 not."""
+    if not os.path.exists(path):  # noqa: PTH110
+        return 0
+    try:
+        with open(path, encoding="utf-8", newline="") as stream:  # noqa: PTH123
+            rows = list(csv.DictReader(line for line in stream if not line.startswith("#")))
+        table = {(row["kind"], row["actuator"], row["signal"]): Fraction(row["gain"]) for row in rows}
+        whole = {key: Fraction(value) for key, value in proven.items()}
+        same = len(table) == len(rows) and all(table.get(k, 0) == whole.get(k, 0) for k in table.keys() | whole.keys())
+        same = same and all(row["sign_convention"] == "u = K y" for row in rows)
+    except (OSError, ValueError, LookupError, TypeError, csv.Error):
+        same = False
+    print("gains.csv beside it holds the same gains" if same else "NOT THE PROVEN GAINS: gains.csv beside it differs")
+    return 0 if same else 1
+
+
 def main(arguments: list[str]) -> int:
     """Check one file; print the result; 0 verified, 1 not verified, 2 no such file."""
     if len(arguments) != 1:
@@ -1012,12 +1031,25 @@ def main(arguments: list[str]) -> int:
         return 2
     try:
         with open(arguments[0], encoding="utf-8") as stream:  # noqa: PTH123 - the shortest standard way
-            reasons = check_text(stream.read())
+            content = stream.read()
+        reasons = check_text(content)
     except (OSError, UnicodeDecodeError) as error:
         print(f"cannot read {arguments[0]}: {error}")
         return 2
     print("\n".join(reasons) if reasons else "verified: every number was derived again in exact arithmetic")
-    return 1 if reasons else 0
+    if reasons:
+        return 1
+    document = json.loads(content)
+    print(f"network {document['network_hash']}\n{document['claim']}\nThe gains, u = K y:")
+    proven = {
+        (g["kind"], actuator, signal): value
+        for g in document["gains"]
+        for actuator, row in zip(g["actuators"], g["K"], strict=True)
+        for signal, value in zip(g["signals"], row, strict=True)
+    }
+    for (kind, actuator, signal), value in proven.items():
+        print(f"  {kind}: {actuator} {signal} {shown(value)}")
+    return beside(os.path.join(os.path.dirname(arguments[0]), "gains.csv"), proven)  # noqa: PTH118, PTH120
 
 
 if __name__ == "__main__":

@@ -72,6 +72,10 @@ def gain_matrix(closed: Sequence[ClosedUnit], links: Sequence[Link], alpha: floa
         gains[unit.kind.name] = guide.gains
     for link in links:
         column = names.index((link.source_kind, link.offer))
+        if (
+            alpha * float(link.delay) > 300
+        ):  # e^300: no rate worth claiming survives such a weight, and doubles end soon
+            return None
         weight = abs(float(link.strength)) * np.exp(alpha * float(link.delay))
         kind = next(unit.kind for unit in closed if unit.kind.name == link.kind)
         for k, offer in enumerate(kind.offers):

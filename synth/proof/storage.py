@@ -130,25 +130,26 @@ def _candidate(network: Network, closed: tuple[ClosedUnit, ...], part: float, sh
 def _solve(unit: ClosedUnit, a: float, promised: Array, arriving: Array, share: float) -> Storage | None:
     """One semidefinite program for one kind; None if the solver did not solve it or the relaxed answer fails."""
     n, q, d = unit.A.shape[0], unit.D.shape[1], unit.E.shape[1]
-    _, (scale, _) = scipy.linalg.matrix_balance(unit.A.floats(), permute=False, separate=True)
-    A = unit.A.floats() / scale[:, None] * scale[None, :]
-    H = unit.H.floats() * scale[None, :]
-    inputs = np.hstack([unit.D.floats(), unit.E.floats()]) / scale[:, None]
+    A, inputs, H = unit.A.floats(), np.hstack([unit.D.floats(), unit.E.floats()]), unit.H.floats() / promised[:, None]
     peaks = np.array([float(w.peak) for w in unit.kind.disturbances])
     cost = np.concatenate([arriving**2, share * peaks**2])
     # A take nobody feeds, or a disturbance of peak zero, still needs a finite multiplier.
     cost = np.maximum(cost, 1e-6 * max(float(cost.max(initial=0.0)), 1e-9))
+    omega, scale = _natural_units(A, inputs * np.sqrt(cost))
+    A, inputs, a_scaled = A / omega / scale[:, None] * scale, inputs * np.sqrt(cost) / omega / scale[:, None], a / omega
+    H = H * scale
+    H = H / max(float(np.abs(H).max(initial=0.0)), 1e-300)
     Q, t = cp.Variable((n, n), symmetric=True), cp.Variable()
     tau = cp.Variable(q + d, nonneg=True) if q + d else None
-    lyapunov = A @ Q + Q @ A.T + 2 * a * Q
+    lyapunov = A @ Q + Q @ A.T + 2 * a_scaled * Q
     constraints: list[Any] = [Q >> 1e-9 * np.eye(n)]
     if tau is None:
         constraints += [lyapunov << -np.eye(n)]
     else:
         block = cp.bmat([[lyapunov, inputs], [inputs.T, -cp.diag(tau)]])
-        constraints += [(block + block.T) / 2 << 0, cost @ tau <= 2 * a]
+        constraints += [(block + block.T) / 2 << 0, cp.sum(tau) <= 2 * a_scaled]
     goal = [cp.sum(cp.multiply(row[:, None] @ row[None, :], Q)) for row in H]
-    constraints += [g <= t * c**2 for g, c in zip(goal, promised, strict=True)]
+    constraints += [g <= t for g in goal]
     # A small weight on the size of Q keeps directions that no offer sees from growing without bound.
     problem = cp.Problem(cp.Minimize((t if len(H) else 0) + (1e-4 if len(H) else 1) * cp.trace(Q)), constraints)
     try:
@@ -157,8 +158,22 @@ def _solve(unit: ClosedUnit, a: float, promised: Array, arriving: Array, share: 
         return None
     if problem.status != cp.OPTIMAL:
         return None
-    found = np.asarray(tau.value if tau is not None else [], dtype=np.float64)
+    found = np.asarray(tau.value * omega / cost if tau is not None else [], dtype=np.float64)
     return _exact(unit, np.asarray(Q.value, dtype=np.float64), found, a, np.asarray(scale, dtype=np.float64))
+
+
+def _natural_units(A: Array, inputs: Array) -> tuple[float, Array]:
+    """Rate (1/s) and size of every state in which the unit is of order one, whatever units the user declared.
+
+    Sizes are the roots of the diagonal of the reachability Gramian; states that nothing reaches get a little of the
+    size that balancing A gives them.
+    """
+    _, (balance, _) = scipy.linalg.matrix_balance(A, permute=False, separate=True)
+    W = np.diag(scipy.linalg.solve_continuous_lyapunov(A, -inputs @ inputs.T)) if inputs.size else np.zeros(len(A))
+    relative = np.maximum(W, 0.0) / balance**2
+    sizes = np.sqrt(relative + max(1e-6 * float(relative.max()), 1e-300)) * balance
+    scaled = A / sizes[:, None] * sizes
+    return max(float(np.abs(np.linalg.eigvals(scaled)).max()), 1e-300), np.asarray(sizes if W.any() else balance)
 
 
 def _exact(unit: ClosedUnit, Q: Array, tau: Array, a: float, scale: Array) -> Storage | None:

@@ -133,7 +133,9 @@ def _run_wired(job: Job, chosen: Sequence[str], seed: int) -> None:
     _collect(job, watch, recorder, [(s.name, s.words) for s in found])
     names = [s.name for s in found]
     if "pulse" in names:
-        end = watch.last_out[names.index("pulse")]
+        pulse = names.index("pulse")
+        # A run that was stopped because it grew has not settled, however calm its last sample looked.
+        end = watch.last_out[pulse] if not isfinite(float(watch.stopped[pulse])) else float("inf")
         job.measures["settling"] = float(end) if end < steps * h - 1.5 * h else None
     if "leader" in names:
         job.measures["amplification"] = amplification(section, watch.peaks["offer"][..., names.index("leader")])

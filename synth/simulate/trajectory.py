@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -137,15 +138,20 @@ class Trajectory:
         else:
             lines.append("No sample above a proven bound.")
         if self.worst.G_ratio is not None:
-            lines.append(f"Largest state reached from rest: {self.worst.G_ratio:.4f} of its bound G sup|w|.")
+            lines.append(f"Largest state reached from rest: {_down(self.worst.G_ratio)} of its bound G sup|w|.")
         if self.worst.envelope_ratio is not None:
-            lines.append(f"Largest state reached from an initial offset: {self.worst.envelope_ratio:.4f} of its bound.")
+            lines.append(
+                f"Largest state reached from an initial offset: {_down(self.worst.envelope_ratio)} of its bound."
+            )
         for row in self.measures.get("signals", ()):
             lines.append(_signal_line(row))
         for row in self.measures.get("amplification", ()):
             if row["successive"] is not None:
                 name, ratio = f"{row['kind']}.{row['offer']}", row["successive"]
                 lines.append(f"Along the string, {name}: peaks of successive units at most {ratio:.4g} : 1.")
+        grown = [run.name for run in self.runs if run.stopped is not None]
+        if grown:
+            lines.append(f"DIVERGED: {len(grown)} runs were stopped because a signal kept growing ({grown[0]}, ...).")
         settling = self.measures.get("settling")
         if settling is not None:
             lines.append(f"Settled within 2 % at {settling:.4g} s in the pulse run.")
@@ -274,3 +280,8 @@ def _write_bytes(target: Path, data: bytes) -> Path:
     except OSError as error:
         raise StorageFailure(f"cannot write {target}: {error.strerror or error}; nothing was changed there.") from error
     return target
+
+
+def _down(ratio: float) -> str:
+    """Four decimals, not rounded up: a bound that is nearly reached must not read as reached."""
+    return f"{math.floor(ratio * 1e4) / 1e4:.4f}" if math.isfinite(ratio) else "more than any number"

@@ -187,3 +187,25 @@ def test_json_errors_are_one_document(tmp_path: Path) -> None:
     assert done.code == 2
     assert done.document["exit_code"] == 2
     assert "none.yaml" in done.document["error"]
+
+
+def test_shipped_checker_notices_a_table_that_is_not_the_proven_one(convoy_run: Run, tmp_path: Path) -> None:
+    shutil.copytree(convoy_run[1] / "bundle", tmp_path / "bundle")
+    table = tmp_path / "bundle" / "gains.csv"
+
+    def checked() -> subprocess.CompletedProcess[str]:
+        return subprocess.run(
+            [sys.executable, "-I", "-S", "check.py", "certificate.json"],
+            cwd=tmp_path / "bundle",
+            capture_output=True,
+            text=True,
+        )
+
+    assert checked().returncode == 0
+    lines = table.read_text().splitlines()
+    fields = lines[1].split(",")
+    fields[3] += "1"
+    table.write_text("\n".join([lines[0], ",".join(fields), *lines[2:]]) + "\n")
+    done = checked()
+    assert done.returncode == 1
+    assert "NOT THE PROVEN GAINS" in done.stdout
