@@ -72,7 +72,7 @@ class Bundle:
     def as_text(self) -> str:
         """A few lines for a terminal."""
         lines = [
-            f"Bundle {self.path}: {len(self.files)} files, {len(self.rows)} gains, sign convention {SIGN_CONVENTION}.",
+            f"Bundle {self.path}: {len(self.files)} files, gains: {len(self.rows)}, sign convention {SIGN_CONVENTION}.",
             f"Proven for the continuous loop: {'yes' if self.proven_continuous else 'no'}. "
             f"Proven as flashed: {'yes' if self.proven else 'no'}.",
             self.reason,

@@ -19,7 +19,7 @@ from synth.local.obstructed import ObstructionFound
 from synth.local.plant import Field, field_of
 from synth.local.pull import Pulled, pull, scaled
 from synth.network.gains import Gains
-from synth.network.model import Network
+from synth.network.model import Network, need_fixed_pattern
 
 
 class Enclosure(NamedTuple):
@@ -131,7 +131,7 @@ def redesign(
 
 def _checked(network: Network, target: float | Fraction | None, seed: int, starts: int | None) -> float:
     """The target as a float, after the arguments were found in range."""
-    network.refuse_beyond_fixed_links("the design")
+    need_fixed_pattern(network, "the design")
     aim = float(network.goal.target if target is None else target)
     if not 0 < aim < 1:
         raise InputError(

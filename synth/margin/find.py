@@ -20,7 +20,7 @@ from synth.margin.result import LinkTolerance, Margin
 from synth.margin.symbol import LoopFamily, loop_family
 from synth.margin.tolerance import pattern_link_tolerances
 from synth.network.gains import Gains
-from synth.network.model import Link, Network
+from synth.network.model import Link, Network, need_fixed_pattern
 from synth.proof import Certificate, prove
 
 
@@ -50,7 +50,7 @@ def margin(
     that do not fit. Law: proven_factor <= class_limit <= exact.upper (up to the widths), all as factors on today's
     strengths. Sources: theory (1), (2), (3), (15) and sections 6 and 9; the coverings are ours.
     """
-    network.refuse_beyond_fixed_links("the margin")
+    need_fixed_pattern(network, "the margin")
     gains = design_or_gains if isinstance(design_or_gains, Gains) else design_or_gains.gains
     chosen = _checked(network, gains, classes, width)
     scaling = Scaling(network, gains, chosen, own_parts, width / 20)

@@ -313,3 +313,12 @@ class Network:
         from synth.network.graphs import graph_of
 
         return graph_of(self, cells)
+
+
+def need_fixed_pattern(network: object, stage: str) -> None:
+    """Raise InputError unless ``network`` is a Network that ``stage`` can work on (see refuse_beyond_fixed_links)."""
+    if not isinstance(network, Network):
+        raise InputError(
+            f"{stage} needs a network, not {type(network).__name__}; read a problem file first: synth.read(path)."
+        )
+    network.refuse_beyond_fixed_links(stage)

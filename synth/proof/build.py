@@ -20,7 +20,7 @@ from synth.gain.closed import ClosedUnit, close_network
 from synth.gain.peak import PeakGain
 from synth.gain.unit import state_peaks
 from synth.network.gains import Gains
-from synth.network.model import Network
+from synth.network.model import Network, need_fixed_pattern
 from synth.proof import check, peak, storage
 from synth.proof.certificate import Certificate, RadiusClaim, from_document
 from synth.proof.numbers import decimal_down, decimal_up
@@ -46,7 +46,7 @@ def prove(
     says why. Raises InputError for an unknown route, target or gains that do not fit, SolverFailure if the two
     programs disagree.
     """
-    network.refuse_beyond_fixed_links("the proof")
+    need_fixed_pattern(network, "the proof")
     if route not in ROUTES:
         raise InputError(f"route {route!r} is not known; use one of {', '.join(ROUTES)}.")
     goal = Fraction(network.goal.target if target is None else target)

@@ -16,7 +16,7 @@ from synth.base.errors import InputError, Problem, nearest
 from synth.base.progress import Listener, silent
 from synth.base.provenance import Provenance
 from synth.network.gains import Gains
-from synth.network.model import Network
+from synth.network.model import Network, need_fixed_pattern
 from synth.simulate.adversary import GROUPS, attack_class, attack_late, late_starts, wired_scenarios
 from synth.simulate.effects import Scenario, random_scenarios, start_scenarios, steady_scenarios
 from synth.simulate.kernels import horizon, targets
@@ -60,7 +60,7 @@ def simulate(
     """
     chosen = _check(scenarios, units, seconds)
     gains = plant_gains if plant_gains is not None else getattr(design_or_gains, "gains", design_or_gains)
-    network.refuse_beyond_fixed_links("the simulation")
+    need_fixed_pattern(network, "the simulation")
     cells = units if units is not None else network.simulation.units
     section = build_section(network.without_self_links(), gains, cells)
     job = prepare(

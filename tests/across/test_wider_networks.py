@@ -103,3 +103,9 @@ def test_a_row_that_is_no_sum_is_never_assembled_as_one() -> None:
     links = tuple(replace(link, weakens=True) for link in network.links)
     with pytest.raises(InputError, match="not a sum"):
         assemble(close_network(network, convoy_gains()), links)
+
+
+def test_a_path_in_place_of_a_network_is_answered_with_a_sentence() -> None:
+    for call in (synth.design, lambda n: synth.prove(n, convoy_gains()), lambda n: synth.margin(n, convoy_gains())):
+        with pytest.raises(InputError, match=r"needs a network, not str; read a problem file first"):
+            call("convoy.yaml")
