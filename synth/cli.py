@@ -230,7 +230,7 @@ def handoff(
     from synth.handoff import hand_off
     from synth.proof import prove as make_proof
 
-    refuse_foreign(out)
+    refuse_foreign(out, "handoff")
     network, used = _network_and_gains(file, gains, target, seed, quiet)
     certificate = make_proof(network, used, target=_target(target), progress=_progress(quiet))
     bundle = hand_off(network, used, certificate, out)
@@ -248,7 +248,7 @@ def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json
     from synth.network import read_gains
     from synth.whole_job import run_whole_job
 
-    refuse_foreign(out)
+    refuse_foreign(out, "run")
     network = _read(file)
     in_service = None if gains is None else read_gains(gains, network)
     job = run_whole_job(network, out, gains=in_service, target=_target(target), seed=seed, progress=_progress(quiet))
@@ -325,7 +325,8 @@ def _deliver(
     if out is not None:
         from synth.base.files import whole_folder
 
-        with whole_folder(out) as work:
+        verb = click.get_current_context().info_name or ""
+        with whole_folder(out, verb) as work:
             for name, content in files.items():
                 (work / name).write_text(content if isinstance(content, str) else plain_json(content), encoding="utf-8")
             if also is not None:

@@ -56,7 +56,7 @@ def run_whole_job(
     from synth.simulate import simulate as run_simulation
 
     final = Path(out)
-    with whole_folder(final) as work:
+    with whole_folder(final, "run") as work:
         progress("checking the network")
         described = describe(network)
         chosen = None

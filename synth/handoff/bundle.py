@@ -100,7 +100,7 @@ def hand_off(network: Network, design_or_gains: DesignOrGains, certificate: Cert
             "Lower the link strengths or let design search further, prove again, then hand off."
         )
     _about_these(network, gains, certificate)
-    with whole_folder(out) as work:
+    with whole_folder(out, "handoff") as work:
         certificate.save(work / "certificate.json")
         certificate_bytes = (work / "certificate.json").read_bytes()
         _still_verified(work / "certificate.json", network)

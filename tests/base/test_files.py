@@ -72,3 +72,14 @@ def test_write_text_under_a_file_is_a_storage_failure(tmp_path: Path) -> None:
     (tmp_path / "f").write_text("x")
     with pytest.raises(StorageFailure, match="cannot write"):
         write_text(tmp_path / "f" / "g.txt", "y")
+
+
+def test_a_verb_does_not_replace_what_another_verb_wrote(tmp_path: Path) -> None:
+    with whole_folder(tmp_path / "out", "run") as work:
+        (work / "report.html").write_text("an hour of work")
+    with pytest.raises(InputError, match="holds the results of `synth run`"), whole_folder(tmp_path / "out", "check"):
+        pass
+    assert (tmp_path / "out" / "report.html").read_text() == "an hour of work"
+    with whole_folder(tmp_path / "out", "run") as work:
+        (work / "report.html").write_text("newer")
+    assert (tmp_path / "out" / "report.html").read_text() == "newer"
