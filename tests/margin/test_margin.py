@@ -238,6 +238,7 @@ def test_gains_picked_anew_carry_more(monkeypatch: pytest.MonkeyPatch) -> None:
 
     class Picked:
         gains = Gains((gain_set(scalar_kind(1), ExactMatrix.of([[-3]])),))
+        broken: tuple[str, ...] = ()
 
     monkeypatch.setattr("synth.local.design", lambda network: Picked(), raising=False)
     network = chain(k="0.25")
@@ -250,6 +251,21 @@ def test_gains_picked_anew_carry_more(monkeypatch: pytest.MonkeyPatch) -> None:
     assert found.certificate.proven
     assert found.gains["tank"].K[0, 0] == -3
     assert found.as_json()["factor"] == found.factor
+
+
+def test_gains_that_leave_the_limits_of_the_design_are_no_answer(monkeypatch: pytest.MonkeyPatch) -> None:
+    """The same gains, reported by the design as beyond one of its limits, do not count."""
+
+    class Picked:
+        gains = Gains((gain_set(scalar_kind(1), ExactMatrix.of([[-3]])),))
+        broken = ("tank: gain bound",)
+
+    monkeypatch.setattr("synth.local.design", lambda network: Picked(), raising=False)
+    network = chain(k="0.25")
+    start = prove(network, no_gains(network), route="peak")
+    found = largest_redesigned(Scaling(network, no_gains(network)), 1.0, start)
+    assert found is not None
+    assert found.factor == 1.0
 
 
 @pytest.mark.long
