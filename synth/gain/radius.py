@@ -148,6 +148,14 @@ def _solve(operator: GainOperator, members: NDArray[np.intp], width: float) -> _
     return _Class(members, links, inner, lower, upper, point, work + 1, len(members) > 1)
 
 
+def _quotients(inner: GainOperator, s: Floats) -> tuple[Floats, float, float]:
+    """G(s), the largest quotient G(s)/s, and by how much it exceeds the smallest, relatively (theory (10))."""
+    image = inner.apply(s)
+    ratios = image / s
+    most, least = float(ratios.max()), float(ratios.min())
+    return image, most, most / least - 1 if least > 0 else np.inf
+
+
 def _improve(inner: GainOperator, width: float) -> tuple[Floats, int]:
     """A positive point whose quotients are close together; Noda steps first, shifted power steps where they stall."""
     # Far below what is asked, so that rounding the quotients outward still meets it.
@@ -155,31 +163,27 @@ def _improve(inner: GainOperator, width: float) -> tuple[Floats, int]:
     best, spread = np.ones(inner.size), np.inf
     s, work = best, 0
     for _ in range(_NODA_STEPS):
-        image = inner.apply(s)
+        image, most, here = _quotients(inner, s)
         work += 1
-        ratios = image / s
-        here = float(ratios.max() / ratios.min() - 1) if ratios.min() > 0 else np.inf
         if here < spread:
             best, spread = s, here
         if spread <= goal:
             return best, work
-        new = _noda(inner, s, image, float(ratios.max()))
+        new = _noda(inner, s, image, most)
         work += 1
         if new is None:
             break
         s = new
     s = best
     for _ in range(_POWER_STEPS):
-        image = inner.apply(s)
+        image, most, here = _quotients(inner, s)
         work += 1
-        ratios = image / s
-        here = float(ratios.max() / ratios.min() - 1) if ratios.min() > 0 else np.inf
         if here < spread:
             best, spread = s, here
         if spread <= goal:
             break
         # The geometric mean of s and G(s) is a contraction in Hilbert's metric also where G alone would go in circles.
-        s = np.sqrt(s * (image + float(ratios.max()) * 1e-3 * s))
+        s = np.sqrt(s * (image + most * 1e-3 * s))
         s = s / s.max()
     return best, work
 

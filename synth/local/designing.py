@@ -96,7 +96,8 @@ def design(
     ``target`` radius to reach, 0 < target < 1 (absent: the goal's); meeting it early does not stop the search, because
     a smaller radius is more room for whatever the model leaves out. ``seed`` >= 0 fixes all random choices: equal
     inputs give equal gains. ``starts`` number of placed starts of the search (absent: by the number of gains).
-    Where the goal sets no ``fastest`` bound, the search keeps to a disc ten times the fastest open mode.
+    Where the goal sets no ``fastest`` bound, the search keeps to a disc of its own: ten times the fastest open mode or
+    fifty times ``slowest``, whichever is larger (1 1/s where both are zero).
 
     A target out of reach, or limits that no gains keep, is an ordinary result: ``reached`` is False and ``blocking``
     says why. Raises ObstructionFound where no local feedback can work (theory (26)), InputError for a target or
