@@ -18,7 +18,7 @@ from synth.base.provenance import Provenance
 from synth.network.gains import Gains
 from synth.network.model import Network, need_fixed_pattern
 from synth.simulate.adversary import GROUPS, attack_class, attack_late, late_starts, wired_scenarios
-from synth.simulate.effects import Scenario, random_scenarios, start_scenarios, steady_scenarios
+from synth.simulate.effects import Scenario, random_scenarios, start_scenarios, steady_scenarios, worst_frequency
 from synth.simulate.kernels import horizon, targets
 from synth.simulate.measures import Terms, Watch, amplification, signal_table
 from synth.simulate.model import Array, Section, build_section, fold_fresh, open_loop
@@ -26,9 +26,10 @@ from synth.simulate.prepare import INSIDE, MOST_STEPS, Job, fresh_if_short, prep
 from synth.simulate.record import Recorder, stride_for
 from synth.simulate.stepper import Block, Control, Stepper, march
 from synth.simulate.trajectory import Run, Trajectory, Worst
+from synth.simulate.written import Written, parameter_runs, run_written
 
-SCENARIOS = ("step", "sine", "random", "pulse", "leader", "start", "adversary", "held")
-MOST_CLASS_STEPS, MOST_EPOCH = 120_000, 20_000
+SCENARIOS = ("step", "sine", "random", "pulse", "leader", "start", "written", "adversary", "held")
+MOST_CLASS_STEPS, MOST_EPOCH, MOST_WRITTEN = 120_000, 20_000, 20_000
 CLASS_CELLS = 100  # cells of the class adversary; the claim is about any number, and this is deep enough
 
 
@@ -70,9 +71,12 @@ def simulate(
     inner = any(link.sort != "link" for link in network.links)
     if inner:
         job.notes.append(
-            "runs as wired: parameters at the middle of their tolerances, nonlinear terms on their centre lines; the "
-            "adversary over the class moves all of them freely within their ranges"
+            "runs as wired: parameters at the middle of their tolerances, nonlinear terms on their centre lines; runs "
+            "as written: the equations themselves; the adversary over the class moves all of them freely within their "
+            "ranges"
         )
+    if "written" in chosen and any(kind.dynamics is not None for kind in network.kinds):
+        _run_equations(job, gains, seed)
     if "adversary" in chosen:
         _run_class(job, build_section(network, gains, cells) if inner else section)
         _run_late(job)
@@ -238,6 +242,47 @@ def _run_late(job: Job) -> None:
     attack_late(section, x0, signs, job.X0, job.coarse, _both(watch, recorder), job.control())
     words = "from a corner of the initial box; every link picks the value within its declared delay that pushes most"
     _collect(job, watch, recorder, [(name, words) for name in names])
+
+
+def _run_equations(job: Job, gains: Gains, seed: int) -> None:
+    """The equations as written, nonlinear terms and uncertain parameters included, against the same claim."""
+    section, h = job.section, float(job.coarse)
+    steps = ceil(job.seconds / h)
+    if steps > MOST_WRITTEN:
+        job.notes.append(f"runs as written end at {MOST_WRITTEN * h:.4g} s; the fastest mode asks for a short step")
+        steps = MOST_WRITTEN
+    job.progress("running the equations as written")
+    every = steady_scenarios(section, job.amplitude, h, steps, job.scale)
+    rough = random_scenarios(section, job.amplitude, h, steps, job.scale, seed)[1]
+    begun = start_scenarios(section, job.amplitude if job.together else 0 * job.amplitude, h, steps, job.X0, job.scale)
+    dwell = max(1, round(np.pi / worst_frequency(section) / h))
+    plan = [(every["step"][0], "middle"), (every["sine"][1], "middle"), (rough, "middle"), (begun[0], "middle")]
+    drift, uncertain = parameter_runs(section, seed, dwell, [])
+    if uncertain:
+        plan += [(every["step"][0], "low"), (every["step"][0], "high"), (every["sine"][1], "mixed")]
+        plan += [(rough, "changing"), (begun[0], "low"), (begun[0], "high")]
+        drift, _ = parameter_runs(section, seed, dwell, [values for _, values in plan])
+    found = [scenario for scenario, _ in plan]
+    zero = np.zeros((section.block.sizes[0], section.cells))
+    x0 = np.stack([s.x0 if s.x0 is not None else zero for s in found], axis=-1)
+    terms = [Terms(s.X0, s.scale, True) if s.X0 == 0 else Terms(s.X0, None, job.together, job.together) for s in found]
+    watch = job.watch(section, terms)
+    watch.start(x0)
+    recorder = Recorder(section, stride_for(section, steps, 4 * len(found)))
+    control = job.control()
+    written = Written(section, gains, fresh_if_short(section.wires, job.coarse))
+    limits = None if control is None else control.limits
+    run_written(written, x0, job.coarse, steps, _wave(found), drift, _both(watch, recorder), limits)
+    said = {
+        "middle": "" if not uncertain else "; uncertain parameters at the middle of their ranges",
+        "low": "; uncertain parameters at their lowest",
+        "high": "; uncertain parameters at their highest",
+        "mixed": "; every unit with its own parameters, each at an end of its range",
+        "changing": f"; parameters redrawn from the ends of their ranges every {dwell * h:.3g} s",
+    }
+    words = [(f"as written, {s.name}" + (f", {v}" if uncertain else ""), f"equations as written: {s.words}{said[v]}")
+             for s, v in plan]  # fmt: skip
+    _collect(job, watch, recorder, words)
 
 
 def _run_held(job: Job, network: Network) -> None:
