@@ -228,7 +228,7 @@ def lookup(name: str) -> Unit:
         )
     if unit is None:
         raise UnitError(
-            f"unknown unit {name!r}{nearest(name, UNITS)}; compose it from SI names such as m, kg, s, A, K, W, bar"
+            f"unknown unit {name!r}{_close_unit(name)}; compose it from SI names such as m, kg, s, A, K, W, bar"
         )
     return unit
 
@@ -270,6 +270,14 @@ def parse_number(text: str) -> Fraction:
     return Fraction(text.strip())
 
 
+def _close_unit(name: str) -> str:
+    """The hint for a misspelt unit: the same letters in the other case first, and no guess from a single letter."""
+    same = [known for known in UNITS if known.lower() == name.lower()]
+    if same:
+        return f" (did you mean {same[0]!r}?)"
+    return nearest(name, UNITS) if len(name) > 1 else ""
+
+
 def parse_quantity(text: str) -> tuple[Fraction, Unit, bool]:
     """Read ``0.5 s``, ``2.5`` or ``1/3 s``: the number, its unit, and whether a unit was written at all.
 
@@ -279,7 +287,9 @@ def parse_quantity(text: str) -> tuple[Fraction, Unit, bool]:
         raise UnitError("a quantity is a number and a unit, and this text is too long for one")
     found = _QUANTITY.fullmatch(text)
     if found is None:
-        raise UnitError(f"{text!r} is not a quantity; accepted are a number and a unit, such as '0.5 s' or '1/3 m/s'")
+        raise UnitError(
+            f"{text.strip()!r} is not a quantity; accepted are a number and a unit, such as '0.5 s' or '1/3 m/s'"
+        )
     value = parse_number(found["above"])
     if found["below"]:
         divisor = parse_number(found["below"])

@@ -75,6 +75,8 @@ def assembled(draft: Draft, model: Model, before: int) -> Kind | None:
         _uncertain_entry(entry, rows, columns, plant.inner)
     labels = [(row.group, row.name) for row in rows]
     blocks = extended({**_blocks(plant, rows, sizes), **model.blocks}, plant.inner, labels, sizes)
+    if not any(any(row) for row in blocks["Fu"].rows):
+        del blocks["Fu"]  # no feed-through from commands is the rule, and the model says nothing about it then
     dynamics = None
     if model.rates is not None and (draft.pointed or plant.curves or any(row.formula.parameters for row in rows)):
         dynamics = _dynamics(draft, rows, columns, rest, nominal)
@@ -383,5 +385,6 @@ def _kind(
         equations=texts,
         inner=tuple(inner.links),
         dynamics=dynamics,
-        **blocks,
-    )
+        A=blocks["A"], B=blocks["B"], D=blocks["D"], E=blocks["E"], C=blocks["C"], N=blocks["N"], H=blocks["H"],
+        F=blocks["F"], Fw=blocks["Fw"], Fu=blocks.get("Fu"),
+    )  # fmt: skip

@@ -24,13 +24,13 @@ def mode_text(mode: complex) -> str:
     return f"{real:.4g} {'+' if mode.imag > 0 else '-'} {abs(mode.imag):.4g}i"
 
 
-def kind_text(kind: Kind, modes: tuple[complex, ...]) -> list[str]:
-    """Everything about one kind, a line per group."""
+def kind_text(kind: Kind, modes: tuple[complex, ...], names: tuple[str, ...] = ()) -> list[str]:
+    """Everything about one kind, a line per group; ``names`` are those of all kinds that are like it."""
 
     def band(value: Fraction | None) -> str:
         return "" if value is None else f", band {said(value)}"
 
-    lines = [f"Kind {kind.name}"]
+    lines = [f"Kinds {' and '.join(names)}, alike" if len(names) > 1 else f"Kind {(*names, kind.name)[0]}"]
     lines += _signals("states", [f"{s.name} ({s.unit}{band(s.band)})" for s in kind.states])
     limits = ["unlimited" if a.limit is None else f"limit {said(a.limit)}" for a in kind.inputs]
     lines += _signals("inputs", [f"{a.name} ({a.unit}, {limit})" for a, limit in zip(kind.inputs, limits, strict=True)])

@@ -8,11 +8,13 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 
 from synth.base.caution import CAUTIONS, cautions_text
-from synth.base.provenance import Provenance
+from synth.base.provenance import Provenance, canonical
+from synth.network.cuts import least_cells, section_of
 from synth.network.describing import internal, kind_text, mode_text, variants_text
+from synth.network.document import kind_document
 from synth.network.model import Kind, Link, Network
 from synth.network.obstructions import Obstruction, examine
-from synth.network.words import counted, link_words, said, strength_unit
+from synth.network.words import counted, link_units, link_words, said, strength_unit
 
 MOST_KINDS = 12
 MOST_LINKS = 12
@@ -51,6 +53,7 @@ class Description:
             "edges": [
                 {
                     "side": edge.side,
+                    "axis": edge.axis + 1,
                     "units": [
                         {"name": u.name, "kind": u.kind, "at": u.at, "instead_of": u.instead_of} for u in edge.units
                     ],
@@ -58,6 +61,8 @@ class Description:
                 }
                 for edge in network.edges
             ],
+            "notes": list(network.notes),
+            "gain_groups": {group: list(names) for group, names in network.gain_groups().items()},
             "intake": {name: float(bound) for name, bound in self.intake.items()},
             "obstruction": None if self.obstruction is None else self.obstruction.as_json(),
             "tested": self.tested,
@@ -70,8 +75,8 @@ class Description:
         network = self.network
         lines = [network.title, "=" * len(network.title), "", *_layout_text(network)]
         shown = _one_of_each(network)
-        for kind in shown[:MOST_KINDS]:
-            lines += ["", *kind_text(kind, self.modes[kind.name]), *variants_text(network, kind)]
+        for kind, names in shown[:MOST_KINDS]:
+            lines += ["", *kind_text(kind, self.modes[kind.name], names), *variants_text(network, kind)]
         if len(shown) > MOST_KINDS:
             lines += ["", f"... and {len(shown) - MOST_KINDS} more kinds (all of them with --json)."]
         lines += ["", "Links", *_links_text(network), *_edges_text(network)]
@@ -80,6 +85,8 @@ class Description:
             f"  {name:<24} {said(bound)} {_intake_unit(name, network)}".rstrip()
             for name, bound in list(self.intake.items())[:MOST_KINDS]
         ] or ["  none"]
+        if network.notes:
+            lines += ["", "Notes", *(f"  {note}" for note in network.notes)]
         lines += [
             "",
             *_uniform_text(network),
@@ -125,13 +132,9 @@ def _intake(network: Network) -> dict[str, Fraction]:
         else:
             intake[name] += abs(link.strength)
     for edge in network.edges:
-        extra: dict[tuple[str, int], Fraction] = {}
-        for single in edge.links:
-            at = (f"{single.link.kind}.{single.link.take}", single.to)
-            extra[at] = extra.get(at, Fraction(0)) + abs(single.link.strength)
-        regular = dict(intake)
-        for (name, _), more in extra.items():
-            intake[name] = max(intake[name], regular[name] + more)
+        near = section_of(network, edge, least_cells(edge))
+        at_edge = _intake_of_members(near, dict.fromkeys(intake, Fraction(0)))
+        intake = {name: max(bound, at_edge[name]) for name, bound in intake.items()}
     return intake
 
 
@@ -163,13 +166,17 @@ def _counted_links(network: Network) -> list[tuple[Link, int]]:
     return [(link, counts[k]) for k, link in enumerate(network.links)]
 
 
-def _one_of_each(network: Network) -> list[Kind]:
-    """One kind of those that differ only in the values of parameters."""
-    if network.members is None or not network.members.origins:
-        return list(network.kinds)
-    first: dict[str, Kind] = {}
-    for kind, (origin, _) in zip(network.kinds, network.members.origins, strict=True):
-        first.setdefault(origin, kind)
+def _one_of_each(network: Network) -> list[tuple[Kind, tuple[str, ...]]]:
+    """One kind of those that are alike, with the names of all; members differ in values of parameters at most."""
+    first: dict[str, tuple[Kind, tuple[str, ...]]] = {}
+    if network.members is not None and network.members.origins:
+        for kind, (origin, _) in zip(network.kinds, network.members.origins, strict=True):
+            first.setdefault(origin, (kind, (origin,)))
+    else:
+        for kind in network.kinds:
+            same = canonical({**kind_document(kind), "name": "", "equations": dict(kind.equations)})
+            found, names = first.get(same, (kind, ()))
+            first[same] = (found, (*names, kind.name))
     return list(first.values())
 
 
@@ -237,9 +244,26 @@ def _layout_text(network: Network) -> list[str]:
     where = "along a line" if network.dimension == 1 else f"in {network.dimension} dimensions"
     cells = f"One cell ({_names(network.cell_kinds)}) repeated {where} without end"
     ends = " and ".join(edge.side for edge in network.edges)
-    if ends:
-        return [f"{cells}, with its {ends} end: what is proven holds however long the line is."]
-    return [f"{cells}, so what is proven holds for any number of units."]
+    shared = _shared_text(network)
+    if not ends:
+        return [f"{cells}, so what is proven holds for any number of units.", *shared]
+    if network.dimension == 1:
+        return [f"{cells}, with its {ends} end: what is proven holds however long the line is.", *shared]
+    across = network.edges[0].axis + 1
+    return [
+        f"{cells}, with its {ends} edge across axis {across} (the pattern ends there and repeats along it): what is "
+        f"proven holds however large the field is.",
+        *shared,
+    ]
+
+
+def _shared_text(network: Network) -> list[str]:
+    """Which kinds carry the same gains, where any do."""
+    return [
+        f"  {' and '.join(names)} carry the same gains (gain set {group})"
+        for group, names in network.gain_groups().items()
+        if len(names) > 1
+    ]
 
 
 def _links_text(network: Network) -> list[str]:
@@ -266,37 +290,51 @@ def _links_text(network: Network) -> list[str]:
 
 def _edges_text(network: Network) -> list[str]:
     lines: list[str] = []
+    line, row = network.dimension == 1, "row" if network.dimension == 2 else "layer"
     for edge in network.edges:
-        lines += ["", f"The {edge.side} end of the line"]
-        lines += [
-            f"  {unit.name}: a {unit.kind} at place {unit.at} instead of the {unit.instead_of}" for unit in edge.units
-        ]
+        across = "" if line else f" across axis {edge.axis + 1}, the same all along it"
+        lines += ["", f"The {edge.side} {'end of the line' if line else 'edge'}{across}"]
+        for unit in edge.units:
+            what = f"a {unit.kind} at place {unit.at}" if line else f"a {row} of {unit.kind} units, {_deep(unit.at)},"
+            lines.append(f"  {unit.name}: {what} instead of the {unit.instead_of}")
         for single in edge.links:
-            lines.append(f"  into place {single.to}, {single.link.name}: {link_words(single.link, network)}")
+            link, where = single.link, f"place {single.to}" if line else f"the units {_deep(single.to)}"
+            if link.own_part:
+                continue
+            lines.append(f"  into {where}, {link.name}: {link_words(link, network)}")
         if not edge.units and not edge.links:
             lines.append("  the pattern just ends: what would come from outside is not there")
     return lines
 
 
+def _deep(place: int) -> str:
+    if place == 0:
+        return "at the edge itself"
+    return f"{abs(place)} {'place' if abs(place) == 1 else 'places'} in from the edge"
+
+
 def _intake_unit(name: str, network: Network) -> str:
-    units = {strength_unit(link, network) for link in network.links if f"{link.kind}.{link.take}" == name}
+    cuts = [section_of(network, edge, least_cells(edge)) for edge in network.edges]
+    every = [*network.links, *(link for cut in cuts for link in cut.links)]
+    units = {" per ".join(link_units(link, network)) for link in every if f"{link.kind}.{link.take}" == name}
     return next(iter(units)) if len(units) == 1 else ""
 
 
 def _uniform_text(network: Network) -> list[str]:
     if network.members is None:
         places = "everywhere" if network.description == "rules" else "in every cell"
-        kinds = counted(len(network.kinds), "kind")
+        places += " and along the edge" if network.edges and network.dimension > 1 else ""
+        kinds = "one kind" if len(network.kinds) == 1 else f"{len(network.kinds)} kinds"
         return [
-            f"Uniform: {kinds}, every intake bounded as above, the same {places}. What is left to the design is one "
-            "decay for all closed units."
+            f"Uniform: {kinds} and the bounds above, the same {places}. The design is left to find gains with which "
+            "all closed units decay at one common rate."
         ]
     distinct = len(set(network.members.kind.tolist()))
     sorts = len(set(network.members.form.tolist()))
     return [
         f"Uniform: {counted(distinct, 'different unit')} and {counted(sorts, 'different link')} make up "
-        "the network, every intake is bounded as above; equal ones are computed once. What is left to the "
-        "design is one decay for all closed units."
+        "the network, every intake is bounded as above; equal ones are computed once. The design is left to find "
+        "gains with which all closed units decay at one common rate."
     ]
 
 

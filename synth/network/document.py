@@ -58,7 +58,8 @@ def _edge_document(edge: Edge) -> dict[str, object]:
     links = [
         {"to_place": e.to, "slot": e.slot, "source_slot": e.source_slot, **link_document(e.link)} for e in edge.links
     ]
-    return {"side": edge.side, "units": sorted(units, key=canonical), "links": sorted(links, key=canonical)}
+    across = {"axis": edge.axis} if edge.axis else {}
+    return {"side": edge.side, **across, "units": sorted(units, key=canonical), "links": sorted(links, key=canonical)}
 
 
 def _ranks(items: list[Any], key: Callable[[Any], str]) -> tuple[list[int], list[int]]:

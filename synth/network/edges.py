@@ -1,60 +1,71 @@
-"""Edges of a line: the units that stand there instead of the pattern's, and single links near them.
+"""Edges of a pattern: the units that stand there instead of the pattern's, and single links near them.
 
     edge:
       side: first                                  # or last; a line with both ends has a list of two edges
+      axis: 1                                      # which number of ``at`` counts from the edge (default the first)
       units: {leader: {at: 0, kind: lead_truck}}   # stands where the pattern would have a unit
       links: [{name: radio, from: leader.place, to: hauler@2.ahead, strength: 0.1 1/s^2}]
 
-Places count 0, 1, 2, ... at the first edge and ..., -2, -1, 0 at the last. ``section_of`` writes the outermost cells
-out as members, from which the edge part of theory (14) is computed.
-
-Law: in ``section_of`` every unit that is farther from the cut than the longest link has exactly the links it has in the
-half line; a unit near the cut keeps its own parts, so the section is a cut of the operator and not a shorter line.
+Places count 0, 1, 2, ... at the first edge and ..., -2, -1, 0 at the last. In two and three dimensions the pattern
+fills a half plane or a half space, an edge unit is a whole row or layer of units, and everything repeats along the
+edge; a link there may come from ``along`` places farther along it. ``synth.network.cuts`` writes the outermost cells
+out.
 """
 
 from __future__ import annotations
 
 import re
 from collections.abc import Mapping
-from dataclasses import replace
-from fractions import Fraction
+from dataclasses import dataclass, replace
 
-from synth.base.errors import InputError
 from synth.base.units import parse_unit
-from synth.network.layout import Edge, EdgeLink, EdgeUnit, Members
+from synth.network.layout import Edge, EdgeLink, EdgeUnit
 from synth.network.links import FARTHEST, End, Known, Positions, class_name, end_of, links_of, read_form
-from synth.network.model import Kind, Link, Network
+from synth.network.model import Kind, Link
 from synth.network.sections import Section, items_of, named_entries, section, text_of, whole
-from synth.network.yaml_map import Listing, Node, Problems
+from synth.network.yaml_map import Listing, Node, Problems, Scalar
 
 EXAMPLE = "{side: first, units: {leader: {at: 0, kind: lead_truck}}}"
 LINK_EXAMPLE = "{name: radio, from: leader.place, to: hauler@2.ahead, strength: 0.1 1/s^2}"
 
 
 def read_edges(
-    node: Node, pattern_links: tuple[Link, ...], dimension: int, known: Known, positions: Positions, problems: Problems
-) -> tuple[tuple[Edge, ...], tuple[str, ...]]:
-    """The edges, and the kinds that make up the cell: those that are not there for an edge only."""
-    if dimension != 1:
-        problems.add(
-            f"network.edge: edges are honoured for patterns along a line; this one has dimension {dimension}. Take the "
-            "edge out, and bear in mind that the results are then about the inside of the field.",
-            node,
-        )
-        return (), known.declared
+    node: Node, pattern_links: tuple[Link, ...], dimension: int, places: tuple[str, ...] | None, known: Known,
+    positions: Positions, problems: Problems,
+) -> tuple[tuple[Edge, ...], tuple[str, ...]]:  # fmt: skip
+    """The edges, and the kinds that make up the cell: its ``places``, or the kinds that are not there for an edge."""
     items = items_of(node, problems, f"[{EXAMPLE}]") if isinstance(node, Listing) else (node,)
     parts = [part for item in items if (part := section(item, "edge", problems, EXAMPLE)) is not None]
     in_links = {name for link in pattern_links for name in (link.kind, link.source_kind)}
     named = {text for part in parts for text in _kinds_named(part)}
-    cell = tuple(name for name in known.declared if name not in named or name in in_links)
-    edges = [edge for part in parts if (edge := _edge(part, cell, pattern_links, known, positions, problems))]
-    sides = [edge.side for edge in edges]
+    cell = places or tuple(name for name in known.declared if name not in named or name in in_links)
+    around = _Around(cell, pattern_links, dimension, known)
+    edges = [edge for part in parts if (edge := _edge(part, around, positions, problems))]
+    axes = {edge.axis for edge in edges}
+    if len(axes) > 1:
+        problems.add(
+            "network.edge: edges in different directions meet in a corner, which this version does not read; keep "
+            f"the edge of one axis ({' or '.join(str(axis + 1) for axis in sorted(axes))}), and bear in mind that the "
+            "results are then not about the corner.",
+            node,
+        )
     for side in ("first", "last"):
-        if sides.count(side) > 1:
-            problems.add(f"network.edge: a line has one {side} edge; put all its units into one.", node)
+        if [edge.side for edge in edges].count(side) > len(axes):
+            what = "a line" if dimension == 1 else "a pattern"
+            problems.add(f"network.edge: {what} has one {side} edge; put all its units into one.", node)
     if not cell:
         problems.add("network.edge: every kind stands at an edge; the pattern itself needs a kind of its own.", node)
     return tuple(edges), cell
+
+
+@dataclass(frozen=True)
+class _Around:
+    """The pattern that an edge belongs to: the kinds of its cell, its links, its dimension, and what may be named."""
+
+    cell: tuple[str, ...]
+    links: tuple[Link, ...]
+    dimension: int
+    known: Known
 
 
 def _kinds_named(part: Section) -> list[str]:
@@ -66,16 +77,15 @@ def _kinds_named(part: Section) -> list[str]:
     return found
 
 
-def _edge(
-    part: Section, cell: tuple[str, ...], pattern: tuple[Link, ...], known: Known, positions: Positions,
-    problems: Problems,
-) -> Edge | None:  # fmt: skip
+def _edge(part: Section, around: _Around, positions: Positions, problems: Problems) -> Edge | None:
     before = problems.count
+    known, cell = around.known, around.cell
     side = text_of(part.need("side", "side: first"), problems, "'first' or 'last'")
     if side is not None and side not in ("first", "last"):
         problems.add(
             f"{part.table.path}.side: {side[:40]!r} is not accepted; accepted are first, last.", part.get("side")
         )
+    axis = whole(part.get("axis"), problems, 1, around.dimension) or 1
     bounds = (-FARTHEST, 0) if side == "last" else (0, FARTHEST)
     units: list[EdgeUnit] = []
     for entry in named_entries(part.get("units"), problems, "{leader: {at: 0, kind: lead_truck}}"):
@@ -95,10 +105,10 @@ def _edge(
         if any((u.at, u.instead_of) == (at, instead) for u in units):
             problems.add(f"{entry.value.path}: another unit stands at this place already; choose another place.", entry)
         unit = EdgeUnit(entry.key, kind, at, instead)
-        _fits(unit, inner, pattern, known.kinds, problems)
+        _fits(unit, inner, around.links, known.kinds, problems)
         units.append(unit)
-    edge = Edge(side or "first", tuple(units))
-    links = _edge_links(part, edge, cell, known, positions, problems)
+    edge = Edge(side or "first", tuple(units), axis=axis - 1)
+    links = _edge_links(part, edge, around, positions, problems)
     return None if problems.count > before else replace(edge, links=links)
 
 
@@ -134,9 +144,10 @@ def _fits(
 
 
 def _edge_links(
-    part: Section, edge: Edge, cell: tuple[str, ...], known: Known, positions: Positions, problems: Problems
+    part: Section, edge: Edge, around: _Around, positions: Positions, problems: Problems
 ) -> tuple[EdgeLink, ...]:
     found: list[EdgeLink] = []
+    cell, known = around.cell, around.known
     for item in items_of(part.get("links"), problems, f"[{LINK_EXAMPLE}]"):
         inner = section(item, "edge_link", problems, LINK_EXAMPLE)
         if inner is None:
@@ -145,15 +156,34 @@ def _edge_links(
         source = _edge_end(inner.need("from", "from: leader.place"), "offers", edge, cell, known, problems)
         target = _edge_end(inner.need("to", "to: hauler@2.ahead"), "takes", edge, cell, known, problems)
         source_end, target_end = (source[0] if source else None), (target[0] if target else None)
-        itself = bool(source and target and source[1] == target[1] and source[2] == target[2])
+        along = _along(inner, around.dimension - 1, problems)
+        itself = bool(source and target and source[1] == target[1] and source[2] == target[2] and not any(along or ()))
         form = read_form(inner, source_end, target_end, known, problems, itself)
-        if form is None or source is None or target is None:
+        if form is None or source is None or target is None or along is None:
             continue
         positions.strengths.append((name, form, inner.get("strength") or item))
-        for link in links_of(form, name, source[0], target[0], (source[1] - target[1],)):
+        at = (*along[: edge.axis], source[1] - target[1], *along[edge.axis :])
+        for link in links_of(form, name, source[0], target[0], at):
             slot_from = target[2] if link.own_part else source[2]
             found.append(EdgeLink(link, target[1], target[2], slot_from))
     return tuple(found)
+
+
+def _along(part: Section, numbers: int, problems: Problems) -> tuple[int, ...] | None:
+    """How many places along the edge the sending unit stands away, in the order of the other axes; default zero."""
+    node = part.get("along")
+    if node is None:
+        return (0,) * numbers
+    items = (node,) if isinstance(node, Scalar) else items_of(node, problems, "[0, 1]")
+    if not numbers:
+        problems.add(f"{node.path}: the end of a line is one place, so there is nothing along it; take it out.", node)
+        return None
+    if len(items) != numbers:
+        asked = "one whole number is" if numbers == 1 else "two whole numbers are"
+        problems.add(f"{node.path}: {asked} expected here, such as {1 if numbers == 1 else [0, 1]}.", node)
+        return None
+    found = [whole(item, problems, -FARTHEST, FARTHEST) for item in items]
+    return None if None in found else tuple(n for n in found if n is not None)
 
 
 def _edge_end(
@@ -193,109 +223,3 @@ def _edge_end(
             return None
     end = end_of(known.kinds.get(kind), side, signal, node, problems)
     return None if end is None else (end, place, slot)
-
-
-def least_cells(edge: Edge) -> int:
-    """How many cells hold all of the edge's own units and links."""
-    places = [u.at for u in edge.units]
-    places += [place for e in edge.links for place in (e.to, e.to + e.link.at[0])]
-    return 1 + max(map(abs, places), default=0)
-
-
-def section_of(network: Network, edge: Edge, cells: int) -> Network:
-    """The outermost ``cells`` cells of a half line as members; names of units of the pattern are 'kind place'.
-
-    Raises InputError where ``cells`` is less than what the edge's own units and links reach.
-    """
-    import numpy as np
-
-    from synth.network.members import Wiring
-
-    if cells < least_cells(edge):
-        raise InputError(
-            f"a section of this edge needs at least {least_cells(edge)} cells, so that its own units are in it."
-        )
-    step = 1 if edge.side == "first" else -1
-    special = {(u.at, u.instead_of): u for u in edge.units}
-    cell = [kind.name for kind in network.cell_kinds]
-    names: list[str] = []
-    kinds: list[int] = []
-    index: dict[tuple[int, str], int] = {}
-    position = {kind.name: i for i, kind in enumerate(network.kinds)}
-    for n in range(cells):
-        for slot in cell:
-            unit = special.get((n * step, slot))
-            index[n * step, slot] = len(names)
-            names.append(f"{slot} {n * step}" if unit is None else unit.name)
-            kinds.append(position[slot if unit is None else unit.kind])
-    wiring = Wiring()
-    for group in written(network.links):
-        link = group[0]
-        for n in range(cells):
-            place = n * step
-            there = place + link.at[0]
-            if link.sort != "link" or not edge.inside(there) or (place, link.kind) not in index:
-                continue
-            to = index[place, link.kind]
-            far = special.get((there, link.source_kind))
-            ends = network.kinds[kinds[to]], network.kind(far.kind if far else link.source_kind)
-            adapted = _adapted(group, *ends, network)
-            if adapted:
-                wiring.append(to, index.get((there, link.source_kind), -1), wiring.form(adapted))
-    for link in network.links:
-        if link.sort != "link":  # what stands for tolerances and curves goes with the kind, wherever it stands
-            form = wiring.form((replace(link, at=()),))
-            for i, kind_index in enumerate(kinds):
-                if network.kinds[kind_index].name == link.kind:
-                    wiring.append(i, i, form)
-    for group in written(tuple(e.link for e in edge.links)):
-        extra = next(e for e in edge.links if e.link is group[0])
-        source = index[extra.to + extra.link.at[0], extra.source_slot]
-        form = wiring.form(tuple(replace(link, at=()) for link in group))
-        wiring.append(index[extra.to, extra.slot], source, form)
-    links, to_array, source_array, forms, parts = wiring.arrays()
-    origins: tuple[tuple[str, Mapping[str, str]], ...] = tuple((kind.name, {}) for kind in network.kinds)
-    members = Members(tuple(names), np.array(kinds, dtype=np.int32), to_array, source_array, forms, parts, origins)
-    return replace(
-        network, links=links, description="members", dimension=0, edges=(), cell=None, members=members,
-        title=f"{network.title} ({edge.side} {cells} cells)",
-    )  # fmt: skip
-
-
-def written(links: tuple[Link, ...]) -> list[tuple[Link, ...]]:
-    """The parts that belong to one written link together: an own part follows its neighbour's part."""
-    groups: list[tuple[Link, ...]] = []
-    for link in links:
-        if link.own_part and groups:
-            groups[-1] = (*groups[-1], link)
-        else:
-            groups.append((link,))
-    return groups
-
-
-def _adapted(group: tuple[Link, ...], receiver: Kind, sender: Kind, network: Network) -> tuple[Link, ...]:
-    """A pattern link between the kinds that stand at its ends; empty if one of them cannot take or offer it."""
-    link = group[0]
-    takes = {s.name: s.unit for s in receiver.takes}
-    offers = {s.name: s.unit for s in sender.offers}
-    own = {s.name: s.unit for s in receiver.offers}
-    relative = link.relative or len(group) > 1
-    if link.take not in takes or link.offer not in offers or (relative and link.offer not in own):
-        return ()
-
-    def factor(unit: str, kind: Kind, side: str, name: str) -> Fraction:
-        return parse_unit(unit).factor / parse_unit(getattr(kind, side)[kind.index(side, name)].unit).factor
-
-    usual = network.kind(link.kind)
-    taken = factor(takes[link.take], usual, "takes", link.take)
-    offered = factor(offers[link.offer], network.kind(link.source_kind), "offers", link.offer) / taken
-    itself = factor(own[link.offer], usual, "offers", link.offer) / taken if relative else Fraction(1)
-    first = replace(
-        link, at=(), kind=receiver.name, source_kind=sender.name, strength=link.strength * offered,
-        own_strength=link.own_strength * itself,
-    )  # fmt: skip
-    rest = (
-        replace(part, at=(), kind=receiver.name, source_kind=receiver.name, strength=part.strength * itself)
-        for part in group[1:]
-    )
-    return (first, *rest)

@@ -1,6 +1,6 @@
 """Matrices of a kind that stand elsewhere: in a MAT or NPZ file, or in a ``control.StateSpace`` object.
 
-A file holds the variables ``A B D E C N H F Fw`` of the key ``matrices``, in declared units, rows and columns in the
+A file holds the variables ``A B D E C N H F Fw Fu`` of the key ``matrices``, in declared units, rows and columns in the
 order in which the problem file declares the signals. A StateSpace object names its own signals; the declaration says
 which of its inputs are ``inputs``, ``takes`` and ``disturbances``, and which of its outputs are ``offers`` and
 ``sensors``. Nothing is left over: a variable or a plant input that nobody declared is a problem.
@@ -347,6 +347,7 @@ def _no_feed_through(outputs: Sequence[str], block: _Rows, path: str, names: _La
         if any(row):
             names.problems.add(
                 f"{path}.{name}: the plant passes an actuator or a disturbance straight through to this output (its D "
-                "is not zero there), which is not accepted here; add the lag of the actuator or the sensor as a state.",
+                "is not zero there), so the command would feed back on itself without delay; add the lag of the "
+                "actuator or of the sensor as a state.",
                 names.plant,
             )

@@ -1,7 +1,8 @@
 """Reads a gain table (CSV or JSON) back into ``Gains``; strict, because a wrong sign or unit can destabilise a plant.
 
 One row per gain, u = K y. Lines of a CSV table that start with ``#`` are remarks. Every entry of every K must be there
-once; only entries that ``design.uses`` excludes may be left out, and must be zero if they are there.
+once; only entries that ``design.uses`` excludes may be left out, and must be zero if they are there. Where several
+kinds carry the same gains (``Network.gain_groups``), rows may name the gain set once for all of them.
 
 Law: reading what was written for the same network gives back the same exact gains.
 """
@@ -56,12 +57,28 @@ def read_gains(path: str | os.PathLike[str], network: Network) -> Gains:
     if problems.found:
         raise InputError(problems.in_order())
     found: dict[tuple[str, str, str], Fraction] = {}
+    named = {row["kind"].text for row in rows}
     for row in rows:
-        _entry(row, network, found, problems)
+        _entry(row, network, named, found, problems)
     sets = [_set(kind, network, found, problems, Place(file, 1, 1)) for kind in network.kinds]
+    if not problems.found:
+        _same_in_groups(network, sets, problems, Place(file, 1, 1))
     if problems.found:
         raise InputError(problems.in_order())
     return Gains(tuple(gain_set(kind, K) for kind, K in zip(network.kinds, sets, strict=True)))
+
+
+def _same_in_groups(network: Network, sets: list[ExactMatrix], problems: Problems, top: Place) -> None:
+    """Kinds that carry the same gains have the same in the table."""
+    of = {kind.name: K for kind, K in zip(network.kinds, sets, strict=True)}
+    for group, names in network.gain_groups().items():
+        other = next((name for name in names if of[name] != of[names[0]]), None)
+        if other is not None:
+            problems.add(
+                f"{names[0]} and {other} carry the same gains (gain set {group}), but this table gives them different "
+                "ones; make them equal, or declare 'gains: per_place' in the design.",
+                top,
+            )
 
 
 def _set(
@@ -83,19 +100,27 @@ def _set(
     return ExactMatrix.of(lines, (len(kind.inputs), len(kind.sensors)))
 
 
-def _entry(row: _Row, network: Network, found: dict[tuple[str, str, str], Fraction], problems: Problems) -> None:
-    """Check one row and store its gain."""
+def _entry(
+    row: _Row, network: Network, named: set[str], found: dict[tuple[str, str, str], Fraction], problems: Problems
+) -> None:
+    """Check one row and store its gain, of every kind it is about; ``named`` are all names in the column of kinds."""
 
     def refuse(column: str, sentence: str) -> None:
         problems.add(f"{column}: {sentence}.", row[column].place)
 
     kinds = {kind.name: kind for kind in network.kinds}
     name = row["kind"].text
-    if name not in kinds:
+    groups = network.gain_groups()
+    about = [k for k in groups.get(name, (name,)) if k == name or k not in named]
+    if name not in kinds and name not in groups:
         return refuse(
             "kind", f"unknown kind {name[:40]!r}{nearest(name, kinds)}; the problem file declares {', '.join(kinds)}"
         )
-    kind = kinds[name]
+    if not about:
+        return refuse(
+            "kind", f"every kind of the gain set {name!r} has rows of its own; keep these, or those of the set"
+        )
+    kind = kinds[about[0]]
     inputs, sensors = {a.name: a.unit for a in kind.inputs}, {s.name: s.unit for s in kind.sensors}
     actuator, signal = row["actuator"].text, row["signal"].text
     if actuator not in inputs:
@@ -133,15 +158,16 @@ def _entry(row: _Row, network: Network, found: dict[tuple[str, str, str], Fracti
     if actuator not in inputs or signal not in sensors:
         return None
     _units(row, inputs[actuator], sensors[signal], problems)
-    key = (name, actuator, signal)
-    if key in found:
+    keys = [(k, actuator, signal) for k in about]
+    if keys[0] in found:
         refuse("signal", f"the gain of {name} from {signal} to {actuator} stands twice; keep one row")
-    uses = network.goal.uses.get(name, {}).get(actuator)
+    uses = network.goal.uses.get(about[0], {}).get(actuator)
     if uses is not None and signal not in uses and value:
         refuse(
             "gain", f"design.uses does not let {actuator} use {signal}; the gain must be 0, or the problem file changed"
         )
-    found.setdefault(key, value or Fraction(0))
+    for key in keys:
+        found.setdefault(key, value or Fraction(0))
     return None
 
 

@@ -19,7 +19,7 @@ from xml.sax.saxutils import quoteattr
 from synth.base.errors import InputError, Place
 from synth.base.files import write_text
 from synth.base.units import parse_unit
-from synth.network.edges import least_cells, section_of
+from synth.network.cuts import least_cells, section_of
 from synth.network.graphml import EDGE, NODE, parse_graphml
 from synth.network.members import LINK_COLUMNS, Records
 from synth.network.model import Kind, Link, Network
@@ -153,7 +153,8 @@ def graph_of(network: Network, cells: int) -> nx.MultiDiGraph:
     elif network.rules:
         raise InputError("rules describe every wiring that obeys them, so there is no one graph to show.")
     elif network.edges:
-        whole = section_of(network, network.edges[0], max(cells, least_cells(network.edges[0])))
+        first = network.edges[0]
+        whole = section_of(network, first, max(cells, least_cells(first)), cells)
         graph.add_nodes_from(_nodes(whole))
         graph.add_edges_from(_edges(whole, cut=True))
     else:

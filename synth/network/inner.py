@@ -313,15 +313,11 @@ def extended(
         starts[group] = slice(start, start + sizes[group])
         start += sizes[group]
     extra = {"takes": len(inner.takes), "disturbances": len(inner.shifts)}
-    for name, group in (("H", "states"), ("F", "takes"), ("Fw", "disturbances")):
+    for name, group in (("H", "states"), ("F", "takes"), ("Fw", "disturbances"), ("Fu", "inputs")):
         pad = (Fraction(0),) * extra.get(group, 0)
         old = result[name]
         added = [(*offer.row[starts[group]], *pad) for offer in inner.offers]
         result[name] = ExactMatrix.of([*old.rows, *added], (old.shape[0] + len(added), old.shape[1]))
-    commands = [offer.row[starts["inputs"]] for offer in inner.offers]
-    if any(any(row) for row in commands):
-        silent = [(Fraction(0),) * sizes["inputs"]] * (result["H"].shape[0] - len(commands))
-        result["Fu"] = ExactMatrix.of([*silent, *commands], (result["H"].shape[0], sizes["inputs"]))
     return result
 
 

@@ -8,6 +8,7 @@ from fractions import Fraction
 from synth.base.errors import nearest
 from synth.base.units import Unit, UnitError, parse_quantity
 from synth.network.assembling import Model, assembled
+from synth.network.controller_reading import read_controller
 from synth.network.files_of_matrices import plant_matrices, plant_object, read_matrix_file
 from synth.network.formula import Formula
 from synth.network.intervals import Interval
@@ -48,9 +49,9 @@ def read_kind(entry: Entry, problems: Problems) -> Kind | None:
         return None
     if "plant" in ways:
         given = plant_matrices(plant, part, draft) if plant is not None and problems.count == before else None
-    if ways and ways != ["equations"]:
-        return _from_matrices(given, part, draft, before)
-    return _from_equations(part, draft, before)
+    by_matrices = bool(ways) and ways != ["equations"]
+    kind = _from_matrices(given, part, draft, before) if by_matrices else _from_equations(part, draft, before)
+    return None if kind is None else read_controller(part.get("controller"), kind, problems)
 
 
 def _by_matrix(given: Section | None, name: str, plant: Foreign | None, outputs: Node | None, unread: bool) -> bool:

@@ -20,7 +20,10 @@ if TYPE_CHECKING:
 
 @dataclass(frozen=True)
 class EdgeUnit:
-    """A named unit at place ``at`` of a half line, where the pattern would have a unit of ``instead_of``."""
+    """A named unit at place ``at``, counted from the edge, where the pattern would have a unit of ``instead_of``.
+
+    In two and three dimensions it is a whole row (or layer) of such units, the same all along the edge.
+    """
 
     name: str
     kind: str
@@ -30,10 +33,10 @@ class EdgeUnit:
 
 @dataclass(frozen=True)
 class EdgeLink:
-    """A single link near an edge: the unit at place ``to`` takes from the unit at ``to + link.at[0]``.
+    """A link near an edge: the unit at place ``to`` takes from the unit at ``to + link.at[axis]``.
 
     ``link.kind`` and ``link.source_kind`` are the kinds that stand there, edge units included; ``slot`` and
-    ``source_slot`` the kinds that the pattern has there.
+    ``source_slot`` the kinds that the pattern has there. The other numbers of ``link.at`` are steps along the edge.
     """
 
     link: Link
@@ -44,18 +47,20 @@ class EdgeLink:
 
 @dataclass(frozen=True)
 class Edge:
-    """One end of a line: the pattern goes on without end to the other side.
+    """One end of a pattern in direction ``axis`` (counted from 0): it goes on without end to the other side.
 
-    ``side`` 'first': the places are 0, 1, 2, ...; 'last': they are ..., -2, -1, 0. A pattern link whose source would
-    stand outside is not there at all, own part included; so is one that an edge unit cannot take or offer.
+    ``side`` 'first': the places along ``axis`` are 0, 1, 2, ...; 'last': they are ..., -2, -1, 0. In every other
+    direction nothing changes along the edge. A pattern link whose source would stand outside is not there at all, own
+    part included; so is one that an edge unit cannot take or offer.
     """
 
     side: str
     units: tuple[EdgeUnit, ...]
     links: tuple[EdgeLink, ...] = ()
+    axis: int = 0
 
     def inside(self, place: int) -> bool:
-        """Whether ``place`` belongs to the half line."""
+        """Whether ``place`` along ``axis`` belongs to the pattern."""
         return place >= 0 if self.side == "first" else place <= 0
 
 

@@ -56,12 +56,15 @@ class End:
 class Known:
     """The kinds a link may name: ``kinds`` without problems, ``declared`` the names of all.
 
-    A link to a kind that has a problem of its own gets no second complaint.
+    A link to a kind that has a problem of its own gets no second complaint. Where a cell has named places, these are
+    the kinds, and ``places`` lists those of each declared kind.
     """
 
     kinds: Mapping[str, Kind]
     declared: tuple[str, ...]
     parameters: Mapping[str, Parameters]
+    places: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
+    used: set[tuple[str, str]] = field(default_factory=set)  # (kind, parameter) that the strength of a link names
 
     def of(self, kind: Kind) -> Parameters:
         """The parameters of a kind, none where matrices give it."""
@@ -124,10 +127,17 @@ def read_end(node: Node | None, side: str, known: Known, problems: Problems) -> 
             node,
         )
         return None
+    if kind_name not in known.declared and known.places.get(kind_name):
+        problems.add(
+            f"{node.path}: {kind_name!r} is a kind, and the cell has named places; say which is meant: "
+            f"{' or '.join(f'{place}.{signal}' for place in known.places[kind_name])}.",
+            node,
+        )
+        return None
     if kind_name not in known.declared:
         problems.add(
-            f"{node.path}: unknown kind {kind_name!r}{nearest(kind_name, known.declared)}; declared are "
-            f"{', '.join(known.declared) or 'none'}.",
+            f"{node.path}: unknown {'place' if known.places else 'kind'} {kind_name!r}"
+            f"{nearest(kind_name, known.declared)}; declared are {', '.join(known.declared) or 'none'}.",
             node,
         )
         return None
@@ -176,7 +186,9 @@ def read_form(
     # In SI first: the strength as a person writes it has nothing to do with the units of the two ends.
     si = Declared(wanted.text, Unit(Fraction(1), wanted.dimension))
     ends = {"from": known.of(source.kind), "to": known.of(target.kind)}
-    span = read_strength(strength_node, si, target.declared.text, source.declared.text, ends, problems)
+    named: set[tuple[str, str]] = set()
+    span = read_strength(strength_node, si, target.declared.text, source.declared.text, ends, problems, named)
+    known.used.update(((source if end == "from" else target).kind.name, name) for end, name in named)
     own = _own_ratio(part, source, target, itself, problems) if relative else None
     if span is not None and weakens and span.low < 0 < span.high:
         problems.add(
@@ -295,7 +307,7 @@ def _own_ratio(part: Section, source: End, target: End, itself: bool, problems: 
     row = kind.index("offers", source.signal)
     if any(kind.F.rows[row]) or any(kind.Fw.rows[row]) or (kind.Fu is not None and any(kind.Fu.rows[row])):
         problems.add(
-            f"{path}.relative: {kind.name}.{source.signal} contains a taken signal or a disturbance, so "
+            f"{path}.relative: {kind.name}.{source.signal} contains a taken signal, a command or a disturbance, so "
             "subtracting it would be "
             "a loop without memory; offer a state, or take 'relative' out.",
             where,

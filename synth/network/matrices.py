@@ -22,6 +22,7 @@ SHAPES: dict[str, tuple[str, str]] = {
     "H": ("offers", "states"),
     "F": ("offers", "takes"),
     "Fw": ("offers", "disturbances"),
+    "Fu": ("offers", "inputs"),
 }
 
 
@@ -35,15 +36,15 @@ class UncertainEntry:
     half: Fraction
 
 
-_OPTIONAL = ("C", "N", "H", "F", "Fw")
-_LEAD = {"N": "C", "F": "H", "Fw": "H"}
+_OPTIONAL = ("C", "N", "H", "F", "Fw", "Fu")
+_LEAD = {"N": "C", "F": "H", "Fw": "H", "Fu": "H"}
 
 
 def read_matrices(
     given: Section, sizes: dict[str, int], shapes_known: bool, uncertain: list[UncertainEntry]
 ) -> dict[str, ExactMatrix]:
     """The matrices by name, with the middle of every entry that has a tolerance (which is added to ``uncertain``);
-    C with N, or H with F and Fw, are absent where expressions give the outputs instead.
+    C with N, or H with F, Fw and Fu, are absent where expressions give the outputs instead.
 
     A matrix with an empty side may be left out. ``shapes_known`` is false if a signal has a problem of its own: the
     shapes are then not compared.

@@ -20,12 +20,15 @@ from typing import TYPE_CHECKING
 
 from synth.base.errors import Place, nearest
 from synth.base.units import NONE, Dimension, UnitError, parse_quantity
+from synth.network.intervals import Interval
 from synth.network.kinds import read_kind
 from synth.network.layout import Form, Members
 from synth.network.links import End, Known, Positions, end_of, links_of, read_form
 from synth.network.model import Goal, Kind, Link
 from synth.network.sections import Section, name_is_good
+from synth.network.strengths import Parameter, Ranged
 from synth.network.templates import Template
+from synth.network.tolerances import has_tolerance, parse_tolerance
 from synth.network.yaml_map import Entry, Node, Problems, Scalar, Table, plain_value
 
 if TYPE_CHECKING:
@@ -196,10 +199,10 @@ def _new_kind(
             continue
         value = parameter_value(node)
         usual = base[parameter]
-        if value is not None and usual is not None and value[1] != usual[1]:
+        if value is not None and usual is not None and dimension_of(value) != dimension_of(usual):
             reading.refuse("unit", number, parameter, f"{text[:40]!r} has not the unit that {name}.{parameter} has")
         elif value is None or value != usual:
-            changed[parameter], exact[parameter] = node, value or text
+            changed[parameter], exact[parameter] = node, value if isinstance(value, tuple) else text
     if problems.count > before:
         return None
     key = (name, *sorted(exact.items()))
@@ -212,7 +215,7 @@ def _new_kind(
         if kind is not None:
             reading.kinds.append(kind)
             reading.origins.append((name, {p: node.text for p, node in changed.items()}))
-            own = {p: v if isinstance(v, tuple) else None for p, v in exact.items()}
+            own = {p: parameter_value(node) for p, node in changed.items()}
             reading.known.parameters[kind.name] = {**base, **own}  # type: ignore[index]
     return reading.by_key[key]
 
@@ -236,7 +239,7 @@ def _changed(
         reading.refuse("unit", number, next(iter(changed)), f"with {words} the kind {name} is not accepted: {said}")
         return None
     said = ", ".join(f"{p}={v[0] if isinstance(v, tuple) else v}" for p, v in sorted(exact.items()))
-    return replace(kind, name=f"{name} {said}")
+    return replace(kind, name=f"{name} {said}", group="")
 
 
 def _links(
@@ -354,13 +357,24 @@ def _quick_form(
     return wiring.form(tuple(map(grown, parts)))
 
 
-def parameter_value(node: Node | None) -> tuple[Fraction, Dimension] | None:
-    """A parameter in SI units with its dimension; None if it is no single exact quantity."""
+def dimension_of(parameter: tuple[Fraction, Dimension] | Ranged) -> Dimension:
+    """The dimension of a parameter that could be read."""
+    return parameter.dimension if isinstance(parameter, Ranged) else parameter[1]
+
+
+def parameter_value(node: Node | None) -> Parameter:
+    """A parameter in SI units with its dimension; None if it is no quantity and no range of quantities."""
     if not isinstance(node, Scalar):
         return None
     if isinstance(node.value, Fraction):
         return node.value, NONE
     try:
+        if has_tolerance(node.text):
+            range_ = parse_tolerance(node.text)
+            factor = range_.unit.factor
+            if range_.low < range_.high:
+                return Ranged(Interval(range_.low * factor, range_.high * factor), range_.unit.dimension)
+            return range_.low * factor, range_.unit.dimension
         value, unit, _ = parse_quantity(node.text)
     except UnitError:
         return None

@@ -23,6 +23,7 @@ from synth.network.layout import Edge, Members, Rule
 if TYPE_CHECKING:
     import networkx as nx
 
+    from synth.network.controller import Controller
     from synth.network.dynamics import Dynamics
 
 _DESCRIPTIONS = {
@@ -75,7 +76,11 @@ class SelfLink:
 
 @dataclass(frozen=True)
 class Kind:
-    """One kind of unit: its signals and its exact matrices (shapes by number of states n, inputs m, sensors p, ...)."""
+    """One kind of unit: its signals and its exact matrices (shapes by number of states n, inputs m, sensors p, ...).
+
+    ``group`` names the gain set that the kind's controllers carry; kinds of one group carry the same gains, as the
+    places of a cell do that hold units of one declared kind. Left empty, it becomes the kind's own name.
+    """
 
     name: str
     states: tuple[Signal, ...]
@@ -99,6 +104,13 @@ class Kind:
     dynamics: Dynamics | None = field(
         default=None, compare=False, repr=False
     )  # the equations as written, if not linear
+    group: str = ""
+    controller: Controller | None = None  # which states, inputs and sensors its controller makes (None: it has none)
+
+    def __post_init__(self) -> None:
+        """A kind without a group is a group of its own."""
+        if not self.group:
+            object.__setattr__(self, "group", self.name)
 
     def self_links(self, dimension: int) -> tuple[Link, ...]:
         """``inner`` as links of a network whose links have ``dimension`` whole numbers in ``at`` (all zero here)."""
@@ -161,7 +173,9 @@ class Goal:
 
     ``gain_bounds[kind][actuator][sensor]`` bounds one entry's absolute value; ``uses[kind][actuator]`` lists the
     sensors an actuator may use (absent: all). ``period`` is the controller's sample period in seconds, printed in the
-    gain table; the proofs of this version are about the continuous loop.
+    gain table; the proofs of this version are about the continuous loop. ``aim`` is what the design makes small:
+    'radius', or, with the radius no larger than the target, 'effort' (the guaranteed peak of the actuators) or 'peak'
+    (the guaranteed peak of the signals ``aim_of``, pairs of kind and signal).
     """
 
     target: Fraction = Fraction(9, 10)
@@ -170,6 +184,8 @@ class Goal:
     period: Fraction | None = None
     gain_bounds: Mapping[str, Mapping[str, Mapping[str, Fraction]]] = field(default_factory=dict)
     uses: Mapping[str, Mapping[str, tuple[str, ...]]] = field(default_factory=dict)
+    aim: str = "radius"
+    aim_of: tuple[tuple[str, str], ...] = ()
 
 
 @dataclass(frozen=True)
@@ -184,8 +200,10 @@ class SimulationPlan:
 class Network:
     """Units of some kinds and the links between them, by one of four descriptions (theory section 1).
 
-    'pattern': a cell with one unit of each kind, repeated along the lattice Z^dimension without end.
-    'edge pattern': the same on half lines, with the ``edges``; ``cell`` names the kinds that make up the cell.
+    'pattern': a cell with one unit of each kind, repeated along the lattice Z^dimension without end. Where a cell has
+    several units of one declared kind, each of its places is a kind here, and their ``group`` is the same.
+    'edge pattern': the same on half lines (half planes, half spaces), with the ``edges``; ``cell`` names the kinds that
+    make up the cell.
     'rules': every wiring in which no unit receives more than its ``rules`` allow, of any size, rewired at any time.
     'members': the units and links of ``members``; ``links`` then holds each sort of link once.
     """
@@ -202,6 +220,7 @@ class Network:
     cell: tuple[str, ...] | None = None
     rules: tuple[Rule, ...] = ()
     members: Members | None = None
+    notes: tuple[str, ...] = field(default=(), compare=False)  # remarks of the reader, for a person
 
     @property
     def units(self) -> int | None:
@@ -212,6 +231,13 @@ class Network:
     def cell_kinds(self) -> tuple[Kind, ...]:
         """The kinds of which every cell of the pattern has one unit (all, where no edge adds others)."""
         return self.kinds if self.cell is None else tuple(kind for kind in self.kinds if kind.name in self.cell)
+
+    def gain_groups(self) -> dict[str, tuple[str, ...]]:
+        """The gain sets to be found, each with the names of the kinds that carry it, in the order of the kinds."""
+        groups: dict[str, tuple[str, ...]] = {}
+        for kind in self.kinds:
+            groups[kind.group] = (*groups.get(kind.group, ()), kind.name)
+        return groups
 
     def refuse_beyond(self, stage: str, *supported: str) -> None:
         """Raise InputError unless the description is one of ``supported``; ``stage`` names the work: 'design'."""

@@ -25,11 +25,11 @@ import numpy as np
 
 from synth.network.advice import advise, not_reached, not_seen, several
 from synth.network.blind import member_finding
-from synth.network.edges import least_cells, section_of
+from synth.network.cuts import least_cells, section_of, strip_of
 from synth.network.layout import Edge
 from synth.network.model import Link, Network
 from synth.network.phases import Finding, corners, exact_findings, exact_mode, findings, heard_by_any
-from synth.network.rational import characteristic, hurwitz, transposed, unseen
+from synth.network.rational import Rows, characteristic, hurwitz, transposed, unseen
 from synth.network.symbol import Symbol, member_symbol, stacked_symbol, symbol_of
 
 EDGE_STATES = 40
@@ -41,9 +41,10 @@ MOST_WIRINGS = 400
 class Obstruction:
     """A mode of the network that no local feedback can move.
 
-    ``theta`` is the phase from one cell to the next (radians, one per dimension; empty for rules, members and edges),
-    ``s`` the mode in 1/s, ``direction`` the weight of each ``kind.state`` (or ``unit.state``) in declared units
-    (largest absolute value 1), ``cause`` 'not seen' or 'not reached', ``advice`` what would remove it, in plain words.
+    ``theta`` is the phase from one cell to the next (radians, one per dimension, at an edge one per direction along it;
+    empty for rules, members and the ends of a line), ``s`` the mode in 1/s, ``direction`` the weight of each
+    ``kind.state`` (or ``unit.state``) in declared units (largest absolute value 1), ``cause`` 'not seen' or 'not
+    reached', ``advice`` what would remove it, in plain words.
     """
 
     theta: tuple[float, ...]
@@ -96,10 +97,15 @@ def examine(network: Network) -> Examination:
         return Examination(None if finding is None else _announced(network, symbol, finding), tested)
     for edge in network.edges:
         found, cells = _edge_obstruction(network, edge)
-        if cells:
+        if not cells:
+            tested += f"; nothing at the {edge.side} edge, whose units and links reach too deep for the exact test"
+        elif network.dimension == 1:
             tested += f"; at the {edge.side} edge, exactly, the modes that live on its outermost {cells} cells alone"
         else:
-            tested += f"; nothing at the {edge.side} edge, whose units and links reach too deep for the exact test"
+            tested += (
+                f"; at the {edge.side} edge, exactly, the modes that live on its outermost {cells} "
+                f"{'rows' if network.dimension == 2 else 'layers'} alone and have the phases 0 and pi along it"
+            )
         if found is not None:
             return Examination(found, tested)
     return Examination(None, tested)
@@ -152,43 +158,60 @@ def _helpful(symbol: Symbol, finding: Finding, weights: Mapping[str, complex]) -
 
 
 def _edge_obstruction(network: Network, edge: Edge) -> tuple[Obstruction | None, int]:
-    """A mode that lives on the outermost cells of a half line alone, exactly; and on how many cells (0: too many).
+    """A mode that lives on the outermost cells at an edge alone, exactly; and on how many cells (0: too many).
 
-    A direction that is zero beyond a cell is a mode of the whole half line if the cells beyond hear nothing of it, so
-    what they hear counts as another sensor (and what they drive, as another actuator).
+    A direction that is zero beyond a cell is a mode of the whole pattern if the cells beyond hear nothing of it, so
+    what they hear counts as another sensor (and what they drive, as another actuator). In two and three dimensions the
+    directions looked at repeat along the edge, with the same or the opposite sign from one unit to the next.
     """
-    reach = max([abs(link.at[0]) for link in network.links] + [abs(e.link.at[0]) for e in edge.links], default=0)
+    axis = edge.axis
+    reach = max([abs(link.at[axis]) for link in network.links] + [abs(e.link.at[axis]) for e in edge.links], default=0)
     least = least_cells(edge)
     per_cell = sum(len(kind.states) for kind in network.cell_kinds)
     cells = max(least, min(least + 3, EDGE_STATES // per_cell))
     if cells * per_cell > MOST_EDGE_STATES:
         return None, 0
-    whole = section_of(network, edge, cells + reach + 1)
-    symbol = member_symbol(whole)
-    inside = [k for k, name in enumerate(symbol.names) if k < _states_in(whole, cells * len(network.cell_kinds))]
-    outside = [k for k in range(len(symbol.names)) if k not in set(inside)]
-    blocks = symbol.exact(())
-    if blocks is None:
-        return None, cells
-    A, B, C = blocks
-    near = [[A[i][j] for j in inside] for i in inside]
-    sensed = [[C[i][j] for j in inside] for i in heard_by_any(symbol)] + [[A[i][j] for j in inside] for i in outside]
-    driven = [[B[i][q] for i in inside] for q in range(len(symbol.actuators))]
-    driven += [[A[i][j] for i in inside] for j in outside]
-    tests = [(near, sensed, "not seen"), (transposed(near, len(near)), driven, "not reached")]
-    for matrix, rows, cause in tests:
-        finding = next(exact_mode(matrix, rows, (), cause), None)
-        if finding is not None:
-            weights = _weights(tuple(symbol.names[k] for k in inside), finding)
-            moving, how = several(tuple(weights)), f"the units at the {edge.side} edge moving alone"
-            if cause == "not reached":
-                advice = not_reached(moving, how, finding.s)
-            else:
-                advice = (
-                    not_seen(moving, how, finding.s) + f"Measure {several(tuple(weights))} in the units themselves."
-                )
-            return Obstruction((), finding.s, weights, cause, advice), cells
+    if network.dimension == 1:
+        whole = section_of(network, edge, cells + reach + 1)
+        symbol, count = member_symbol(whole), _states_in(whole, cells * len(network.cell_kinds))
+    else:
+        whole = strip_of(network, edge, cells + reach + 1)
+        symbol = symbol_of(whole)
+        count = sum(len(kind.states) for kind in whole.kinds[: cells * len(network.cell_kinds)])
+    for wave, theta in corners(network.dimension - 1):
+        blocks = symbol.exact(wave)
+        found = None if blocks is None else _living_on(symbol, blocks, count, theta)
+        if found is not None:
+            return _announced_at(edge, tuple(symbol.names[:count]), found), cells
     return None, cells
+
+
+def _living_on(symbol: Symbol, blocks: tuple[Rows, Rows, Rows], count: int, theta: tuple[float, ...]) -> Finding | None:
+    """A fixed mode on the first ``count`` states of which the others hear nothing (or which they do not drive)."""
+    A, B, C = blocks
+    outside = range(count, len(A))
+    near = [row[:count] for row in A[:count]]
+    sensed = [C[i][:count] for i in heard_by_any(symbol)] + [A[i][:count] for i in outside]
+    driven = [[B[i][q] for i in range(count)] for q in range(len(symbol.actuators))]
+    driven += [[A[i][j] for i in range(count)] for j in outside]
+    tests = [(near, sensed, "not seen"), (transposed(near, count), driven, "not reached")]
+    for matrix, rows, cause in tests:
+        finding = next(exact_mode(matrix, rows, theta, cause), None)
+        if finding is not None:
+            return finding
+    return None
+
+
+def _announced_at(edge: Edge, names: tuple[str, ...], finding: Finding) -> Obstruction:
+    """The obstruction at an edge with its advice."""
+    weights = _weights(names, finding)
+    alone = "moving alone" if not any(finding.theta) else "moving alone, every other one along it the opposite way"
+    moving, how = several(tuple(weights)), f"the units at the {edge.side} edge {alone}"
+    if finding.cause == "not reached":
+        advice = not_reached(moving, how, finding.s)
+    else:
+        advice = not_seen(moving, how, finding.s) + f"Measure {several(tuple(weights))} in the units themselves."
+    return Obstruction(finding.theta, finding.s, weights, finding.cause, advice)
 
 
 def _states_in(network: Network, units: int) -> int:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import itertools
 import math
+import warnings
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
@@ -27,6 +28,7 @@ ON_THE_AXIS = 1e-9
 NEAR = 0.01
 MOST_ACTUATORS = 8
 MOST_DESCENTS = 12
+WIDEST_BALANCE = 1e200
 
 Theta = tuple[float, ...]
 
@@ -151,13 +153,27 @@ def unit_rows(rows: Complex, size: NDArray[np.float64], scale: float) -> Complex
     return rows / np.where(size > 0, size, 1.0)[:, None] * scale
 
 
+def balance(size: NDArray[np.float64]) -> NDArray[np.float64]:
+    """Powers of two d that make rows and columns of diag(1/d) ``size`` diag(d) alike.
+
+    Ones where the powers found are too far apart for doubles: the balance is for accuracy, no finding rests on it.
+    """
+    with warnings.catch_warnings():
+        # scipy makes whole numbers of d as well, for a permutation that is not asked for; these overflow from 2^63 on
+        warnings.simplefilter("ignore", RuntimeWarning)
+        _, (scaling, _) = matrix_balance(size, permute=False, separate=True)
+    d = np.asarray(scaling, dtype=float)
+    if not (np.all(np.isfinite(d)) and np.all(d > 0) and float(d.max()) < WIDEST_BALANCE * float(d.min())):
+        return np.ones(len(size))
+    return d
+
+
 def worst_at(symbol: Symbol, theta: Theta, used: list[int]) -> tuple[float, Finding] | None:
     """The mode at this phase that is seen, reached or split least, with its relative singular value."""
     blocks = symbol.floating(theta)
     if blocks is None:
         return None
-    _, (scaling, _) = matrix_balance(np.abs(blocks[0]), permute=False, separate=True)
-    d = np.asarray(scaling, dtype=float)  # states counted in units of d: diag(1/d) A^ diag(d)
+    d = balance(np.abs(blocks[0]))  # states counted in units of d: diag(1/d) A^ diag(d)
     A = blocks[0] * d / d[:, None]
     n = len(A)
     scale = max(1e-12, float(np.linalg.norm(A, 2)))

@@ -13,14 +13,18 @@ from fractions import Fraction
 from pathlib import Path
 
 from synth.base.errors import InputError, Place, Problem
+from synth.network.aim_reading import with_aim
+from synth.network.cell import grouped
+from synth.network.controller_reading import with_structure
 from synth.network.inner import with_self_links
 from synth.network.kinds import read_kind
 from synth.network.links import table_names
 from synth.network.members import spread_goal
 from synth.network.model import Kind, Network
+from synth.network.notes import unused_parameters
 from synth.network.sections import named_entries, section, text_of
-from synth.network.settings import read_goal, read_simulation
-from synth.network.wiring import Surroundings, read_wiring
+from synth.network.settings import Nameable, read_goal, read_simulation
+from synth.network.wiring import Surroundings, Wired, read_wiring
 from synth.network.yaml_map import Node, Problems, Scalar, Table, from_python, parse
 
 LARGEST_FILE = 5_000_000
@@ -129,15 +133,32 @@ def _network(root: Node, file: str | None, graph: object | None, problems: Probl
     wired = read_wiring(
         part.need("network", "network: {pattern: {dimension: 1, links: [...]}}"), entries, kinds, around, problems
     )
-    goal = read_goal(part.get("design"), kinds, declared, problems)
+    design = part.get("design")
+    nameable = _nameable(wired, kinds, declared)
+    goal = with_aim(read_goal(design, nameable, problems), design, nameable, problems)
     simulation = read_simulation(part.get("simulation"), problems)
     if wired.members is not None and wired.kinds is not None:
         goal = spread_goal(goal, wired.kinds, wired.members.origins)
+    standing = tuple(kinds.values()) if wired.kinds is None else wired.kinds
+    asked = design.entries["gains"].value if isinstance(design, Table) and "gains" in design.entries else None
+    standing = grouped(asked, standing, wired.bases, goal, design, Problems() if problems.found else problems)
+    goal = with_structure(goal, standing, design, problems)
     network = Network(
-        title, tuple(kinds.values()) if wired.kinds is None else wired.kinds, wired.links, goal, simulation,
+        title, standing, wired.links, goal, simulation,
         wired.dimension, wired.description, file, wired.edges, wired.cell, wired.rules, wired.members,
+        unused_parameters(entries, wired.used, wired.bases),
     )  # fmt: skip
     return with_self_links(network)
+
+
+def _nameable(wired: Wired, kinds: Mapping[str, Kind], declared: tuple[str, ...]) -> Nameable:
+    """What the design may name: the declared kinds, or the places of a cell that has named ones."""
+    if wired.members is not None or wired.kinds is None:
+        return Nameable(kinds, declared)
+    places: dict[str, tuple[str, ...]] = {}
+    for name, base in wired.bases.items():
+        places[base] = (*places.get(base, ()), name)
+    return Nameable({kind.name: kind for kind in wired.kinds}, (*wired.bases, *declared), places)
 
 
 def _title(node: Node | None, problems: Problems) -> str:

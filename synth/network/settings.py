@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
 from fractions import Fraction
 
 from synth.base.errors import nearest
@@ -17,8 +18,21 @@ NUMBER = Declared("1", Unit())
 LONGEST = Fraction(10**7)
 
 
-def read_goal(node: Node | None, kinds: Mapping[str, Kind], declared: tuple[str, ...], problems: Problems) -> Goal:
-    """The section ``design``; its defaults stand where it is absent."""
+@dataclass(frozen=True)
+class Nameable:
+    """What the section ``design`` may name: ``kinds`` without problems, ``declared`` the names of all.
+
+    ``places`` lists the places of a declared kind where the cell has named places: what is said about the kind is said
+    about each of them, unless it has an entry of its own.
+    """
+
+    kinds: Mapping[str, Kind]
+    declared: tuple[str, ...]
+    places: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
+
+
+def read_goal(node: Node | None, known: Nameable, problems: Problems) -> Goal:
+    """The section ``design``; its defaults stand where it is absent. ``gains`` is read by ``cell.grouped``."""
     part = section(node, "design", problems, "{target: 0.9, slowest: 0.4 1/s, fastest: 8 1/s}")
     if part is None:
         return Goal()
@@ -54,8 +68,8 @@ def read_goal(node: Node | None, kinds: Mapping[str, Kind], declared: tuple[str,
         slowest=slowest,
         fastest=fastest,
         period=period,
-        gain_bounds=_gain_bounds(part.get("gain_bounds"), kinds, declared, problems),
-        uses=_uses(part.get("uses"), kinds, declared, problems),
+        gain_bounds=_gain_bounds(part.get("gain_bounds"), known, problems),
+        uses=_uses(part.get("uses"), known, problems),
     )
 
 
@@ -64,15 +78,22 @@ def _said(value: Fraction) -> str:
 
 
 def _kinds(
-    node: Node | None, kinds: Mapping[str, Kind], declared: tuple[str, ...], problems: Problems, example: str
-) -> Iterator[tuple[Kind, Entry]]:
-    for entry in named_entries(node, problems, example):
-        if entry.key in kinds:
-            yield kinds[entry.key], entry
-        elif entry.key not in declared:
+    node: Node | None, known: Nameable, problems: Problems, example: str
+) -> Iterator[tuple[Kind, Entry, tuple[str, ...]]]:
+    """The kinds that a table names, each with its entry and the names of the kinds that the entry is about."""
+    entries = list(named_entries(node, problems, example))
+    own = {entry.key for entry in entries}
+    for entry in entries:
+        if entry.key in known.kinds:
+            yield known.kinds[entry.key], entry, (entry.key,)
+        elif known.places.get(entry.key):
+            about = tuple(place for place in known.places[entry.key] if place in known.kinds)
+            if about:
+                yield known.kinds[about[0]], entry, tuple(place for place in about if place not in own)
+        elif entry.key not in known.declared:
             problems.add(
-                f"{entry.value.path}: unknown kind {entry.key!r}{nearest(entry.key, declared)}; declared are "
-                f"{', '.join(declared) or 'none'}.",
+                f"{entry.value.path}: unknown kind {entry.key!r}{nearest(entry.key, known.declared)}; declared are "
+                f"{', '.join(known.declared) or 'none'}.",
                 entry,
             )
 
@@ -90,13 +111,11 @@ def _known(
     return False
 
 
-def _gain_bounds(
-    node: Node | None, kinds: Mapping[str, Kind], declared: tuple[str, ...], problems: Problems
-) -> dict[str, dict[str, dict[str, Fraction]]]:
+def _gain_bounds(node: Node | None, known: Nameable, problems: Problems) -> dict[str, dict[str, dict[str, Fraction]]]:
     """Bounds on the absolute value of gains, ``kind: {actuator: {sensor: bound}}``."""
     result: dict[str, dict[str, dict[str, Fraction]]] = {}
     example = "{hauler: {demand: {speed: 6 1/s}}}"
-    for kind, entry in _kinds(node, kinds, declared, problems, example):
+    for kind, entry, about in _kinds(node, known, problems, example):
         inputs, sensors = {a.name: a.unit for a in kind.inputs}, {s.name: s.unit for s in kind.sensors}
         for actuator in named_entries(entry.value, problems, "{demand: {speed: 6 1/s}}"):
             if not _known(entry, actuator.key, inputs, f"input of {kind.name}", problems, actuator):
@@ -112,16 +131,15 @@ def _gain_bounds(
                         f"{sensor.value.path}: a bound on the absolute value must be zero or more.", sensor.value
                     )
                 elif bound is not None:
-                    result.setdefault(kind.name, {}).setdefault(actuator.key, {})[sensor.key] = bound
+                    for name in about:
+                        result.setdefault(name, {}).setdefault(actuator.key, {})[sensor.key] = bound
     return result
 
 
-def _uses(
-    node: Node | None, kinds: Mapping[str, Kind], declared: tuple[str, ...], problems: Problems
-) -> dict[str, dict[str, tuple[str, ...]]]:
+def _uses(node: Node | None, known: Nameable, problems: Problems) -> dict[str, dict[str, tuple[str, ...]]]:
     """Which sensors an actuator may use, ``kind: {actuator: [sensors]}``."""
     result: dict[str, dict[str, tuple[str, ...]]] = {}
-    for kind, entry in _kinds(node, kinds, declared, problems, "{hauler: {demand: [slot, speed]}}"):
+    for kind, entry, about in _kinds(node, known, problems, "{hauler: {demand: [slot, speed]}}"):
         inputs, sensors = {a.name: a.unit for a in kind.inputs}, {s.name: s.unit for s in kind.sensors}
         for actuator in named_entries(entry.value, problems, "{demand: [slot, speed]}"):
             if not _known(entry, actuator.key, inputs, f"input of {kind.name}", problems, actuator):
@@ -131,7 +149,8 @@ def _uses(
                 name = text_of(item, problems, "the name of a sensor")
                 if name is not None and _known(actuator, name, sensors, f"sensor of {kind.name}", problems, item):
                     names.append(name)
-            result.setdefault(kind.name, {})[actuator.key] = tuple(dict.fromkeys(names))
+            for place in about:
+                result.setdefault(place, {})[actuator.key] = tuple(dict.fromkeys(names))
     return result
 
 

@@ -6,8 +6,12 @@
     to.k/to.mass              parameters of the receiving (to) and the sending (from) kind, exact
     from.area*0.2 1/s         a quantity may end an expression, or stand in parentheses: (0.2 1/s)*from.area
 
+A parameter with a tolerance makes the strength the interval of all values it can then have, changing at any time. What
+is proven is thus about more than was said: the parameter inside the unit and inside its links need not agree, nor stay
+the same from one link or moment to the next.
+
 Law: an interval contains its centre, and ``low <= high``; an expression gives the value that the same arithmetic on
-exact rationals gives.
+exact rationals gives, and its interval holds the value for all parameters in their tolerances.
 """
 
 from __future__ import annotations
@@ -18,15 +22,29 @@ from dataclasses import dataclass
 from fractions import Fraction
 
 from synth.base.units import NONE, Dimension, UnitError, dimension_text, parse_quantity
+from synth.network.bounds import Located, least_and_most
+from synth.network.curves import short
 from synth.network.equations import Evaluator, Refused, Scope
+from synth.network.intervals import Interval
 from synth.network.sections import Declared, quantity, sized
 from synth.network.tolerances import has_tolerance, parse_tolerance
 from synth.network.yaml_map import Node, Problems, Scalar
 
-# Parameters of a kind in SI units; None for one that has a tolerance, which an expression cannot use exactly.
-Parameters = Mapping[str, tuple[Fraction, Dimension] | None]
+
+@dataclass(frozen=True)
+class Ranged:
+    """A parameter with a tolerance, in SI units."""
+
+    bounds: Interval
+    dimension: Dimension
+
+
+# Parameters of a kind in SI units; None for one that cannot be read (which has a sentence of its own).
+Parameter = tuple[Fraction, Dimension] | Ranged | None
+Parameters = Mapping[str, Parameter]
 
 _END = re.compile(r"(?<![\w.])(?P<end>from|to)\.(?=[A-Za-z_])", re.ASCII)
+_NAMED = re.compile(r"(?<![\w.])(?P<end>from|to)\.(?P<name>[A-Za-z_]\w*)", re.ASCII)
 _NUMBER = r"(?:\.[0-9]+|[0-9]+(?:\.[0-9]*)?)(?:[eE][-+]?[0-9]+)?"
 _UNIT = r"(?:1\s*/|[A-Za-zµ%°Ω])"
 _INSIDE = re.compile(
@@ -54,18 +72,21 @@ class StrengthRefused(Exception):
 
 
 def read_strength(
-    node: Node, wanted: Declared, taken: str, offered: str, ends: Mapping[str, Parameters], problems: Problems
-) -> Span | None:
+    node: Node, wanted: Declared, taken: str, offered: str, ends: Mapping[str, Parameters], problems: Problems,
+    used: set[tuple[str, str]],
+) -> Span | None:  # fmt: skip
     """The strength at ``node`` in SI units; None if it is not accepted (which is then recorded).
 
     ``wanted`` is the SI unit of (taken unit)/(offered unit); ``taken`` and ``offered`` are these units as declared;
-    ``ends`` the parameters of both kinds, by 'from' and 'to'.
+    ``ends`` the parameters of both kinds, by 'from' and 'to'. Those that the strength names are added to ``used`` as
+    (end, parameter).
     """
     if isinstance(node, Scalar) and isinstance(node.value, str):
         text = node.text
         try:
             span = None
             if _END.search(text):
+                used |= {(found["end"], found["name"]) for found in _NAMED.finditer(text)}
                 span = _expression(text, ends, wanted)
             elif has_tolerance(text):
                 span = _range(text, wanted)
@@ -128,22 +149,27 @@ def _expression(text: str, ends: Mapping[str, Parameters], wanted: Declared) -> 
             name = f"_{quantities}"
             if found.end() - found.start() < len(name):
                 raise StrengthRefused(f"{found['quantity']!r} cannot be read as a quantity", found.start())
+            name = name.ljust(found.end() - found.start(), "_")  # as long as what it stands for, so that places stay
             names[name] = (value * unit.factor, unit.dimension)
-            plain = plain[: found.start()] + name.ljust(found.end() - found.start()) + plain[found.end() :]
-    known = []
+            plain = plain[: found.start()] + name + plain[found.end() :]
+    known: list[str] = []
+    ranges: dict[str, Interval] = {}
     for end, parameters in ends.items():
         for name, entry in parameters.items():
             known.append(f"{end}.{name}")
             at = re.search(rf"(?<![\w.]){end}\.{name}(?!\w)", plain)
-            if entry is not None:
+            if isinstance(entry, Ranged):
+                ranges[f"{end}_{name}"] = entry.bounds
+                names[f"{end}_{name}"] = (entry.bounds.middle, entry.dimension)
+            elif entry is not None:
                 names[f"{end}_{name}"] = entry
             elif at:
                 raise StrengthRefused(
-                    f"the parameter {end}.{name} has a tolerance or cannot be read, so this strength is not one exact "
-                    "number; give the strength as an interval",
+                    f"the parameter {end}.{name} cannot be read, so this strength is not known; mend the parameter, or "
+                    "give the strength as a number or an interval",
                     at.start(),
                 )
-    for found in re.finditer(r"(?<![\w.])(?:from|to)\.[A-Za-z_]\w*", plain, re.ASCII):
+    for found in _NAMED.finditer(plain):
         if found[0] not in known:
             raise StrengthRefused(
                 f"unknown parameter {found[0]!r}; known here are {', '.join(known) or 'none (matrices carry numbers)'}",
@@ -152,11 +178,20 @@ def _expression(text: str, ends: Mapping[str, Parameters], wanted: Declared) -> 
     if clash := re.search(r"(?<![\w.])(?:from|to)_\w+", plain):
         raise StrengthRefused(f"unknown name {clash[0]!r}; known here are {', '.join(known)}", clash.start())
     try:
-        walker = Evaluator(_END.sub(lambda m: f"{m['end']}_", plain), Scope(names, {}))
+        walker = Evaluator(_END.sub(lambda m: f"{m['end']}_", plain), Scope(names, {}, uncertain=frozenset(ranges)))
         walker.text = text
         result = walker.total(walker.tree, wanted.unit.dimension, wanted.text, 0)
     except Refused as error:
         raise StrengthRefused(error.sentence, error.offset) from None
+    if result.parameters and not result.signals:
+        try:
+            bounds = short(least_and_most(result, {name: ranges[name] for name in result.parameters}))
+        except Located as error:
+            raise StrengthRefused(
+                f"this strength is not bounded for all parameters within their tolerances: {error.sentence}; narrow "
+                "the tolerances, or give the strength as an interval"
+            ) from None
+        return Span(bounds.low, bounds.high)
     if result.plain is None:
         raise StrengthRefused("this is not one number; a strength is made of numbers and parameters of both ends")
     return Span(result.plain, result.plain)

@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 from synth.base.errors import InputError, Place
+from synth.network.cell import kinds_of, read_cell
 from synth.network.edges import read_edges
 from synth.network.graphs import records_of_graphml, records_of_json, records_of_networkx
 from synth.network.layout import Edge, Members, Rule
@@ -35,6 +36,8 @@ class Wired:
     rules: tuple[Rule, ...] = ()
     members: Members | None = None
     kinds: tuple[Kind, ...] | None = None
+    bases: Mapping[str, str] = field(default_factory=dict)  # the declared kind of each of ``kinds``
+    used: frozenset[tuple[str, str]] = frozenset()  # (kind, parameter) that strengths name
 
 
 @dataclass(frozen=True)
@@ -73,9 +76,9 @@ def read_wiring(
     elif given == ["members"]:
         wired = _members(part, entries, known, around, positions, problems)
     else:
-        wired = _pattern(part, known, edge, positions, problems)
+        wired = _pattern(part, known, entries, edge, positions, problems)
     check_signs(part, positions, problems)
-    return wired
+    return replace(wired, used=frozenset(known.used))
 
 
 def _there(part: Section, key: str) -> Node:
@@ -92,7 +95,10 @@ def _parameters(entry: Entry) -> Parameters:
     return {name: parameter_value(inner.value) for name, inner in table.value.entries.items()}
 
 
-def _pattern(part: Section, known: Known, edge: Node | None, positions: Positions, problems: Problems) -> Wired:
+def _pattern(
+    part: Section, known: Known, declared: Mapping[str, Entry], edge: Node | None, positions: Positions,
+    problems: Problems,
+) -> Wired:  # fmt: skip
     pattern = section(part.get("pattern"), "pattern", problems, "{dimension: 1, links: [...]}")
     if pattern is None:
         return Wired()
@@ -101,11 +107,21 @@ def _pattern(part: Section, known: Known, edge: Node | None, positions: Position
     if problems.count > before:
         return Wired()
     dimension = dimension or 1
-    links = read_pattern_links(pattern, dimension, known, positions, problems)
-    if edge is None:
-        return Wired("pattern", dimension, links)
-    edges, cell = read_edges(edge, links, dimension, known, positions, problems)
-    return Wired("edge pattern", dimension, links, edges, cell)
+    written = pattern.get("cell")
+    places = None if written is None else read_cell(written, known, problems)
+    links = read_pattern_links(pattern, dimension, places.inside if places else known, positions, problems)
+    wired = Wired("pattern", dimension, links)
+    if edge is not None:
+        named = tuple(places.kind_of) if places else None
+        known = places.everywhere if places else known
+        edges, cell = read_edges(edge, links, dimension, named, known, positions, problems)
+        wired = Wired("edge pattern", dimension, links, edges, cell)
+    if places is None:
+        return wired
+    at_edges = [unit.kind for found in wired.edges for unit in found.units]
+    kinds = kinds_of(places, at_edges, declared, problems if problems.count == before else Problems())
+    bases = {**{kind.name: kind.name for kind in kinds}, **places.kind_of}
+    return replace(wired, kinds=kinds, bases=bases)
 
 
 def _members(
@@ -129,7 +145,8 @@ def _members(
     if own is not problems:
         problems.found += own.in_order()
         problems.count += own.count
-    return Wired("members", 0, links, members=members, kinds=kinds)
+    bases = {kind.name: base for kind, (base, _) in zip(kinds, members.origins, strict=True)}
+    return Wired("members", 0, links, members=members, kinds=kinds, bases=bases)
 
 
 def _records(inner: Section, around: Surroundings, own: Problems, problems: Problems) -> Records | None:

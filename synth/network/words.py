@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from fractions import Fraction
 
+from synth.base.units import parse_unit
 from synth.network.model import Link, Network
 
 
@@ -41,27 +42,60 @@ def strength_unit(link: Link, network: Network) -> str:
     return f"({taken})/({offered})"
 
 
+def _own_part(link: Link, network: Network) -> Link | None:
+    """The self-link that carries the own part of a relative link which is not folded; None if there is none.
+
+    Of members only the part that is as late as the link is looked for: what intervals leave differs from unit to unit.
+    """
+    if link.own_part or (link.relative and network.members is not None):
+        return None
+    ends = (link.name, link.kind, link.take, link.offer)
+    beside = next((edge for edge in network.edges if any(single.link is link for single in edge.links)), None)
+    links = network.links if beside is None else tuple(single.link for single in beside.links)
+    return next((p for p in links if p.own_part and (p.name, p.kind, p.take, p.offer) == ends), None)
+
+
 def link_nature(link: Link, network: Network) -> str:
     """What kind of link it is, and how late it may be: ``minus the unit's own fresh value, up to 0.1 s late``."""
     parts = []
-    ends = (link.name, link.kind, link.take, link.offer)
+    own = _own_part(link, network)
+    both = ""
     if link.relative:
         parts.append("minus the unit's own fresh value")
-    elif any(other.own_part and (other.name, other.kind, other.take, other.offer) == ends for other in network.links):
+    elif own is not None:
         parts.append("minus the unit's own value, just as late")
+        both = "both "
     else:
         parts.append("absolute")
     if link.weakens:
         parts.append("may weaken to zero at any time")
-    parts.append(f"up to {said(link.delay)} s late" if link.delay else "always fresh")
+    parts.append(f"{both}up to {said(link.delay)} s late" if link.delay else "always fresh")
     return ", ".join(parts)
+
+
+def strength_words(link: Link, network: Network) -> str:
+    """The strength, or both ends of its interval where they can be told: ``0.4 to 0.5``."""
+    own = _own_part(link, network) if link.relative else None
+    if own is None or _own_ratio(link, network) != 1:
+        return said(link.strength)
+    return f"{said(2 * link.own_strength - link.strength)} to {said(link.strength)}"
+
+
+def _own_ratio(link: Link, network: Network) -> Fraction:
+    """How the unit that the receiver counts its own signal in compares to the sender's."""
+    source, target = network.kind(link.source_kind), network.kind(link.kind)
+    theirs = source.offers[source.index("offers", link.offer)].unit
+    ours = target.offers[target.index("offers", link.offer)].unit
+    return parse_unit(ours).factor / parse_unit(theirs).factor
 
 
 def link_words(link: Link, network: Network) -> str:
     """One line about a link: both ends, place, strength with unit, nature."""
     place = place_words(link.at)
     taken, offered = link_units(link, network)
+    own = _own_part(link, network) if link.relative else None
+    left = "" if own is None else f", the own value left over by the interval counts {said(abs(own.strength))} more"
     return (
         f"{link.source_kind}.{link.offer}{' ' if place else ''}{place} -> {link.kind}.{link.take}: "
-        f"strength {said(link.strength)} ({taken} per {offered}), {link_nature(link, network)}"
+        f"strength {strength_words(link, network)} ({taken} per {offered}), {link_nature(link, network)}{left}"
     )

@@ -10,10 +10,12 @@ from __future__ import annotations
 import itertools
 import math
 from collections import Counter
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 
+from synth.network.cuts import adapted, written
+from synth.network.layout import Edge
 from synth.network.model import Kind, Link, Network
-from synth.network.words import counted, link_nature, place_words, said, strength_unit
+from synth.network.words import counted, link_nature, place_words, said, strength_unit, strength_words
 from synth.report.graph_picture import SIDE, SMALL, WIDTH, draw_members, draw_summary, origin_of
 from synth.report.pen import FAINT, Point, Stroke, arrow, fitting, loop, stroke_of, unit
 from synth.report.svg import INK, QUIET, Board, text_width
@@ -49,7 +51,10 @@ def _subtitle(network: Network) -> str:
         return "Any number of units, wired in any way that obeys the rules"
     if network.dimension == 1:
         return "One cell repeated along a line without end. Full ink: links into one cell. Faint: the same elsewhere."
-    return f"One cell repeated in {network.dimension} dimensions without end. Shown are the links into one cell."
+    beside = " and those near the edge" if network.edges else ""
+    return (
+        f"One cell repeated in {network.dimension} dimensions without end. Shown are the links into one cell{beside}."
+    )
 
 
 def _declared_kinds(network: Network) -> dict[str, int]:
@@ -76,7 +81,10 @@ def _draw_pattern(
         for edge in network.edges:
             bottom = _draw_edge(board, network, edge.side, classes, kinds, bottom + 46)
         return bottom
-    return _draw_grid(board, inside, cell, network.dimension, classes, kinds, top)
+    bottom = _draw_grid(board, inside, cell, network.dimension, classes, kinds, top)
+    for edge in network.edges:
+        bottom = _draw_edge(board, network, edge.side, classes, kinds, bottom + 46)
+    return bottom
 
 
 def _reach(links: Iterable[Link], most: int) -> int:
@@ -171,39 +179,71 @@ def _arc(
 def _draw_edge(
     board: Board, network: Network, side: str, classes: Mapping[str, Stroke], kinds: Mapping[str, int], top: float
 ) -> float:
-    """The units at one end of the line, edge units by name, with every link that enters them."""
+    """The units at one end of the line, edge units by name, with every link that enters them.
+
+    Of a field it is the section across the edge: a mark stands for a row, and a link that comes from along the row (or
+    aslant) is drawn as if it came straight across.
+    """
     edge = next(edge for edge in network.edges if edge.side == side)
     cell = network.cell_kinds
+    field = network.dimension > 1
+    unnamed = "place" if not field else "row" if network.dimension == 2 else "layer"
     deepest = max([abs(u.at) for u in edge.units] + [abs(e.to) for e in edge.links] + [2])
     count = min(deepest + 2, 7)
     step = (WIDTH - 2 * SIDE - 90) / (count + 0.5)
     links = [link for link in network.links if link.sort == "link" and not link.own_part]
-    lift = 26.0 + 20 * _reach(links, 4)
+    lift = 26.0 + 20 * min(max((abs(link.at[edge.axis]) for link in links), default=1) or 1, 4)
     first, gap = top + 40 + lift, 62 + lift
     standing = {(u.at, u.instead_of): u for u in edge.units}
-    where: dict[tuple[int, str], Point] = {}
-    board.text(SIDE, top, f"The {side} end of the line", bold=True, size=12)
+    where: dict[tuple[int, str], tuple[Point, str]] = {}  # place and slot of the cell: the point, and who stands there
+    title = f"The {side} end of the line"
+    if field:
+        title = f"The {side} edge across axis {edge.axis + 1}: a mark is a {unnamed} along it, a loop a link along that"
+    board.text(SIDE, top, title, bold=True, size=12)
     for k in range(count):
         place = k if side == "first" else k - count + 1
         x = SIDE + 90 + step * (k + (0.5 if side == "first" else 1))
         for row, kind in enumerate(cell):
             here = standing.get((place, kind.name))
             point = (x, first + gap * row)
-            where[place, here.kind if here else kind.name] = point
+            where[place, kind.name] = point, here.kind if here else kind.name
             unit(board, *point, kinds[here.kind if here else kind.name], faint=here is None)
-            board.text(x, point[1] + 29, here.name if here else f"place {place}", anchor="middle", size=SMALL,
-                       fill=INK if here else QUIET, bold=here is not None)  # fmt: skip
+            label = here.name if here else f"{unnamed} {place}"
+            ink = INK if here else QUIET
+            board.text(x, point[1] + 29, label, anchor="middle", size=SMALL, fill=ink, bold=here is not None)
     for row, kind in enumerate(cell):
         board.text(SIDE, first + gap * row + 4, fitting(kind.name, 88, 12), size=12, bold=True)
         x = WIDTH - SIDE - step / 4 if side == "first" else SIDE + 90 + step / 4
         for k in range(3):
             board.dot(x + 6 * k - 6, first + gap * row, QUIET, size=1.3)
-    pairs = [(place, link) for link in links for place, name in where if name == link.kind]
-    for place, link in [*pairs, *((e.to, e.link) for e in edge.links)]:
-        start, end = where.get((place + link.at[0], link.source_kind)), where.get((place, link.kind))
-        if start and end and start != end:
-            arrow(board, start, end, 14 + 12 * min(abs(link.at[0]), 4), classes.get(link.name, Stroke(INK, "")))
+    seen: Counter[tuple[object, object]] = Counter()
+    for name, steps, source, target in dict.fromkeys(_links_at(network, edge, where)):
+        stroke, beside = classes.get(name, Stroke(INK, "")), 11 * seen[source, target]
+        if source != target:
+            arrow(board, where[source][0], where[target][0], 14 + 12 * min(abs(steps), 4) + beside, stroke)
+        elif field:
+            loop(board, where[target][0], 22 + beside, stroke)
+        seen[source, target] += 1
     return first + gap * (len(cell) - 1) + 46
+
+
+def _links_at(
+    network: Network, edge: Edge, where: Mapping[tuple[int, str], tuple[Point, str]]
+) -> Iterator[tuple[str, int, tuple[int, str], tuple[int, str]]]:
+    """The links between the units that are shown at an edge: class, steps across, from where, to where."""
+    for group in written(network.links):
+        link = group[0]
+        for (place, slot), (_, kind) in where.items():
+            source = (place + link.at[edge.axis], link.source_kind)
+            if link.sort != "link" or slot != link.kind or source not in where:
+                continue
+            if adapted(group, network.kind(kind), network.kind(where[source][1]), network):
+                yield link.name, link.at[edge.axis], source, (place, slot)
+    for single in edge.links:
+        steps = single.link.at[edge.axis]
+        source, target = (single.to + steps, single.source_slot), (single.to, single.slot)
+        if not single.link.own_part and source in where and target in where:
+            yield single.link.name, steps, source, target
 
 
 def _draw_grid(
@@ -254,7 +294,7 @@ def _draw_grid(
         seen[key] += 1
     for offset in shown:
         if dimension == 2:
-            x, y = centre[0] + size * offset[0], centre[1] - size * offset[1] + size / 2 - 9
+            x, y = centre[0] + size * (offset[0] - 0.5) + 24, centre[1] - size * offset[1] + size / 2 - 9
         else:
             x, y = at(offset, cell[-1].name)
             y += 28
@@ -311,7 +351,8 @@ def _class_lines(network: Network, name: str) -> list[tuple[str, str]]:
         if link.name != name or link.sort != "link" or link.own_part:
             continue
         count = most.get(link.choice, 1)
-        each = f"{said(link.strength / count)} {strength_unit(link, network)}"
+        amount = said(link.strength / count) if link.choice else strength_words(link, network)
+        each = f"{amount} {strength_unit(link, network)}"
         limit = f" each, at most {counted(count, 'link')} into a unit" if link.choice else ""
         ends = f"{link.source_kind}.{link.offer} to {link.kind}.{link.take}"
         places.setdefault((ends, f"strength {each}{limit}, {link_nature(link, network)}"), []).append(

@@ -5,6 +5,8 @@ from __future__ import annotations
 import json
 from fractions import Fraction
 
+import yaml
+
 from synth.base.caution import CAUTIONS
 from synth.network import describe, read
 from tests.network.files import CONVOY, GAP_ONLY
@@ -33,7 +35,7 @@ def test_text_names_everything_with_its_unit() -> None:
         "0, 0, -2 (1/s",
         "1 place before (at -1)",
         "up to 0.1 s late",
-        "0.5 (m/s^2)/(m)",
+        "0.5 m/s^2 per m",
         "No obstruction found",
         CAUTIONS[0],
     ):
@@ -47,7 +49,7 @@ def test_every_description_of_a_network_is_explained() -> None:
         "field": ("in 2 dimensions without end", "at (-1, 0)", "may weaken to zero at any time"),
         "edge": (
             "with its first end",
-            "minus the unit's own value, just as late, up to 2 s late",
+            "minus the unit's own value, just as late, both up to 2 s late",
             "lake: a lake at place 0 instead of the basin",
             "into place 2, relief",
         ),
@@ -76,3 +78,15 @@ def test_internal_signals_do_not_pass_for_the_users_own() -> None:
     text = describe(read(EXAMPLES / "curved.yaml")).as_text()
     takes = next(line for line in text.splitlines() if line.strip().startswith("takes"))
     assert takes.split() == ["takes", "ahead", "(m/s^2)"]
+
+
+def test_an_interval_and_a_late_difference_are_told_as_written() -> None:
+    curved = describe(read(EXAMPLES / "curved.yaml")).as_text()
+    assert "strength 0.4 to 0.5 (m/s^2 per m)" in curved and "left over by the interval counts 0.05 more" in curved
+    problem = yaml.safe_load((EXAMPLES / "edge.yaml").read_text())
+    late = {"relative": True, "late": "difference", "delay": "3 s"}
+    problem["network"]["edge"]["links"][0] |= late
+    text = describe(read(problem)).as_text()
+    assert "minus the unit's own value, just as late, both up to 3 s late" in text
+    del problem["network"]["edge"]["links"][0]["late"], problem["network"]["edge"]["links"][0]["delay"]
+    assert "just as late, both up to 3 s late" not in describe(read(problem)).as_text()

@@ -11,7 +11,7 @@ import pytest
 
 from synth.base.errors import InputError
 from synth.network import Network, obstruction, read
-from synth.network.edges import section_of
+from synth.network.cuts import section_of
 from synth.network.obstructions import examine
 from synth.network.symbol import member_symbol, symbol_of
 
@@ -191,11 +191,8 @@ def test_what_is_refused(edge: Any, sentence: str) -> None:
     assert sentence in str(caught.value)
 
 
-def test_edges_belong_to_lines() -> None:
+def test_edges_belong_to_patterns() -> None:
     problem = string(LED, truck=LEADER)
-    problem["network"]["pattern"] = {"dimension": 2, "links": []}
-    with pytest.raises(InputError, match="edges are honoured for patterns along a line"):
-        read(problem)
     del problem["network"]["pattern"]
     with pytest.raises(InputError, match="there is none; add 'pattern'"):
         read(problem)

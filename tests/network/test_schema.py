@@ -16,6 +16,7 @@ from synth.base.errors import InputError
 from synth.network import read
 from synth.network.sections import KEYS, LATER
 from tests.network.files import BROKEN, CONVOY, GAP_ONLY
+from tests.network.fuzzing import EXAMPLES
 
 SCHEMA: dict[str, Any] = json.loads(
     resources.files("synth.network").joinpath("schema.json").read_text(encoding="utf-8")
@@ -41,7 +42,7 @@ def test_no_key_is_both_honoured_and_refused() -> None:
     assert not any(set(KEYS[sort]) & set(LATER[sort]) for sort in KEYS)
 
 
-@pytest.mark.parametrize("path", [CONVOY, GAP_ONLY], ids=lambda path: path.name)
+@pytest.mark.parametrize("path", [CONVOY, GAP_ONLY, *sorted(EXAMPLES.glob("*.yaml"))], ids=lambda path: path.name)
 def test_the_examples_are_valid(path: Any) -> None:
     jsonschema.Draft202012Validator.check_schema(SCHEMA)
     jsonschema.validate(yaml.load(path.read_text(encoding="utf-8"), CoreLoader), SCHEMA)
