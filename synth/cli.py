@@ -17,7 +17,23 @@ from typing import Any, NoReturn
 import click
 
 from synth.base.errors import InputError, Problem, SynthError, nearest
-from synth.base.progress import Listener, silent
+from synth.cli_parts import (
+    FILE,
+    GAINS,
+    JSON,
+    OUT,
+    QUIET,
+    SEED,
+    TARGET,
+    deliver,
+    leave,
+    listener,
+    network_and_gains,
+    network_of,
+    options,
+    promised_sizes,
+    target_of,
+)
 
 HELP = {"help_option_names": ["-h", "--help"]}
 
@@ -45,32 +61,6 @@ def verbs() -> None:
     """
 
 
-def _with(*options: Callable[[Any], Any]) -> Callable[[Any], Any]:
-    """Attach several click options to a verb, in reading order."""
-
-    def attach(function: Any) -> Any:
-        for option in reversed(options):
-            function = option(function)
-        return function
-
-    return attach
-
-
-FILE = click.argument("file", type=click.Path(path_type=Path))
-JSON = click.option("--json", "as_json", is_flag=True, help="Print exactly one JSON document instead of text.")
-OUT = click.option(
-    "--out", type=click.Path(path_type=Path), help="Folder for the results; it appears whole or not at all."
-)
-TARGET = click.option("--target", type=float, help="Spectral radius to reach, between 0 and 1 (default: the file's).")
-SEED = click.option(
-    "--seed", type=click.IntRange(0), default=0, show_default=True, help="Fixes searches and random runs."
-)
-GAINS = click.option(
-    "--gains", type=click.Path(path_type=Path), help="Gain table (CSV or JSON) in service, instead of fresh gains."
-)
-QUIET = click.option("--quiet", is_flag=True, help="No progress on standard error.")
-
-
 @verbs.command()
 @click.argument("name", type=click.Path(path_type=Path))
 def new(name: Path) -> None:
@@ -78,17 +68,17 @@ def new(name: Path) -> None:
     from synth.network.starter import write_starter
 
     click.echo(write_starter(name), nl=False)
-    _leave(True)
+    leave(True)
 
 
 @verbs.command()
-@_with(FILE, JSON, OUT, QUIET)
+@options(FILE, JSON, OUT, QUIET)
 def check(file: Path, as_json: bool, out: Path | None, quiet: bool) -> None:
     """Read FILE, explain the network (with --out also as a picture), find what no local feedback can do."""
     from synth.network import describe
 
-    _progress(quiet)("reading and looking for obstructions")
-    network = _read(file)
+    listener(quiet)("reading and looking for obstructions")
+    network = network_of(file)
     described = describe(network)
     document = described.as_json()
     files: dict[str, Any] = {"check.json": document}
@@ -96,29 +86,29 @@ def check(file: Path, as_json: bool, out: Path | None, quiet: bool) -> None:
         from synth.report.picture import network_picture
 
         files["network.svg"] = network_picture(network)
-    _deliver(document, described.as_text(), as_json, out, files)
-    _leave(document["obstruction"] is None)
+    deliver(document, described.as_text(), as_json, out, files)
+    leave(document["obstruction"] is None)
 
 
 @verbs.command()
-@_with(FILE, TARGET, SEED, JSON, OUT, QUIET)
+@options(FILE, TARGET, SEED, JSON, OUT, QUIET)
 def design(file: Path, target: float | None, seed: int, as_json: bool, out: Path | None, quiet: bool) -> None:
     """Pick local gains with the smallest spectral radius within the limits of FILE."""
     from synth.handoff.table import csv_text, gain_rows
     from synth.local import design as make_design
 
-    network = _read(file)
-    chosen = make_design(network, target=_target(target), seed=seed, progress=_progress(quiet))
+    network = network_of(file)
+    chosen = make_design(network, target=target_of(target), seed=seed, progress=listener(quiet))
     document = chosen.as_json()
     files = {"design.json": document, "gains.csv": csv_text(gain_rows(network, chosen.gains))}
-    _deliver(document, chosen.as_text(), as_json, out, files)
-    _leave(chosen.reached)
+    deliver(document, chosen.as_text(), as_json, out, files)
+    leave(chosen.reached)
 
 
 @verbs.command()
-@_with(FILE, GAINS)
-@click.option("--route", type=click.Choice(["auto", "peak", "storage"]), default="auto", show_default=True)
-@_with(TARGET, SEED, JSON, OUT, QUIET)
+@options(FILE, GAINS)
+@click.option("--route", type=click.Choice(["auto", "peak", "storage", "firmware"]), default="auto", show_default=True)
+@options(TARGET, SEED, JSON, OUT, QUIET)
 def prove(
     file: Path,
     gains: Path | None,
@@ -132,8 +122,8 @@ def prove(
     """Build a certificate for fresh gains, or for gains already in service (--gains)."""
     from synth.proof import prove as make_proof
 
-    network, used = _network_and_gains(file, gains, target, seed, quiet)
-    certificate = make_proof(network, used, route=route, target=_target(target), progress=_progress(quiet))
+    network, used = network_and_gains(file, gains, target, seed, quiet)
+    certificate = make_proof(network, used, route=route, target=target_of(target), progress=listener(quiet))
     kept = out is not None and certificate.proven  # an unproven certificate is never written: it could be mistaken
     document = {**certificate.as_json(), "certificate": str(out / "certificate.json") if out and kept else None}
     text = certificate.as_text()
@@ -144,16 +134,16 @@ def prove(
         if kept:
             certificate.save(work / "certificate.json")
 
-    _deliver(document, text, as_json, out, {"proof.json": document}, save)
-    _leave(certificate.proven)
+    deliver(document, text, as_json, out, {"proof.json": document}, save)
+    leave(certificate.proven)
 
 
 @verbs.command()
-@_with(FILE, GAINS)
+@options(FILE, GAINS)
 @click.option("--class", "classes", multiple=True, help="Scale only this link class (may be repeated; default: all).")
 @click.option("--fixed-own-parts", is_flag=True, help="Keep the own part of relative links at today's strength.")
 @click.option("--redesign", is_flag=True, help="Also pick the gains anew at each strength.")
-@_with(SEED, JSON, OUT, QUIET)
+@options(SEED, JSON, OUT, QUIET)
 def margin(
     file: Path,
     gains: Path | None,
@@ -168,7 +158,7 @@ def margin(
     """Find how much stronger the links may get: proven, the limit of the class, and where it really breaks."""
     from synth.margin import margin as find_margin
 
-    network, used = _network_and_gains(file, gains, None, seed, quiet)
+    network, used = network_and_gains(file, gains, None, seed, quiet)
     for name in classes:
         if name not in network.classes():
             known = ", ".join(network.classes()) or "none"
@@ -180,20 +170,20 @@ def margin(
         classes=classes or None,
         own_parts=not fixed_own_parts,
         redesign=redesign,
-        progress=_progress(quiet),
+        progress=listener(quiet),
     )
     document = found.as_json()
-    _deliver(document, found.as_text(), as_json, out, {"margin.json": document})
-    _leave(found.proven_factor >= 1)
+    deliver(document, found.as_text(), as_json, out, {"margin.json": document})
+    leave(found.proven_factor >= 1)
 
 
 @verbs.command()
-@_with(FILE, GAINS)
+@options(FILE, GAINS)
 @click.option("--units", type=click.IntRange(2), help="Number of cells simulated (default: the file's).")
 @click.option(
     "--seconds", type=click.FloatRange(min=0, min_open=True), help="Length of each run (default: the file's)."
 )
-@_with(SEED, JSON, OUT, QUIET)
+@options(SEED, JSON, OUT, QUIET)
 def simulate(
     file: Path,
     gains: Path | None,
@@ -208,22 +198,30 @@ def simulate(
     from synth.proof import prove as make_proof
     from synth.simulate import simulate as run_simulation
 
-    network, used = _network_and_gains(file, gains, None, seed, quiet)
-    progress = _progress(quiet)
+    network, used = network_and_gains(file, gains, None, seed, quiet)
+    progress = listener(quiet)
     certificate = make_proof(network, used, progress=progress)
     trajectory = run_simulation(network, used, certificate, units=units, seconds=seconds, seed=seed, progress=progress)
     document = trajectory.as_json()
     files = {"simulation.json": document}
-    _deliver(document, trajectory.as_text(), as_json, out, files, lambda work: trajectory.save(work / "trajectory.npz"))
-    _leave(certificate.proven and trajectory.violations == 0)
+    deliver(document, trajectory.as_text(), as_json, out, files, lambda work: trajectory.save(work / "trajectory.npz"))
+    leave(certificate.proven and trajectory.violations == 0)
 
 
 @verbs.command()
-@_with(FILE, GAINS, TARGET, SEED, JSON)
+@options(FILE, GAINS, TARGET, SEED, JSON)
 @click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder of the bundle.")
-@_with(QUIET)
+@click.option("--route", type=click.Choice(["auto", "peak", "storage", "firmware"]), default="auto", show_default=True)
+@options(QUIET)
 def handoff(
-    file: Path, gains: Path | None, target: float | None, seed: int, as_json: bool, out: Path, quiet: bool
+    file: Path,
+    gains: Path | None,
+    target: float | None,
+    seed: int,
+    as_json: bool,
+    out: Path,
+    route: str,
+    quiet: bool,
 ) -> None:
     """Write the bundle for the firmware team: gain table, certificate, checker, manifest."""
     from synth.base.files import refuse_foreign
@@ -231,17 +229,17 @@ def handoff(
     from synth.proof import prove as make_proof
 
     refuse_foreign(out, "handoff")
-    network, used = _network_and_gains(file, gains, target, seed, quiet)
-    certificate = make_proof(network, used, target=_target(target), progress=_progress(quiet))
+    network, used = network_and_gains(file, gains, target, seed, quiet)
+    certificate = make_proof(network, used, route=route, target=target_of(target), progress=listener(quiet))
     bundle = hand_off(network, used, certificate, out)
-    _deliver(bundle.as_json(), bundle.as_text(), as_json, None, {})
-    _leave(bundle.proven)
+    deliver(bundle.as_json(), bundle.as_text(), as_json, None, {})
+    leave(bundle.proven)
 
 
 @verbs.command()
-@_with(FILE, GAINS, TARGET, SEED, JSON)
+@options(FILE, GAINS, TARGET, SEED, JSON)
 @click.option("--out", type=click.Path(path_type=Path), required=True, help="Folder for everything; it appears whole.")
-@_with(QUIET)
+@options(QUIET)
 def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json: bool, out: Path, quiet: bool) -> None:
     """Do the whole job: check, design, prove, margin, simulate, hand off, report."""
     from synth.base.files import refuse_foreign
@@ -249,11 +247,11 @@ def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json
     from synth.whole_job import run_whole_job
 
     refuse_foreign(out, "run")
-    network = _read(file)
+    network = network_of(file)
     in_service = None if gains is None else read_gains(gains, network)
-    job = run_whole_job(network, out, gains=in_service, target=_target(target), seed=seed, progress=_progress(quiet))
-    _deliver(job.document, job.text, as_json, None, {})
-    _leave(job.proven)
+    job = run_whole_job(network, out, gains=in_service, target=target_of(target), seed=seed, progress=listener(quiet))
+    deliver(job.document, job.text, as_json, None, {})
+    leave(job.proven)
 
 
 @verbs.command()
@@ -261,87 +259,65 @@ def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json
 @click.option(
     "--for", "problem", type=click.Path(path_type=Path), help="Also demand that it is about this problem file."
 )
-@_with(JSON, QUIET)
+@options(JSON, QUIET)
 def verify(certificate: Path, problem: Path | None, as_json: bool, quiet: bool) -> None:
     """Re-check a certificate in exact arithmetic, believing nothing in it."""
     from synth.proof import verify as check_again
 
-    _progress(quiet)("deriving every number again")
+    listener(quiet)("deriving every number again")
 
-    network = None if problem is None else _read(problem)
+    network = None if problem is None else network_of(problem)
     found = check_again(certificate, network)
-    _deliver(found.as_json(), found.as_text(), as_json, None, {})
-    _leave(found.verified)
+    deliver(found.as_json(), found.as_text(), as_json, None, {})
+    leave(found.verified)
 
 
-def _read(file: Path) -> Any:
-    from synth.network import read
-
-    return read(file)
-
-
-def _target(target: float | None) -> float | None:
-    if target is not None and not 0 < target < 1:
-        raise InputError(f"--target {target}: a spectral radius between 0 and 1 (both excluded) is needed.")
-    return target
-
-
-def _network_and_gains(file: Path, gains: Path | None, target: float | None, seed: int, quiet: bool) -> tuple[Any, Any]:
-    """The network, and either the gains of the table or a fresh design."""
-    network = _read(file)
-    if gains is not None:
-        from synth.network import read_gains
-
-        return network, read_gains(gains, network)
-    from synth.local import design as make_design
-
-    return network, make_design(network, target=_target(target), seed=seed, progress=_progress(quiet))
-
-
-def _progress(quiet: bool) -> Listener:
-    """A listener that writes to standard error: one line that is overwritten on a terminal, plain lines elsewhere."""
-    if quiet:
-        return silent
-    if not sys.stderr.isatty():
-        return lambda message: click.echo(f"synth: {message}", err=True)
-    from rich.console import Console
-
-    console = Console(stderr=True)
-    return lambda message: console.print(f"[dim]synth: {message}[/dim]", highlight=False)
-
-
-def _deliver(
-    document: Any,
-    text: str,
+@verbs.command()
+@click.argument("file", type=click.Path(path_type=Path))
+@click.option("--gains", type=click.Path(path_type=Path), required=True, help="Gain table in service (CSV or JSON).")
+@click.option(
+    "--joining",
+    type=click.Path(path_type=Path),
+    required=True,
+    help="Problem file of the network as it will be: FILE with one kind new or changed, or with more units.",
+)
+@click.option(
+    "--certificate",
+    type=click.Path(path_type=Path),
+    help="Take the promised sizes from this certificate of FILE (peak route), after verifying it.",
+)
+@options(TARGET, SEED, JSON, OUT, QUIET)
+def admit(
+    file: Path,
+    gains: Path,
+    joining: Path,
+    certificate: Path | None,
+    target: float | None,
+    seed: int,
     as_json: bool,
     out: Path | None,
-    files: dict[str, Any],
-    also: Callable[[Path], Any] | None = None,
+    quiet: bool,
 ) -> None:
-    """Write the files (whole folder), then print the JSON document or the text, with the cautions after the text."""
-    from synth.base.caution import cautions_text
-    from synth.whole_job import plain_json, wrapped
+    """Test whether a unit may join FILE, or be changed, with everybody else's gains untouched; find its gains."""
+    from synth.handoff.table import csv_text, gain_rows
+    from synth.local import admit as test_joining
+    from synth.network import read_gains
+    from synth.network.gains import Gains
 
-    if out is not None:
-        from synth.base.files import whole_folder
-
-        verb = click.get_current_context().info_name or ""
-        with whole_folder(out, verb) as work:
-            for name, content in files.items():
-                (work / name).write_text(content if isinstance(content, str) else plain_json(content), encoding="utf-8")
-            if also is not None:
-                also(work)
-    if as_json:
-        click.echo(plain_json(document), nl=False)
-        return
-    shown = text.replace(cautions_text(), "").rstrip()
-    if out is not None:
-        shown += f"\n\nWritten to {out}."
-    click.echo(wrapped(f"{shown}\n\nCautions\n--------\n{cautions_text()}\n"), nl=False)
-
-
-def _leave(good: bool) -> NoReturn:
-    raise SystemExit(0 if good else 1)
+    network, after = network_of(file), network_of(joining)
+    in_service = read_gains(gains, network)
+    promised = None if certificate is None else promised_sizes(certificate, network)
+    found = test_joining(
+        network, in_service, after, promised=promised, target=target_of(target), seed=seed, progress=listener(quiet)
+    )
+    document = found.as_json()
+    files: dict[str, Any] = {"admit.json": document}
+    if found.admitted:
+        newest = {} if found.gains is None else {found.gains.kind: found.gains}
+        everybody = Gains(tuple(newest.get(k.name) or in_service[k.name] for k in after.kinds))
+        files["gains.csv"] = csv_text(gain_rows(after, everybody))
+    deliver(document, found.as_text(), as_json, out, files)
+    leave(found.admitted)
 
 
 def _one_sentence(function: Callable[[], None]) -> Callable[[], None]:

@@ -4,13 +4,15 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Mapping, Sequence
+from fractions import Fraction
 
 from synth.base.caution import CAUTIONS
 from synth.base.files import MARK
 from synth.handoff.digits import digits
 from synth.handoff.operating import operating_values
 from synth.handoff.scaling import Facts
-from synth.handoff.table import SIGN_CONVENTION, GainRow
+from synth.handoff.table import SIGN_CONVENTION, GainRow, exact_text
+from synth.network.controller import firmware_rows, innovation_rows
 from synth.network.model import Network
 
 WIDTH = 88
@@ -21,6 +23,11 @@ NOT_AS_FLASHED = (
     "version, so the bundle does not count as proven as flashed."
 )
 
+AS_FLASHED = (
+    "The certificate is about the code as flashed: these gains digit for digit, with the sample period, computation "
+    "delay and rounding that it names, and nothing else."
+)
+
 CONTENTS = (
     ("gains.csv", "the gains, one per line, exact, with units (RFC 4180)"),
     ("gains.json", "the same rows, the meaning of every signal, ranges, cautions"),
@@ -28,6 +35,9 @@ CONTENTS = (
     ("datapackage.json", "description of gains.csv (Frictionless)"),
     ("certificate.json", "the proof, as data"),
     ("check.py", "re-verifies the proof with a bare Python, nothing to install"),
+    ("check_firmware.py", "the same for a proof of the code as flashed, with the next two files"),
+    ("check_flashed.py", "the loops of check_firmware.py"),
+    ("check_sampled.py", "the arithmetic of check_firmware.py"),
     ("provenance.json", "hashes of the inputs and versions (in-toto statement)"),
     ("SHA256SUMS", "hashes of all files above and of this README"),
     (MARK, "says that the tool wrote this folder; no further use"),
@@ -66,8 +76,14 @@ def readme_text(
     claim: str,
     covers: Sequence[str],
     excludes: Sequence[str],
+    as_flashed: bool = False,
 ) -> str:
-    """The whole README as text, at most 88 columns except where a name or a file name is longer."""
+    """The whole README as text, at most 88 columns except where a name or a file name is longer.
+
+    ``as_flashed``: the certificate is about the sampled and rounded code, not about the continuous loop.
+    """
+    contents = [line for line in CONTENTS if as_flashed or not line[0].startswith("check_")]
+    checker = "check_firmware.py" if as_flashed else "check.py"
     parts = [
         _heading(f"Local feedback gains: {network.title}", "="),
         _paragraph(
@@ -77,10 +93,10 @@ def readme_text(
         _heading("Cautions"),
         _bullets(CAUTIONS),
         _heading("What is in here"),
-        "".join(f"  {name:<24} {what}\n" for name, what in CONTENTS),
+        "".join(f"  {name:<24} {what}\n" for name, what in contents),
         _heading("How to check what you got"),
         "  sha256sum -c SHA256SUMS            no file was changed on the way\n"
-        "  python3 check.py certificate.json  the proof holds (Python 3, standard library)\n\n",
+        f"  python3 {checker} certificate.json  the proof holds (Python 3, standard library)\n\n",
         _paragraph(
             "Do both on the receiving side, before and after the values enter the firmware. A table with one gain "
             "changed is a different design and needs a new certificate."
@@ -89,18 +105,42 @@ def readme_text(
         _use(network, rows),
         _heading("Gains"),
         _gains(rows),
+        *_controllers(network),
         _heading("Ranges to provide for"),
         _ranges(scaling),
         _heading("What the proof says"),
         _paragraph(claim),
+        *([_paragraph(AS_FLASHED)] if as_flashed else []),
         _heading("Covered"),
         _bullets(covers),
         _heading("Not covered"),
-        _bullets([*excludes, NOT_AS_FLASHED]),
+        _bullets([*excludes, *([] if as_flashed else [NOT_AS_FLASHED])]),
         _heading("Licence"),
         _LICENCE,
     ]
     return "\n".join(part.rstrip("\n") + "\n" for part in parts)
+
+
+def _controllers(network: Network) -> list[str]:
+    """What the firmware must compute beside the gains, where controllers keep states; nothing where none does."""
+    lines: list[str] = []
+    for kind in network.kinds:
+        lines += [f"{kind.name}: {name} = {_sum(parts)}" for name, parts in innovation_rows(kind)]
+        lines += [f"{kind.name}: rate of {name} = {_sum(parts)}" for name, parts in firmware_rows(kind)]
+    if not lines:
+        return []
+    words = (
+        "The controllers keep states of their own, zero at the start. Rates are per second and in the declared units; "
+        "what the table calls an actuator and is named ..._rate or ..._correction is such a rate, not a command. These "
+        "rows are part of the proven controller as the gains are, in continuous time and exact arithmetic."
+    )
+    return [_heading("States that the controllers keep"), _paragraph(words), _bullets(lines)]
+
+
+def _sum(parts: Sequence[tuple[str, Fraction]]) -> str:
+    """A sum for a person: factors of one are left out."""
+    said = [name if factor == 1 else f"({exact_text(factor)}) {name}" for name, factor in parts]
+    return " + ".join(said) or "0"
 
 
 def _heading(text: str, rule: str = "-") -> str:

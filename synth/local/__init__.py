@@ -11,21 +11,69 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from synth.local.admitting import Admission as Admission
+    from synth.local.admitting import admit as admit
+    from synth.local.aims import AimedPeak as AimedPeak
     from synth.local.blocking import Blocking as Blocking
+    from synth.local.blocking import Curve as Curve
+    from synth.local.blocking import Tried as Tried
     from synth.local.designing import Design as Design
     from synth.local.designing import design as design
     from synth.local.designing import redesign as redesign
     from synth.local.obstructed import ObstructionFound as ObstructionFound
+    from synth.local.positive import PositiveDesign as PositiveDesign
+    from synth.local.positive import positive_design as positive_design
+    from synth.local.positive_web import Positivity as Positivity
+    from synth.local.positive_web import positivity as positivity
+    from synth.local.schedule import GainSchedule as GainSchedule
+    from synth.local.schedule import gain_schedule as gain_schedule
+    from synth.local.schedule_grid import Grid as Grid
+    from synth.local.schedule_grid import chosen_grid as chosen_grid
+    from synth.local.schedule_grid import grid_of as grid_of
 
 _HOMES = {
+    "AimedPeak": "aims",
+    "Admission": "admitting",
+    "GainSchedule": "schedule",
+    "Grid": "schedule_grid",
+    "PositiveDesign": "positive",
+    "Positivity": "positive_web",
+    "admit": "admitting",
+    "chosen_grid": "schedule_grid",
+    "gain_schedule": "schedule",
+    "grid_of": "schedule_grid",
+    "positive_design": "positive",
+    "positivity": "positive_web",
     "Blocking": "blocking",
+    "Curve": "blocking",
     "Design": "designing",
     "ObstructionFound": "obstructed",
+    "Tried": "blocking",
     "design": "designing",
     "redesign": "designing",
 }
 
-__all__ = ["Blocking", "Design", "ObstructionFound", "design", "redesign"]
+__all__ = [
+    "Admission",
+    "AimedPeak",
+    "Blocking",
+    "Curve",
+    "Design",
+    "GainSchedule",
+    "Grid",
+    "ObstructionFound",
+    "PositiveDesign",
+    "Positivity",
+    "Tried",
+    "admit",
+    "chosen_grid",
+    "design",
+    "gain_schedule",
+    "grid_of",
+    "positive_design",
+    "positivity",
+    "redesign",
+]
 
 
 def __getattr__(name: str) -> object:

@@ -1,22 +1,58 @@
-"""Why a target is out of reach: every limit is relaxed in turn, and the one that helps most is named."""
+"""Why a target is out of reach: every limit is relaxed in turn, and the one that helps most is named.
+
+The value of that limit which would do is found by searching at ever wider limits and bisecting, never by extrapolation;
+the curves say what radius other values of the limits would give.
+"""
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, replace
-from fractions import Fraction
 
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.base.exact import ExactMatrix
 from synth.base.progress import Listener, silent
 from synth.local.finish import Found, Gain, search
 from synth.local.plant import Field, field_of
-from synth.network.model import Goal, Kind, Network, Signal
+from synth.local.relaxing import Relaxation, relaxations
 
 Array = NDArray[np.float64]
 _BISECTIONS = 4
+_CURVE = (1.5, 4.0)  # factors at which a curve is followed, beside the limit as it is and taken away
+_CURVES = 3  # at most so many curves
+
+
+@dataclass(frozen=True)
+class Tried:
+    """One limit relaxed as far as it makes sense: the smallest radius then met, and whether the target was reached."""
+
+    cause: str
+    kind: str
+    name: str
+    radius: float
+    reaches: bool
+
+
+@dataclass(frozen=True)
+class Curve:
+    """The smallest radius met over values of one limit, in ``unit``; ``kept`` says whether every limit was kept there.
+
+    ``points`` are (value, radius, kept) by rising value, each the result of a short search of its own.
+    """
+
+    cause: str
+    kind: str
+    name: str
+    unit: str
+    points: tuple[tuple[float, float, bool], ...]
+
+    def as_json(self) -> dict[str, object]:
+        """Plain data; infinities as the text "inf"."""
+        return {
+            "cause": self.cause, "kind": self.kind, "name": self.name, "unit": self.unit,
+            "points": [{"value": v, "radius": _number(r), "kept": kept} for v, r, kept in self.points],
+        }  # fmt: skip
 
 
 @dataclass(frozen=True)
@@ -26,7 +62,8 @@ class Blocking:
     ``cause`` is "fastest", "slowest", "actuator limit", "gain bound", "structure", "sensors", "band" or "link
     strength"; ``kind`` and ``name`` say whose. Radii are estimates at the end of a short search. ``needed`` is a value
     of the limit, in ``unit``, that would do (None where no number describes it or relaxing it alone does not reach the
-    target).
+    target). ``tried`` lists every relaxation and what came of it, ``curves`` the radius over values of the bound on
+    the fastest mode and of actuator limits.
     """
 
     cause: str
@@ -37,6 +74,8 @@ class Blocking:
     sentence: str
     needed: float | None = None
     unit: str = ""
+    tried: tuple[Tried, ...] = ()
+    curves: tuple[Curve, ...] = ()
 
     def as_json(self) -> dict[str, object]:
         """Plain data; infinities as the text "inf"."""
@@ -49,21 +88,18 @@ class Blocking:
             "needed": self.needed,
             "unit": self.unit,
             "sentence": self.sentence,
-        }
+            "tried": [
+                {
+                    "cause": t.cause, "kind": t.kind, "name": t.name, "radius": _number(t.radius),
+                    "reaches": t.reaches,
+                }
+                for t in self.tried
+            ],
+            "curves": [curve.as_json() for curve in self.curves],
+        }  # fmt: skip
 
 
-@dataclass(frozen=True)
-class _Relaxation:
-    """One limit made ``factor`` times wider by ``apply(factor)``; ``most`` takes it away for practical purposes."""
-
-    cause: str
-    kind: str
-    name: str
-    apply: Callable[[float], Network]
-    most: float
-    value: float | None
-    unit: str
-    words: str
+_Outcome = tuple[tuple[bool, float, float], Relaxation, Found]
 
 
 def find_blocking(field: Field, found: Found, target: float, seed: int = 0, progress: Listener = silent) -> Blocking:
@@ -73,13 +109,15 @@ def find_blocking(field: Field, found: Found, target: float, seed: int = 0, prog
     the other limits and the smaller radius decide. Weaker links always help, so they are named only if nothing else
     reaches the target.
     """
-    outcomes: list[tuple[tuple[bool, float, float], _Relaxation, Found]] = []
-    for relaxation in _relaxations(field.network):
+    outcomes: list[_Outcome] = []
+    for relaxation in relaxations(field.network):
         answer = _try(relaxation, relaxation.most, ((field, found.gains),), seed)
         progress(f"relaxed {relaxation.cause} {relaxation.name}: radius {answer.merit.radius:.4g}")
         outcomes.append((_order(answer, target), relaxation, answer))
     limits = [outcome for outcome in outcomes if outcome[1].cause != "link strength"]
+    helped = None
     if all(order[0] for order, _, _ in limits):
+        helped = min(limits, key=lambda o: o[0], default=None)
         limits = outcomes
     if not limits:
         sentence = "The network has no link and no limit that could be relaxed."
@@ -88,31 +126,61 @@ def find_blocking(field: Field, found: Found, target: float, seed: int = 0, prog
     needed = None
     if not order[0] and relaxation.value is not None:
         needed = _needed(relaxation, field, found, answer, target, seed)
-    return _named(relaxation, found, answer, target, reaches=not order[0], needed=needed)
+    tried = tuple(Tried(r.cause, r.kind, r.name, a.merit.radius, not o[0]) for o, r, a in outcomes)
+    named = _named(relaxation, found, answer, target, not order[0], needed, helped)
+    return replace(named, tried=tried, curves=_curves(field, found, outcomes, seed))
 
 
 def _named(
-    relaxation: _Relaxation, found: Found, answer: Found, target: float, reaches: bool, needed: float | None
-) -> Blocking:
-    """The blocking limit in words an engineer can act on."""
-    where = f"{relaxation.words}"
+    relaxation: Relaxation, found: Found, answer: Found, target: float, reaches: bool, needed: float | None,
+    helped: _Outcome | None,
+) -> Blocking:  # fmt: skip
+    """The blocking limit in words an engineer can act on; ``helped`` is the best limit where none reaches alone."""
+    where = relaxation.words
     if found.merit.excess > 1e-6:
         start = "No gains keep every limit."
     else:
         start = f"The smallest radius reached is {found.merit.radius:.4g}, the target {target:g}."
-    if reaches:
-        end = f" {where[0].upper()}{where[1:]} is what blocks: "
-        end += f"relaxed, the radius falls to about {answer.merit.radius:.3g}"
-        end += f"; about {needed:.4g} {relaxation.unit}".rstrip() + " would do." if needed is not None else "."
+    would = f"about {needed:.4g} {relaxation.unit}".rstrip() + " would do" if needed is not None else ""
+    if reaches and relaxation.cause == "link strength":
+        end = f" No limit alone reaches the target however far it is relaxed; weaker links do: {would}."
+        if helped is not None and helped[2].merit.radius < found.merit.radius:
+            end += f" Of the limits, {helped[1].words} would help most (radius about {helped[2].merit.radius:.3g})."
+    elif reaches:
+        verb = "are" if relaxation.plural else "is"
+        end = f" {where[0].upper()}{where[1:]} {verb} what blocks: relaxed, the radius falls to about "
+        end += f"{answer.merit.radius:.3g}" + (f"; {would}." if would else ".")
     else:
-        end = (
-            f" No single limit is to blame; relaxing {where} helps most (radius about {answer.merit.radius:.3g}), "
-            "but not enough alone."
-        )
+        end = f" No single limit is to blame; relaxing {where} helps most"
+        end += f" (radius about {answer.merit.radius:.3g})" if np.isfinite(answer.merit.radius) else ""
+        end += ", but not enough alone."
     return Blocking(
         relaxation.cause, relaxation.kind, relaxation.name, found.merit.radius, answer.merit.radius, start + end,
         needed, relaxation.unit,
     )  # fmt: skip
+
+
+def _curves(field: Field, found: Found, outcomes: list[_Outcome], seed: int) -> tuple[Curve, ...]:
+    """The radius over values of the bound on the fastest mode and of the actuator limits.
+
+    Where taking the limit away gains nothing, its two ends say all there is to say.
+    """
+    curves: list[Curve] = []
+    for _, relaxation, wide in outcomes:
+        if relaxation.cause not in ("fastest", "actuator limit") or len(curves) == _CURVES or not relaxation.value:
+            continue
+        answers = {1.0: found, relaxation.most: wide}
+        begin = ((field, found.gains), (field_of(relaxation.apply(relaxation.most)), wide.gains))
+        flat = wide.merit.radius > 0.99 * found.merit.radius and (wide.merit.excess > 1e-6) == (
+            found.merit.excess > 1e-6
+        )
+        for factor in () if flat else _CURVE:
+            answers[factor] = _try(relaxation, factor, begin, seed, starts_made=1)
+        points = tuple(
+            (relaxation.value * f, answers[f].merit.radius, answers[f].merit.excess <= 1e-6) for f in sorted(answers)
+        )
+        curves.append(Curve(relaxation.cause, relaxation.kind, relaxation.name, relaxation.unit, points))
+    return tuple(curves)
 
 
 def _order(found: Found, target: float) -> tuple[bool, float, float]:
@@ -123,11 +191,12 @@ def _order(found: Found, target: float) -> tuple[bool, float, float]:
 
 
 def _try(
-    relaxation: _Relaxation,
+    relaxation: Relaxation,
     factor: float,
     starts: tuple[tuple[Field, Gain], ...],
     seed: int,
     enough: float | None = None,
+    starts_made: int = 3,
 ) -> Found:
     """A short search with one limit ``factor`` times wider, started from given gains of similar networks."""
     relaxed = field_of(relaxation.apply(factor))
@@ -138,7 +207,7 @@ def _try(
         )
         for begin, gains in starts
     )
-    return search(relaxed, seed=seed, starts=3, warm=warm, quick=True, enough=enough)
+    return search(relaxed, seed=seed, starts=starts_made, warm=warm, quick=True, enough=enough)
 
 
 def _carried(K: Array, shape: tuple[int, ...], to_scaled: Callable[[Array], Array]) -> Array:
@@ -148,7 +217,7 @@ def _carried(K: Array, shape: tuple[int, ...], to_scaled: Callable[[Array], Arra
     return to_scaled(wide)
 
 
-def _needed(relaxation: _Relaxation, field: Field, found: Found, wide: Found, target: float, seed: int) -> float:
+def _needed(relaxation: Relaxation, field: Field, found: Found, wide: Found, target: float, seed: int) -> float:
     """A value of the limit that reaches the target: the factor is squared until it does, then bisected (upper end)."""
     starts = ((field, found.gains), (field_of(relaxation.apply(relaxation.most)), wide.gains))
 
@@ -170,118 +239,8 @@ def _needed(relaxation: _Relaxation, field: Field, found: Found, wide: Found, ta
     return value / factor if relaxation.cause in ("slowest", "link strength") else value * factor
 
 
-def _relaxations(network: Network) -> Iterator[_Relaxation]:
-    """Every limit of the network that can be made wider."""
-    goal = network.goal
-    if goal.fastest is not None:
-        fastest = goal.fastest
-        yield _Relaxation(
-            "fastest", "", "fastest", lambda f: replace(network, goal=replace(goal, fastest=fastest * Fraction(f))),
-            10.0, float(fastest), "1/s", f"the bound on the fastest mode (fastest, {float(fastest):g} 1/s)",
-        )  # fmt: skip
-    if goal.slowest is not None and goal.slowest > 0:
-        slowest = goal.slowest
-        yield _Relaxation(
-            "slowest", "", "slowest", lambda f: replace(network, goal=replace(goal, slowest=slowest / Fraction(f))),
-            50.0, float(slowest), "1/s", f"the bound on the slowest mode (slowest, {float(slowest):g} 1/s)",
-        )  # fmt: skip
-    for kind in network.kinds:
-        yield from _kind_relaxations(network, kind)
-    if network.links:
-        yield _Relaxation(
-            "link strength", "", ", ".join(network.classes()),
-            lambda f: network.scaled(1 / Fraction(f), own_parts=False), 10.0, 1.0, "times the present strength",
-            "the strength of the links",
-        )  # fmt: skip
-
-
-def _kind_relaxations(network: Network, kind: Kind) -> Iterator[_Relaxation]:
-    """Limits that belong to one kind."""
-    for q, actuator in enumerate(kind.inputs):
-        if actuator.limit is not None:
-
-            def wider(f: float, q: int = q) -> Network:
-                inputs = list(kind.inputs)
-                limit = inputs[q].limit
-                inputs[q] = replace(inputs[q], limit=None if limit is None else limit * Fraction(f))
-                return _with_kind(network, replace(kind, inputs=tuple(inputs)))
-
-            yield _Relaxation(
-                "actuator limit", kind.name, actuator.name, wider, 1000.0, float(actuator.limit), actuator.unit,
-                f"the limit of actuator {kind.name}.{actuator.name} ({float(actuator.limit):g} {actuator.unit})",
-            )  # fmt: skip
-        bounds = network.goal.gain_bounds.get(kind.name, {}).get(actuator.name)
-        if bounds:
-            yield _Relaxation(
-                "gain bound", kind.name, actuator.name, _wider_gains(network, kind, actuator.name), 1000.0, 1.0,
-                "times the present bounds", f"the gain bounds of {kind.name}.{actuator.name}",
-            )  # fmt: skip
-        if actuator.name in network.goal.uses.get(kind.name, {}):
-            yield _Relaxation(
-                "structure", kind.name, actuator.name, _all_sensors(network, kind, actuator.name), 2.0, None, "",
-                f"the list of sensors that {kind.name}.{actuator.name} may use",
-            )  # fmt: skip
-    for group, signals in (("states", kind.states), ("offers", kind.offers)):
-        for k, signal in enumerate(signals):
-            if signal.band is not None:
-                yield _Relaxation(
-                    "band", kind.name, signal.name, _wider_band(network, kind, group, k), 1000.0, float(signal.band),
-                    signal.unit, f"the band of {kind.name}.{signal.name} ({float(signal.band):g} {signal.unit})",
-                )  # fmt: skip
-    if np.linalg.matrix_rank(kind.C.floats()) < len(kind.states) and not network.goal.uses.get(kind.name):
-        yield _Relaxation(
-            "sensors", kind.name, "sensors", lambda _: _with_kind(network, _sees_everything(kind)), 2.0, None, "",
-            f"the sensors of {kind.name}, which do not show every state,",
-        )  # fmt: skip
-
-
-def _with_kind(network: Network, kind: Kind) -> Network:
-    return replace(network, kinds=tuple(kind if k.name == kind.name else k for k in network.kinds))
-
-
-def _wider_gains(network: Network, kind: Kind, actuator: str) -> Callable[[float], Network]:
-    def apply(factor: float) -> Network:
-        bounds = {k: dict(v) for k, v in network.goal.gain_bounds.items()}
-        bounds[kind.name][actuator] = {s: b * Fraction(factor) for s, b in bounds[kind.name][actuator].items()}
-        return replace(network, goal=replace(network.goal, gain_bounds=bounds))
-
-    return apply
-
-
-def _all_sensors(network: Network, kind: Kind, actuator: str) -> Callable[[float], Network]:
-    def apply(_: float) -> Network:
-        uses: Mapping[str, Mapping[str, tuple[str, ...]]] = {
-            k: {a: s for a, s in v.items() if (k, a) != (kind.name, actuator)} for k, v in network.goal.uses.items()
-        }
-        goal: Goal = replace(network.goal, uses=uses)
-        return replace(network, goal=goal)
-
-    return apply
-
-
-def _wider_band(network: Network, kind: Kind, group: str, index: int) -> Callable[[float], Network]:
-    def apply(factor: float) -> Network:
-        signals: list[Signal] = list(getattr(kind, group))
-        band = signals[index].band
-        signals[index] = replace(signals[index], band=None if band is None else band * Fraction(factor))
-        return _with_kind(network, replace(kind, **{group: tuple(signals)}))  # type: ignore[arg-type]
-
-    return apply
-
-
-def _sees_everything(kind: Kind) -> Kind:
-    """The kind with one more sensor per state."""
-    extra = tuple(Signal(f"state {s.name}", s.unit) for s in kind.states)
-    n = len(kind.states)
-    C = ExactMatrix.of([*kind.C.rows, *ExactMatrix.identity(n).rows], (len(kind.sensors) + n, n))
-    N = ExactMatrix.of(
-        [*kind.N.rows, *ExactMatrix.zeros(n, len(kind.takes)).rows], (len(kind.sensors) + n, len(kind.takes))
-    )
-    return replace(kind, sensors=kind.sensors + extra, C=C, N=N)
-
-
 def _number(value: float) -> float | str:
     return value if np.isfinite(value) else "inf"
 
 
-__all__ = ["Blocking", "Gain", "find_blocking"]
+__all__ = ["Blocking", "Curve", "Tried", "find_blocking"]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import NamedTuple
 
@@ -11,15 +11,20 @@ import numpy as np
 from synth.base.errors import InputError, SolverFailure
 from synth.base.progress import Listener, silent
 from synth.base.provenance import Provenance
-from synth.gain import close_network
+from synth.gain import ClosedUnit, close_network
+from synth.local.aims import AimedPeak, aims_of, role_of
 from synth.local.blocking import Blocking, find_blocking
 from synth.local.finish import Found, search
 from synth.local.guarantee import Broken, SignalPeak
+from synth.local.nominal import nominal_peaks
 from synth.local.obstructed import ObstructionFound
 from synth.local.plant import Field, field_of
 from synth.local.pull import Pulled, pull, scaled
 from synth.network.gains import Gains
 from synth.network.model import Network, need_fixed_pattern
+
+_ROOM = 0.98  # the first search of an aimed design ends at this part of the target
+_KEPT = 1e-6  # limits exceeded by less than this count as kept by a search
 
 
 class Enclosure(NamedTuple):
@@ -38,7 +43,8 @@ class Design:
     actuator peaks strictly below their limits; bands); ``broken`` limits that do not hold; ``blocking`` the limit to
     blame when not reached; ``modes`` per kind the eigenvalues of the closed unit in 1/s, estimates; ``peaks``
     guaranteed peaks of every signal under the declared disturbances from rest; ``digits`` significant digits of the
-    gains.
+    gains. ``aim`` what was made small ('radius', 'effort' or 'peak'; 'radius' also where the target is out of reach)
+    and ``aimed`` the signals whose peaks were, each with its guaranteed and its nominal peak.
     """
 
     gains: Gains
@@ -54,6 +60,8 @@ class Design:
     history: tuple[str, ...]
     provenance: Provenance
     network: Network = field(repr=False)
+    aim: str = "radius"
+    aimed: tuple[AimedPeak, ...] = ()
 
     @property
     def radius(self) -> Enclosure:
@@ -91,10 +99,13 @@ def design(
     progress: Listener = silent,
     check_obstruction: bool = True,
 ) -> Design:
-    """Find the gains with the smallest radius within every limit of the goal.
+    """Find the gains with the smallest radius within every limit of the goal, or what else ``goal.aim`` makes small.
 
-    ``target`` radius to reach, 0 < target < 1 (absent: the goal's); meeting it early does not stop the search, because
-    a smaller radius is more room for whatever the model leaves out. ``seed`` >= 0 fixes all random choices: equal
+    ``target`` radius to reach, 0 < target < 1 (absent: the goal's); meeting it early does not stop the search for the
+    smallest radius, because a smaller radius is more room for whatever the model leaves out. With the aim 'effort' or
+    'peak' the radius only has to stay within the target, and the largest guaranteed peak (in parts of limits or bands,
+    where there are several) is made small; if the target is out of reach, the smallest radius is sought instead.
+    ``seed`` >= 0 fixes all random choices: equal
     inputs give equal gains. ``starts`` number of placed starts of the search (absent: by the number of gains).
     Where the goal sets no ``fastest`` bound, the search keeps to a disc of its own: ten times the fastest open mode or
     fifty times ``slowest``, whichever is larger (1 1/s where both are zero).
@@ -108,7 +119,21 @@ def design(
     if check_obstruction:
         _refuse_obstruction(network)
     plants = field_of(network)
-    found = search(plants, seed=seed, starts=starts, progress=progress)
+    aimed_at = aims_of(network)
+    if not aimed_at:
+        found = search(plants, seed=seed, starts=starts, progress=progress)
+        return _finished(plants, found, aim, seed, progress, explain=True)
+    first = search(plants, seed=seed, starts=starts, enough=_ROOM * aim, progress=progress)
+    if first.merit.excess > _KEPT or not first.merit.radius < aim:
+        return _finished(plants, first, aim, seed, progress, explain=True)
+    aiming = field_of(network, ceiling=aim)
+    found = search(aiming, seed=seed, starts=starts, warm=(first.gains,), progress=progress)
+    found = replace(found, history=(*first.history, *found.history))
+    made = _finished(aiming, found, aim, seed, progress, explain=False)
+    if made.reached:
+        return made
+    # Rounding left the target or a limit by a hair: the smallest radius has the most room, and says what blocks.
+    found = search(plants, seed=seed, starts=starts, warm=(first.gains,), progress=progress)
     return _finished(plants, found, aim, seed, progress, explain=True)
 
 
@@ -121,8 +146,8 @@ def redesign(
 ) -> Design:
     """A quick design that starts from gains of a similar network, such as the same one with stronger links.
 
-    Four placed starts beside ``start`` and a short polish; no obstruction check, and ``blocking`` stays None. Arguments
-    and errors as for ``design``.
+    Four placed starts beside ``start`` and a short polish; no obstruction check, ``blocking`` stays None, and the
+    aim is the smallest radius whatever the goal names. Arguments and errors as for ``design``.
     """
     aim = _checked(network, target, seed, None)
     plants = field_of(network)
@@ -178,9 +203,25 @@ def _finished(plants: Field, found: Found, aim: float, seed: int, progress: List
             )
     units = close_network(plants.network, pulled.gains)
     modes = tuple(tuple(complex(v) for v in np.linalg.eigvals(unit.A.floats())) for unit in units)
-    settings = {"target": aim, "seed": seed, "digits": pulled.digits, "narrowed": pulled.narrowed}
+    settings: dict[str, object] = {"target": aim, "seed": seed, "digits": pulled.digits, "narrowed": pulled.narrowed}
+    aimed: tuple[AimedPeak, ...] = ()
+    if plants.ceiling is not None:
+        settings["aim"] = plants.network.goal.aim
+        aimed = _aimed(plants.network, units, result.peaks)
     return Design(
         gains=pulled.gains, target=aim, lower=result.lower, upper=result.upper, reached=reached, blocking=blocking,
         modes=modes, peaks=result.peaks, broken=result.broken, digits=pulled.digits, history=found.history,
         provenance=Provenance(plants.network.hash, settings), network=plants.network,
+        aim="radius" if plants.ceiling is None else plants.network.goal.aim, aimed=aimed,
     )  # fmt: skip
+
+
+def _aimed(network: Network, units: tuple[ClosedUnit, ...], peaks: tuple[SignalPeak, ...]) -> tuple[AimedPeak, ...]:
+    """The aimed signals with their guaranteed and their nominal peaks."""
+    keys = list(aims_of(network))
+    found = {(p.kind, p.role, p.signal): p for p in peaks}
+    return tuple(
+        AimedPeak(kind, role_of(group), name, p.unit, p.value, nominal, p.limit)
+        for (kind, group, name), nominal in zip(keys, nominal_peaks(network, units, keys), strict=True)
+        for p in (found[kind, role_of(group), name],)
+    )

@@ -16,12 +16,14 @@ from synth.local.coordinates import Coordinates, coordinates
 from synth.local.descent import Descent, descend
 from synth.local.merit import Merit, measure
 from synth.local.plant import Field
-from synth.local.starts import lmi_starts, random_start
+from synth.local.starts import lmi_starts, random_start, riccati_starts
 
 Array = NDArray[np.float64]
 Gain = tuple[Array, ...]
 
 TIGHT = 2e-4  # limits are narrowed by this much while searching, so that the answer lies inside them
+_TRIALS = 40  # random starts that are looked at where modes cannot be placed
+_KEPT_STARTS = 8
 _WEIGHTS = (30.0, 300.0, 3000.0, 30000.0)
 
 
@@ -37,14 +39,20 @@ class Found:
 
 
 class Chart:
-    """The search vector of all plants together, and the merit as a function of it."""
+    """The search vector of all gain groups together, and the merit as a function of it."""
 
     def __init__(self, field: Field, tight: float) -> None:
-        """Choose coordinates for every plant; limits narrowed by ``tight``."""
+        """Choose coordinates for every gain group; limits narrowed by ``tight``.
+
+        A group's search vector is that of its first plant, so only the modes of that one keep to their region by
+        themselves.
+        """
         self.field, self.tight = field, tight
-        self.parts: tuple[Coordinates, ...] = tuple(coordinates(field, i, tight) for i in range(len(field.plants)))
+        self.parts: tuple[Coordinates, ...] = tuple(coordinates(field, group[0], tight) for group in field.groups)
         self.ends = np.cumsum([0, *(part.size for part in self.parts)])
-        self.free_modes = tuple(part.placed is None for part in self.parts)
+        self.part_of = {i: k for k, group in enumerate(field.groups) for i in group}
+        placed = {group[0] for group, part in zip(field.groups, self.parts, strict=True) if part.placed is not None}
+        self.free_modes = tuple(i not in placed for i in range(len(field.plants)))
         self.evaluations = 0
 
     @property
@@ -54,12 +62,14 @@ class Chart:
 
     def gains(self, point: Array) -> tuple[Gain, list[Array]]:
         """Scaled gains and their derivatives, plant by plant."""
-        pairs = [part.gains(point[self._slice(i)]) for i, part in enumerate(self.parts)]
-        return tuple(K for K, _ in pairs), [J for _, J in pairs]
+        pairs = [part.gains(point[self._slice(k)]) for k, part in enumerate(self.parts)]
+        spread = [pairs[self.part_of[i]] for i in range(len(self.field.plants))]
+        return tuple(K for K, _ in spread), [J for _, J in spread]
 
     def point(self, gains: Sequence[Array]) -> Array:
-        """The search vector closest to given gains."""
-        return np.concatenate([part.point(K) for part, K in zip(self.parts, gains, strict=True)] or [np.zeros(0)])
+        """The search vector closest to given gains (of a group, to those of its first plant)."""
+        first = [gains[group[0]] for group in self.field.groups]
+        return np.concatenate([part.point(K) for part, K in zip(self.parts, first, strict=True)] or [np.zeros(0)])
 
     def value(self, point: Array, weight: float) -> tuple[float, Array]:
         """Merit and its gradient; a point where the map or an eigenvalue solver breaks down counts as infinite."""
@@ -71,8 +81,9 @@ class Chart:
             merit = measure(self.field, gains, weight, self.tight, self.free_modes)
         except np.linalg.LinAlgError:
             return np.inf, np.zeros_like(point)
-        parts = [J.reshape(len(J), -1) @ s.ravel() for J, s in zip(slopes, merit.slopes, strict=True)]
-        gradient = np.concatenate(parts) if parts else np.zeros(0)
+        gradient = np.zeros(self.size)
+        for i, (J, s) in enumerate(zip(slopes, merit.slopes, strict=True)):
+            gradient[self._slice(self.part_of[i])] += J.reshape(len(J), -1) @ s.ravel()
         if not np.isfinite(merit.value) or not np.all(np.isfinite(gradient)):
             return np.inf, np.zeros_like(point)
         return merit.value, gradient
@@ -82,18 +93,24 @@ class Chart:
         self.evaluations += 1
         if float(np.abs(point).max(initial=0.0)) > 1e8:
             return np.inf
-        gains = tuple(part.gains_only(point[self._slice(i)]) for i, part in enumerate(self.parts))
         try:
+            own = [part.gains_only(point[self._slice(k)]) for k, part in enumerate(self.parts)]
+            gains = tuple(own[self.part_of[i]] for i in range(len(self.field.plants)))
             return measure(self.field, gains, weight, self.tight, self.free_modes, steep=False).value
         except np.linalg.LinAlgError:
             return np.inf
 
+    @property
+    def all_placed(self) -> bool:
+        """Whether every gain group is searched in the coordinates of its modes."""
+        return all(part.placed is not None for part in self.parts)
+
     def random(self, rng: np.random.Generator, clustered: bool) -> Array:
-        """A start with placed modes for every plant."""
+        """A start with placed modes for the first plant of every group."""
         return np.concatenate([random_start(part, rng, clustered) for part in self.parts] or [np.zeros(0)])
 
-    def _slice(self, i: int) -> slice:
-        return slice(int(self.ends[i]), int(self.ends[i + 1]))
+    def _slice(self, k: int) -> slice:
+        return slice(int(self.ends[k]), int(self.ends[k + 1]))
 
 
 def search(
@@ -122,7 +139,10 @@ def search(
     if not quick:
         from_cells = lmi_starts(field)
         history.append(f"cell problem: {len(from_cells)} usable answers")
-        points.extend(chart.point(gains) for gains in from_cells)
+        if chart.all_placed:
+            points.extend(chart.point(gains) for gains in from_cells)
+        else:
+            points.extend(_promising(chart, [*from_cells, *riccati_starts(field)], rng))
     count = starts if starts is not None else min(32, 8 + 2 * chart.size)
     points.extend(chart.random(rng, clustered=k % 3 == 2) for k in range(count))
     runs = _race(chart, points, 15 if quick else 40, 3 if quick else 5, enough)
@@ -132,6 +152,15 @@ def search(
     merit = measure(field, gains, tight=tight, mode_excess=chart.free_modes)
     history.append(f"search: {len(points)} starts, {chart.evaluations} evaluations, radius {merit.radius:.6g}")
     return Found(gains, best.point, merit, chart.evaluations, tuple(history))
+
+
+def _promising(chart: Chart, made: Sequence[Gain], rng: np.random.Generator) -> list[Array]:
+    """The best of many starts by their merit alone: where modes cannot be placed, most starts lead nowhere."""
+    points = [chart.point(gains) for gains in made]
+    points.extend(chart.random(rng, clustered=k % 3 == 2) for k in range(_TRIALS))
+    heights = [chart.height(point, _WEIGHTS[0]) for point in points]
+    order = np.argsort(heights, kind="stable")[:_KEPT_STARTS]
+    return [points[int(k)] for k in order]
 
 
 def _race(chart: Chart, points: list[Array], steps: int, agree: int, enough: float | None) -> list[Descent]:

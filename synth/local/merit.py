@@ -2,6 +2,8 @@
 
 merit = log radius + weight * (excess of actuator peaks, bands, gain bounds and modes), each excess zero inside its
 limit and growing linearly outside, so that a finite weight makes the constrained optimum a minimum (exact penalty).
+With a ceiling on the radius, the logarithm of the largest aimed peak takes the place of log radius, and the radius
+beyond the ceiling is one more excess.
 Peaks follow theory (3): z = (I - M)^{-1} M_w w, then u = U-gains applied to what the links bring and to w. When the
 radius reaches one they are infinite; their excess saturates there, which keeps the merit continuous.
 """
@@ -20,6 +22,8 @@ Array = NDArray[np.float64]
 
 _FLAT = 10.0  # the excess of a peak saturates at this value
 _TIE = 1e-5  # weight of peak gains that no loop uses, so that units outside every loop are designed as well
+_ASIDE = 1e-5  # weight of the radius below its ceiling, so that freedom the aim leaves is used to lower it
+_MARGINAL = 1e-6  # a unit whose slowest mode decays by less than this, in parts of the disc, counts as not settling
 UNSTABLE = 1e4  # merits at or above this mean that some closed unit is not Hurwitz
 
 
@@ -28,7 +32,8 @@ class Merit:
     """One evaluation: ``value`` to be made small, ``slopes`` its derivative by every K, and the parts behind it.
 
     ``excess`` is the sum of all broken limits (relative, zero if every limit holds); ``peaks`` are, kind by kind, the
-    peak of each row of H over its band and of each actuator over its limit (infinite from radius one on).
+    peak of each row of H over its band and of each actuator over its limit (infinite from radius one on). ``aim`` is
+    the largest aimed peak, in parts of what counts as one (infinite from radius one on, 0 without a ceiling).
     """
 
     value: float
@@ -36,6 +41,7 @@ class Merit:
     radius: float
     excess: float
     peaks: tuple[Array, ...]
+    aim: float = 0.0
 
 
 def measure(
@@ -69,29 +75,46 @@ def measure(
             up = tuple(plant.B.T @ by_A @ plant.C.T if j == i else flat[j] for j in range(len(gains)))
             return Merit(UNSTABLE * (1 + out), tuple(UNSTABLE * s for s in up), np.inf, np.inf, ())
         units.append(unit)
-    radius, by_gain, tie = _radius(field, units)
-    peaks, out, more = _peak_excess(field, units, radius, tight)
-    excess += out
-    value = float(np.log(max(radius, 1e-12))) + weight * excess + tie
+    radius, by_radius, tie, by_tie = _radius(field, units)
+    peaks = _peaks(field, units, radius, tight)
+    height = float(np.log(max(radius, 1e-12)))
+    weights = (1.0, 0.0)  # of log radius and of the aimed peak
+    excess += peaks.excess
+    value = height + tie
+    over_radius = 0.0
+    if field.ceiling is not None:
+        above = height - float(np.log(field.ceiling * (1 - tight)))
+        over_radius = weight if above > 0 else 0.0
+        excess += max(above, 0.0)
+        weights = (_ASIDE, 1.0)
+        value = _ASIDE * height + peaks.height + tie
+    value += weight * excess
     for i, unit in enumerate(units):
         if not steep:
             break
-        by_entry = by_gain[i] + weight * more[i]
+        by_entry = (weights[0] + over_radius) * by_radius[i] + by_tie[i] + weight * peaks.by_excess[i]
+        by_entry = by_entry + weights[1] * peaks.by_height[i]
         slopes[i] = weight * slopes[i] + _by_gain(field.plants[i], unit, by_entry)
-    return Merit(value, tuple(np.where(p.allowed, s, 0.0) for p, s in zip(field.plants, slopes, strict=True)),
-                 radius, excess, peaks)  # fmt: skip
+    slopes = [np.where(p.allowed, s, 0.0) for p, s in zip(field.plants, slopes, strict=True)]
+    return Merit(value, tuple(slopes), radius, excess, peaks.ratios, peaks.aim)
 
 
 def _unit(plant: Plant, K: Array, steep: bool) -> Guide | None:
     """Peak gains from [takes, disturbances] to [rows of H, actuators], with slopes by each allowed entry of K."""
     actuators, w = plant.B.shape[1], plant.E.shape[1]
-    return peak_gain_guide(
-        plant.A + plant.B @ K @ plant.C,
+    closed = plant.A + plant.B @ K @ plant.C
+    if len(closed) and not float(np.linalg.eigvals(closed).real.max()) < -_MARGINAL:
+        return None
+    found = peak_gain_guide(
+        closed,
         np.concatenate((plant.D + plant.B @ K @ plant.N, plant.E), axis=1),
         np.concatenate((plant.H + plant.Fu @ K @ plant.C, K @ plant.C)),
         np.block([[plant.F + plant.Fu @ K @ plant.N, plant.Fw], [K @ plant.N, np.zeros((actuators, w))]]),
         *(plant.directions if steep else (None,) * 4),
     )
+    # Close to the imaginary axis the estimate may break down; what it then says must not attract a search.
+    good = found is not None and bool(np.all(np.isfinite(found.gains)) and np.all(found.gains >= 0))
+    return found if good else None
 
 
 def _by_gain(plant: Plant, unit: Guide, by_entry: Array) -> Array:
@@ -111,66 +134,101 @@ def gain_matrix(field: Field, units: list[Guide]) -> Array:
     )
 
 
-def _radius(field: Field, units: list[Guide]) -> tuple[float, list[Array], float]:
-    """Radius, the derivative of its logarithm (and of the tie-break) by every peak gain, and the tie-break."""
+def _radius(field: Field, units: list[Guide]) -> tuple[float, list[Array], float, list[Array]]:
+    """Radius, the derivative of its logarithm by every peak gain, the tie-break, and its derivative."""
     matrix = gain_matrix(field, units)
     radius, slope = radius_guide(matrix, field.blocks)
     slope = slope / max(radius, 1e-12)
-    by_gain, tie = [], 0.0
+    by_gain, by_tie, tie = [], [], 0.0
     for i, (plant, unit) in enumerate(zip(field.plants, units, strict=True)):
-        part = np.full_like(unit.gains, 0.0)
+        part, aside = np.zeros_like(unit.gains), np.zeros_like(unit.gains)
         part[: plant.offers, : plant.D.shape[1]] = slope[field.rows(i)] @ field.strengths[field.takes(i)].T
         if not part.any():
             heads = plant.H.shape[0]
             total = float(unit.gains[:heads].sum())
             if total > 0:
                 tie += _TIE * float(np.log(total))
-                part[:heads] = _TIE / total
+                aside[:heads] = _TIE / total
         by_gain.append(part)
-    return radius, by_gain, tie
+        by_tie.append(aside)
+    return radius, by_gain, tie, by_tie
 
 
-def _peak_excess(
-    field: Field, units: list[Guide], radius: float, tight: float
-) -> tuple[tuple[Array, ...], float, list[Array]]:
-    """Peaks over limits, the sum of their saturated excesses, and its derivative by every peak gain."""
+@dataclass(frozen=True)
+class _Peaks:
+    """Peaks over limits; the saturated sum of their excesses and the logarithm of the aimed peak, with derivatives."""
+
+    ratios: tuple[Array, ...]
+    excess: float
+    by_excess: list[Array]
+    height: float
+    by_height: list[Array]
+    aim: float
+
+
+def _peaks(field: Field, units: list[Guide], radius: float, tight: float) -> _Peaks:
+    """Every peak by theory (3), each excess with its derivative by every peak gain."""
     limits = [np.concatenate((p.band, p.limit)) * (1 - tight) for p in field.plants]
-    more = [np.zeros_like(unit.gains) for unit in units]
+    none = [np.zeros_like(unit.gains) for unit in units]
     counted = sum(int(np.isfinite(limit).sum()) for limit in limits)
-    if not counted:
-        return tuple(np.zeros_like(limit) for limit in limits), 0.0, more
+    if not counted and field.ceiling is None:
+        return _Peaks(tuple(np.zeros_like(limit) for limit in limits), 0.0, none, 0.0, none, 0.0)
     if radius >= 1 - 1e-9:
         out = tuple(np.where(np.isfinite(limit), np.inf, 0.0) for limit in limits)
-        return out, _FLAT * counted, more
+        return _Peaks(out, _FLAT * counted, none, _FLAT, none, np.inf)
     matrix = gain_matrix(field, units)
-    inverse = np.linalg.inv(np.eye(len(matrix)) - matrix)
+    inverse: Array = np.asarray(np.linalg.inv(np.eye(len(matrix)) - matrix), dtype=np.float64)
     from_w = np.concatenate(
         [u.gains[: p.offers, p.D.shape[1] :].sum(axis=1) for p, u in zip(field.plants, units, strict=True)]
     )
     z = inverse @ from_w
-    total, peaks = 0.0, []
-    adjoint = np.zeros(len(z))
-    for i, (plant, unit) in enumerate(zip(field.plants, units, strict=True)):
-        takes = plant.D.shape[1]
-        brought = field.strengths[field.takes(i)] @ z
-        peak = unit.gains[:, :takes] @ brought + unit.gains[:, takes:].sum(axis=1)
-        ratio = peak / limits[i]
-        peaks.append(ratio * (1 - tight))
+    brought = [field.strengths[field.takes(i)] @ z for i in range(len(units))]
+    peaks = [
+        unit.gains[:, : len(v)] @ v + unit.gains[:, len(v) :].sum(axis=1)
+        for unit, v in zip(units, brought, strict=True)
+    ]
+    ratios = [peak / limit for peak, limit in zip(peaks, limits, strict=True)]
+    total, steep = 0.0, [np.zeros_like(peak) for peak in peaks]
+    for slope, ratio, peak in zip(steep, ratios, peaks, strict=True):
         for row in np.nonzero(ratio > 1)[0]:
             log = float(np.log(ratio[row]))
             total += log / (1 + log / _FLAT)
-            steep = 1 / (1 + log / _FLAT) ** 2 / float(peak[row])
-            more[i][row, :takes] += steep * brought
-            more[i][row, takes:] += steep
-            adjoint += steep * (unit.gains[row, :takes] @ field.strengths[field.takes(i)])
+            slope[row] = 1 / (1 + log / _FLAT) ** 2 / float(peak[row])
+    by_excess = _by_peaks(field, units, steep, brought, inverse)
+    kept = tuple(ratio * (1 - tight) for ratio in ratios)
+    if field.ceiling is None:
+        return _Peaks(kept, total, by_excess, 0.0, none, 0.0)
+    parts = [plant.aimed * peak for plant, peak in zip(field.plants, peaks, strict=True)]
+    i = int(np.argmax([part.max(initial=0.0) for part in parts]))
+    top_row = int(np.argmax(parts[i]))
+    aim = max(float(parts[i][top_row]), 1e-12)
+    log = float(np.log(aim))
+    share = 1.0 if log <= 0 else 1 / (1 + log / _FLAT)
+    top = [np.zeros_like(peak) for peak in peaks]
+    top[i][top_row] = share**2 / max(float(peaks[i][top_row]), 1e-300)
+    by_height = _by_peaks(field, units, top, brought, inverse) if aim > 1e-12 else none
+    return _Peaks(kept, total, by_excess, log * share, by_height, aim)
+
+
+def _by_peaks(
+    field: Field, units: list[Guide], steep: list[Array], brought: list[Array], inverse: Array
+) -> list[Array]:
+    """Derivative by every peak gain of a function of the peaks whose derivative by each peak is ``steep``."""
+    found = [np.zeros_like(unit.gains) for unit in units]
+    adjoint = np.zeros(len(inverse))
+    for i, (unit, slope) in enumerate(zip(units, steep, strict=True)):
+        takes = len(brought[i])
+        found[i][:, :takes] += np.outer(slope, brought[i])
+        found[i][:, takes:] += slope[:, None]
+        adjoint += slope @ unit.gains[:, :takes] @ field.strengths[field.takes(i)]
     if adjoint.any():
         back = adjoint @ inverse
         for i, plant in enumerate(field.plants):
-            takes = plant.D.shape[1]
+            takes = len(brought[i])
             own = back[field.rows(i)]
-            more[i][: plant.offers, :takes] += np.outer(own, field.strengths[field.takes(i)] @ z)
-            more[i][: plant.offers, takes:] += own[:, None]
-    return tuple(peaks), total, more
+            found[i][: plant.offers, :takes] += np.outer(own, brought[i])
+            found[i][: plant.offers, takes:] += own[:, None]
+    return found
 
 
 def _mode_excess(A: Array, field: Field, tight: float) -> tuple[float, Array]:

@@ -7,14 +7,17 @@ logarithms). The scaled problem is therefore the same whatever units the user de
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from fractions import Fraction
 
 import numpy as np
 from numpy.typing import NDArray
 
+from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.gain.guide import connected_blocks
+from synth.local.aims import aims_of
 from synth.network.model import Goal, Kind, Network
 
 Array = NDArray[np.float64]
@@ -27,9 +30,10 @@ class Plant:
 
     A_c = A + B K C, D_c = D + B K N, command u = K C x + K N v, z = H x + F v + Fu u. ``E`` and ``Fw`` carry the
     declared disturbance peaks: each scaled disturbance is bounded by one. ``H`` and ``F`` list the offers first, then
-    the states with a band.
+    the states with a band or aimed at.
     ``allowed`` (inputs, sensors) is the structure, ``bound`` the scaled bound of each gain (inf: none), ``limit``
-    the scaled actuator limits and ``band`` the scaled bands of the rows of ``H`` (inf: none).
+    the scaled actuator limits and ``band`` the scaled bands of the rows of ``H`` (inf: none). ``aimed`` has an entry
+    per row of ``H`` and then per actuator: a peak times its entry is what the search makes small (0: not aimed at).
     """
 
     kind: Kind
@@ -47,7 +51,11 @@ class Plant:
     bound: Array
     limit: Array
     band: Array
+    aimed: Array
     gain_unit: Array  # (inputs, sensors): user's gain = scaled gain * gain_unit
+    state_unit: Array  # user's state = scaled state * state_unit, likewise below
+    input_unit: Array
+    sensor_unit: Array
     directions: tuple[Array, Array, Array, Array]  # derivatives of A, [D E], [H; U], [F Fw; UV 0] by each allowed gain
 
     @property
@@ -69,7 +77,10 @@ class Field:
     """All plants of a network with the scaled links between them.
 
     ``strengths`` (all takes, all offers) sums |strength| of the links; ``slowest`` and ``fastest`` are in units of
-    ``omega`` (1/s); ``fastest_given`` tells whether the user set the disc or the search chose it.
+    ``omega`` (1/s); ``fastest_given`` tells whether the user set the disc or the search chose it. ``groups`` lists the
+    plants that carry one gain set (their inputs and sensors are scaled alike, so that equal gains are equal scaled
+    gains). ``ceiling`` is None where the radius is made small; else the radius must not exceed it and the peaks that
+    the plants aim at are made small.
     """
 
     network: Network
@@ -80,6 +91,8 @@ class Field:
     fastest: float
     fastest_given: bool
     blocks: tuple[NDArray[np.intp], ...]
+    groups: tuple[tuple[int, ...], ...]
+    ceiling: float | None = None
 
     def takes(self, i: int) -> slice:
         """Rows of ``strengths`` that belong to plant i."""
@@ -101,8 +114,12 @@ def allowed_entries(kind: Kind, goal: Goal) -> Mask:
     return mask
 
 
-def field_of(network: Network) -> Field:
-    """Fold, scale and collect the units of ``network``; pure arithmetic, raises nothing for a valid network."""
+def field_of(network: Network, ceiling: float | None = None) -> Field:
+    """Fold, scale and collect the units of ``network``; pure arithmetic.
+
+    ``ceiling`` (0 to 1) turns the search to what ``network.goal.aim`` names, with the radius bounded by it; without
+    it the search is for the smallest radius. InputError where kinds of one group differ in their inputs or sensors.
+    """
     folded = [_folded(kind, network) for kind in network.kinds]
     modes = [abs(v) for A, *_ in folded for v in np.linalg.eigvals(A.floats())] or [0.0]
     slowest = float(network.goal.slowest or 0)
@@ -112,12 +129,52 @@ def field_of(network: Network) -> Field:
     omega = float(network.goal.fastest or 10 * (natural if natural > 0 else 0.1))
     tables = [_tables(kind, parts, omega) for kind, parts in zip(network.kinds, folded, strict=True)]
     scales = _scales(network, tables)
+    aims = aims_of(network) if ceiling is not None else {}
     plants = tuple(
-        _plant(kind, network.goal, table, scale)
+        _plant(kind, network.goal, table, scale, aims)
         for kind, table, scale in zip(network.kinds, tables, scales, strict=True)
     )
+    groups = groups_of(network)
     strengths, pattern = _strengths(network, scales)
-    return Field(network, plants, strengths, omega, slowest / omega, 1.0, given, connected_blocks(pattern))
+    return Field(
+        network, _alike(plants, groups), strengths, omega, slowest / omega, 1.0, given, connected_blocks(pattern),
+        groups, ceiling,
+    )  # fmt: skip
+
+
+def groups_of(network: Network) -> tuple[tuple[int, ...], ...]:
+    """Positions of the kinds that carry one gain set, in the order of their first kinds.
+
+    InputError where their inputs or sensors differ: one K could then not be theirs.
+    """
+    found: dict[str, list[int]] = {}
+    for i, kind in enumerate(network.kinds):
+        found.setdefault(kind.group, []).append(i)
+    for name, members in found.items():
+        first = network.kinds[members[0]]
+        for i in members[1:]:
+            other = network.kinds[i]
+            for group in ("inputs", "sensors"):
+                ours, theirs = ([(s.name, s.unit) for s in getattr(kind, group)] for kind in (first, other))
+                if ours != theirs:
+                    raise InputError(
+                        f"{first.name} and {other.name} cannot carry the same gains ({name}): their {group} differ; "
+                        "give them gain sets of their own."
+                    )
+    return tuple(tuple(members) for members in found.values())
+
+
+def _alike(plants: tuple[Plant, ...], groups: tuple[tuple[int, ...], ...]) -> tuple[Plant, ...]:
+    """The plants with the structure and the gain bounds that all of their group have."""
+    found = list(plants)
+    for members in groups:
+        if len(members) > 1:
+            allowed = np.logical_and.reduce([plants[i].allowed for i in members])
+            bound = np.minimum.reduce([plants[i].bound for i in members])
+            for i in members:
+                alike = replace(plants[i], allowed=allowed, bound=bound)
+                found[i] = replace(alike, directions=_directions(alike))
+    return tuple(found)
 
 
 def _folded(kind: Kind, network: Network) -> tuple[ExactMatrix, ExactMatrix, ExactMatrix]:
@@ -152,14 +209,20 @@ def _tables(kind: Kind, folded: tuple[ExactMatrix, ExactMatrix, ExactMatrix], om
 
 
 def _scales(network: Network, tables: list[dict[str, Array]]) -> list[dict[str, Array]]:
-    """Scale of every state, input, take, offer and sensor: one least-squares fit in logarithms for all kinds."""
+    """Scale of every state, input, take, offer and sensor: one least-squares fit in logarithms for all kinds.
+
+    Kinds of one gain group share the scales of inputs and sensors.
+    """
     places: list[dict[str, slice]] = []
+    shared: dict[tuple[str, str], slice] = {}
     count = 0
     for kind in network.kinds:
         place = {}
         for group in ("states", "inputs", "takes", "offers", "sensors"):
             size = len(getattr(kind, group))
             place[group] = slice(count, count + size)
+            if group in ("inputs", "sensors"):
+                place[group] = shared.setdefault((group, kind.group), place[group])
             count += size
         places.append(place)
     rows: list[tuple[int, int, float]] = []  # log value + scale of column - scale of row = 0
@@ -189,10 +252,16 @@ def _scales(network: Network, tables: list[dict[str, Array]]) -> list[dict[str, 
     return [{group: scale[part] for group, part in place.items()} for place in places]
 
 
-def _plant(kind: Kind, goal: Goal, table: dict[str, Array], scale: dict[str, Array]) -> Plant:
+def _plant(
+    kind: Kind,
+    goal: Goal,
+    table: dict[str, Array],
+    scale: dict[str, Array],
+    aims: Mapping[tuple[str, str, str], Fraction],
+) -> Plant:
     """The plant in scaled signals: x = scale * x_scaled and so on."""
     x, u, v, z, y = (scale[g] for g in ("states", "inputs", "takes", "offers", "sensors"))
-    banded = [i for i, s in enumerate(kind.states) if s.band is not None]
+    banded = [i for i, s in enumerate(kind.states) if s.band is not None or (kind.name, "states", s.name) in aims]
     states = np.eye(len(kind.states))[banded]
     allowed = allowed_entries(kind, goal)
     unit = u[:, None] / y[None, :]
@@ -218,10 +287,25 @@ def _plant(kind: Kind, goal: Goal, table: dict[str, Array], scale: dict[str, Arr
         bound=bound / unit,
         limit=_bounds([a.limit for a in kind.inputs]) / u,
         band=_bounds(bands) / heights,
+        aimed=_aimed(kind, banded, aims) * np.concatenate((heights, u)),
         gain_unit=unit,
+        state_unit=x,
+        input_unit=u,
+        sensor_unit=y,
         directions=(),  # type: ignore[arg-type]
     )
     return replace(plant, directions=_directions(plant))
+
+
+def _aimed(kind: Kind, banded: list[int], aims: Mapping[tuple[str, str, str], Fraction]) -> Array:
+    """One over the value that counts as one, for each row of H and each actuator; 0 where it is not aimed at."""
+    rows = [
+        *(("offers", s.name) for s in kind.offers),
+        *(("states", kind.states[i].name) for i in banded),
+        *(("inputs", a.name) for a in kind.inputs),
+    ]
+    values = [aims.get((kind.name, *row)) for row in rows]
+    return np.array([0.0 if value is None else 1.0 / float(value) for value in values])
 
 
 def _directions(plant: Plant) -> tuple[Array, Array, Array, Array]:

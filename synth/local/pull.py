@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.exact import ExactMatrix
+from synth.local.aims import aims_of, role_of
 from synth.local.descent import descend
 from synth.local.finish import TIGHT, Chart, Found, Gain
 from synth.local.guarantee import Guarantee, broken_bounds, guarantee
@@ -39,6 +40,14 @@ class Pulled:
     narrowed: float
 
 
+def score(field: Field, result: Guarantee) -> float:
+    """What the field's search makes small, guaranteed: the upper end of the radius, or the largest aimed peak."""
+    if field.ceiling is None:
+        return result.upper
+    aims = {(kind, role_of(group), name): value for (kind, group, name), value in aims_of(field.network).items()}
+    return max(p.value / float(aims[key]) for p in result.peaks if (key := (p.kind, p.role, p.signal)) in aims)
+
+
 def rounded(field: Field, gains: Gain, digits: int) -> Gains:
     """Scaled gains in the user's units with ``digits`` significant digits, exact; zeros of the structure stay zero."""
     sets = []
@@ -60,14 +69,15 @@ def pull(field: Field, found: Found, width: float = 1e-6) -> Pulled:
     for digits in DIGITS if found.merit.excess < _HOPELESS else ():
         for candidate, tight in _inside(field, found, digits, narrowed):
             result = guarantee(field.network, candidate, width)
-            if result.broken:
+            if result.broken or (field.ceiling is not None and result.upper > field.ceiling):
                 continue
-            if best is None or result.upper < best.guarantee.upper:
+            if best is None or score(field, result) < score(field, best.guarantee):
                 best = Pulled(candidate, result, digits, tight)
             break
         if found.merit.excess > 1e-6 and best is None:
             break  # the limits cannot be met: more digits would not help
-        if best is not None and best.guarantee.upper <= max((1 + _COST) * found.merit.radius, _NOTHING):
+        wanted = found.merit.radius if field.ceiling is None else found.merit.aim
+        if best is not None and score(field, best.guarantee) <= max((1 + _COST) * wanted, _NOTHING):
             break
     if best is not None:
         return best

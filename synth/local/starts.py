@@ -11,41 +11,118 @@ from numpy.typing import NDArray
 
 from synth.base.errors import InputError
 from synth.local.coordinates import Coordinates
+from synth.local.core import core_of, regulator, with_core_feedback
 from synth.local.plant import Field, Plant
 
 Array = NDArray[np.float64]
 
 
-def lmi_starts(field: Field, rounds: int = 3) -> list[tuple[Array, ...]]:
-    """Scaled gains from the cell problems: with the declared disturbances from rest, and nearly without."""
-    from synth.local.cell import CellData, best_cell
+_PRICES = (0.03, 0.3, 3.0)  # how dear effort is in the Riccati starts, and how little sensors are trusted
 
+
+def lmi_starts(field: Field, rounds: int = 3) -> list[tuple[Array, ...]]:
+    """Scaled gains from the cell problems: with the declared disturbances from rest, and nearly without.
+
+    Kinds of one gain group share one Q (theory (18)) where they have equally many states. A unit whose controller has
+    an estimator or memory is solved as it is without them, and its state feedback acts on what an estimator knows.
+    """
     found: list[tuple[Array, ...]] = []
     offers = field.strengths.shape[1]
     for factor, start in ((1.0, 0.0), (1e-3, 1.0)):
         z = np.full(offers, start)
         for _ in range(rounds):
-            gains: list[Array] = []
-            for i, plant in enumerate(field.plants):
-                data = CellData(
-                    A=plant.A, B=plant.B, D=plant.D, E=factor * plant.E, H=plant.H[: plant.offers],
-                    intake=field.strengths[field.takes(i)] @ z, limit=plant.limit, size=np.ones(plant.offers),
-                    slowest=max(field.slowest, 1e-6), fastest=field.fastest,
-                )  # fmt: skip
-                try:
-                    answer = best_cell(data)
-                except (InputError, np.linalg.LinAlgError):
-                    answer = None
-                if answer is None:
+            fed: dict[int, Array] = {}
+            for group in field.groups:
+                solved = _group_cell(field, group, factor, z)
+                if solved is None:
                     break
-                own = field.rows(i)
-                z[own] = 0.5 * (z[own] + answer.sizes) if z[own].any() else answer.sizes
-                gains.append(project(plant, answer.K))
-            if len(gains) < len(field.plants):
+                by_state, sizes = solved
+                for i, own in zip(group, sizes, strict=True):
+                    rows = field.rows(i)
+                    z[rows] = 0.5 * (z[rows] + own) if z[rows].any() else own
+                    fed[i] = by_state
+            if len(fed) < len(field.plants):
                 break
-            found.append(tuple(gains))
+            found.extend(spread(field, [fed[i] for i in range(len(field.plants))]))
             if factor < 1.0:
                 z = z / max(float(z.max()), 1e-12)
+    return found
+
+
+def _group_cell(
+    field: Field, group: tuple[int, ...], factor: float, z: Array
+) -> tuple[Array, tuple[Array, ...]] | None:
+    """State feedback of the cores of one gain group, and the sizes of what each of its plants offers."""
+    from synth.local.cell import CellData, best_cell
+    from synth.local.shared_cell import best_shared
+
+    units = []
+    for i in group:
+        plant, core = field.plants[i], core_of(field.plants[i])
+        units.append(
+            CellData(
+                A=plant.A[np.ix_(core.fed, core.fed)],
+                B=plant.B[np.ix_(core.fed, core.inputs)],
+                D=plant.D[core.fed],
+                E=factor * plant.E[core.fed],
+                H=plant.H[: plant.offers, core.fed],
+                intake=field.strengths[field.takes(i)] @ z,
+                limit=plant.limit[core.inputs],
+                size=np.ones(plant.offers),
+                slowest=max(field.slowest, 1e-6),
+                fastest=field.fastest,
+            )
+        )
+    try:
+        if len(units) > 1 and len({unit.B.shape for unit in units}) == 1:
+            shared = best_shared(units)
+            return None if shared is None else (shared.K, shared.sizes)
+        answers = [best_cell(unit) for unit in units]
+    except (InputError, np.linalg.LinAlgError):
+        return None
+    if any(answer is None for answer in answers):
+        return None
+    sizes = tuple(answer.sizes for answer in answers if answer is not None)
+    return answers[0].K if answers[0] is not None else np.zeros((0, 0)), sizes
+
+
+def riccati_starts(field: Field) -> list[tuple[Array, ...]]:
+    """Scaled gains from regulators of the cores, cheap to dear, each with estimators where the controller has them."""
+    found: list[tuple[Array, ...]] = []
+    for price in (0.03, 0.1, 0.3, 1.0, 3.0, 10.0):
+        fed: list[Array] = []
+        for plant in field.plants:
+            core = core_of(plant)
+            heads = np.concatenate((plant.H[: plant.offers, core.fed], 0.1 * np.eye(len(core.fed))))
+            A, B = plant.A[np.ix_(core.fed, core.fed)], plant.B[np.ix_(core.fed, core.inputs)]
+            by_state = regulator(A, B, heads, price)
+            if by_state is None:
+                break
+            fed.append(by_state)
+        if len(fed) == len(field.plants):
+            found.extend(spread(field, fed))
+    return found
+
+
+def spread(field: Field, fed: list[Array]) -> list[tuple[Array, ...]]:
+    """Gains that carry out a state feedback of every core: projected on the sensors, or by way of estimators."""
+    cores = [core_of(plant) for plant in field.plants]
+    wide = any(len(core.estimates) or len(core.memory) for core in cores)
+    found = []
+    for price in _PRICES if wide else _PRICES[:1]:
+        gains: list[Array] = []
+        for plant, core, by_state in zip(field.plants, cores, fed, strict=True):
+            if len(core.estimates) or len(core.memory):
+                whole = with_core_feedback(plant, core, by_state, price, field.omega)
+                if whole is None:
+                    break
+                gains.append(np.clip(whole, -plant.bound, plant.bound))
+            else:
+                everything = np.zeros((plant.B.shape[1], len(plant.A)))
+                everything[np.ix_(core.inputs, core.fed)] = by_state
+                gains.append(project(plant, everything))
+        if len(gains) == len(field.plants):
+            found.append(tuple(gains))
     return found
 
 

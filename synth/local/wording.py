@@ -9,7 +9,15 @@ from typing import TYPE_CHECKING
 from synth.base.caution import CAUTIONS, cautions_text
 
 if TYPE_CHECKING:
+    from synth.local.aims import AimedPeak
     from synth.local.designing import Design
+
+
+_AIMS = {
+    "radius": "the radius",
+    "effort": "the guaranteed peak of the actuators",
+    "peak": "the guaranteed peak of the named signals",
+}
 
 
 def explanation(design: Design) -> str:
@@ -20,15 +28,29 @@ def explanation(design: Design) -> str:
     else:
         lines.append("With these gains a closed unit does not settle, so there is no finite radius.")
     if design.reached:
-        lines.append(
-            "The target is reached and every limit holds; of the gains within the limits these make the radius"
-        )
-        lines.append("smallest, as far as the search could tell.")
+        lines.append("The target is reached and every limit holds.")
+        least = f"Of the gains within the limits these make {_AIMS[design.aim]} least,"
+        lines.append(f"{least} as far as the search could tell.")
         near = [p for p in design.peaks if p.limit and p.value > 0.98 * float(p.limit)]
         lines.extend(f"{p.kind}.{p.signal} uses {p.value / float(p.limit or 1):.1%} of its limit." for p in near)
     lines.extend(f"Not kept: {broken.sentence}." for broken in design.broken)
+    lines.extend(
+        f"{p.kind}.{p.signal}: at most {p.guaranteed:.4g} {p.unit} for every link of the proven class; "
+        f"{_nominal(p)} with fresh links of the written strengths (estimate)."
+        for p in design.aimed
+    )
+    if design.aim != design.network.goal.aim:
+        lines.append("The radius was made least, not what the aim names, because the target is out of reach.")
     if design.blocking is not None:
         lines.append(design.blocking.sentence)
+        for curve in design.blocking.curves:
+            where = f"the limit of {curve.kind}.{curve.name}" if curve.kind else f"the bound {curve.name!r}"
+            points = ", ".join(
+                f"{value:.4g}: {'no finite radius' if not math.isfinite(radius) else format(radius, '.3g')}"
+                + ("" if kept else " (other limits broken)")
+                for value, radius, kept in curve.points
+            )
+            lines.append(f"Smallest radius met over {where} ({curve.unit}): {points}.")
     return "\n".join(lines)
 
 
@@ -61,6 +83,14 @@ def document(design: Design) -> dict[str, object]:
             }
             for p in design.peaks
         },
+        "aim": design.aim,
+        "aimed": [
+            {
+                "kind": p.kind, "role": p.role, "signal": p.signal, "in": p.unit, "guaranteed": _plain(p.guaranteed),
+                "nominal": _plain(p.nominal), "limit": None if p.limit is None else float(p.limit),
+            }
+            for p in design.aimed
+        ],
         "history": list(design.history),
         "provenance": design.provenance.as_dict(),
         "cautions": list(CAUTIONS),
@@ -130,6 +160,10 @@ def _ends(lower: float, upper: float) -> str:
     unit = 10.0**-places
     places = max(0, places)
     return f"{math.floor(lower / unit) * unit:.{places}f} and {math.ceil(upper / unit) * unit:.{places}f}"
+
+
+def _nominal(peak: AimedPeak) -> str:
+    return f"about {peak.nominal:.4g} {peak.unit}" if math.isfinite(peak.nominal) else "without bound"
 
 
 def _plain(value: float) -> float | str:

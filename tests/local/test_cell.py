@@ -10,7 +10,17 @@ import numpy as np
 import pytest
 
 from synth.base.errors import InputError
-from synth.local.cell import CellAnswer, CellData, CellProblem, answer_of, best_cell, broken, cell_problem
+from synth.local.cell import (
+    CellAnswer,
+    CellData,
+    CellOutcome,
+    CellProblem,
+    answer_of,
+    best_cell,
+    broken,
+    cell_problem,
+    solve_cell,
+)
 from synth.local.plant import field_of
 from tests.build import convoy
 
@@ -88,9 +98,12 @@ def test_tampered_answers_are_refused(part: str, expected: str) -> None:
 def test_almost_solved_is_a_failure(status: str, monkeypatch: pytest.MonkeyPatch) -> None:
     problem = CellProblem(3, 1, 1, 1, 1, (True,))
     data, good = solved()
-    assert problem.solve(data, good.decay) is not None
+    assert problem.solve(data, good.decay).status == "solved"
     monkeypatch.setattr(cp.Problem, "status", property(lambda self: status))
-    assert problem.solve(data, good.decay) is None
+    monkeypatch.setattr("synth.local.cell._SOLVERS", ((cp.CLARABEL, {}),))
+    outcome = problem.solve(data, good.decay)
+    assert outcome.answer is None
+    assert outcome.status == ("infeasible" if status == "infeasible" else "solver failed")
 
 
 def test_solver_error_is_no_answer(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -99,12 +112,58 @@ def test_solver_error_is_no_answer(monkeypatch: pytest.MonkeyPatch) -> None:
 
     data, _ = solved()
     monkeypatch.setattr(cp.Problem, "solve", fail)
-    assert best_cell(data) is None
+    assert solve_cell(data) == CellOutcome(None, "solver failed", "")
+
+
+def test_a_second_solver_is_asked_when_the_first_fails(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Its answer is rechecked like the first one's, and is the same optimum."""
+    data, good = solved()
+    solve = cp.Problem.solve
+
+    def half(self: cp.Problem, solver: str, **options: object) -> object:
+        if solver == cp.CLARABEL:
+            raise cp.SolverError("made to fail")
+        return solve(self, solver=solver, **options)
+
+    monkeypatch.setattr(cp.Problem, "solve", half)
+    outcome = solve_cell(data, grid=(good.decay,))
+    assert (outcome.status, outcome.solver) == ("solved", cp.SCS) and outcome.answer is not None
+    assert outcome.answer.size == pytest.approx(good.size, rel=1e-4)
+
+
+def test_an_answer_that_breaks_an_inequality_is_refused(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Solvers have called an infeasible case optimal; then neither word counts."""
+    data, good = solved()
+    problem = CellProblem(3, 1, 1, 1, 1, (True,))
+    value = cp.Variable.value.fget
+    monkeypatch.setattr("synth.local.cell._SOLVERS", ((cp.CLARABEL, {}),))
+    monkeypatch.setattr(cp.Variable, "value", property(lambda self: 0.5 * value(self)))
+    outcome = problem.solve(data, good.decay)
+    assert outcome.answer is None and outcome.status == "answer refused"
+
+
+@pytest.mark.parametrize("exponents", [(9, -9, 4), (-9, 6, 9), (-6, -9, -9)])
+def test_units_do_not_matter(exponents: tuple[int, int, int]) -> None:
+    """States, the actuator and the offer in units from 1e-9 to 1e9: the same optimum in each."""
+    data, good = solved()
+    x, u, z = (10.0**e for e in exponents)
+    states = x ** np.array([1.0, -1.0, 0.5])
+    changed = replace(
+        data, A=data.A * states[:, None] / states, B=data.B * states[:, None] / u, D=data.D * states[:, None] / z,
+        E=data.E * states[:, None], H=data.H * z / states, intake=data.intake * z, limit=data.limit * u,
+        size=data.size * z,
+    )  # fmt: skip
+    outcome = solve_cell(changed)
+    assert outcome.answer is not None and outcome.status == "solved"
+    assert outcome.answer.size == pytest.approx(good.size, rel=1e-5)
+    assert outcome.answer.K * states / u == pytest.approx(good.K, rel=1e-3)
+    assert outcome.answer.sizes == pytest.approx(good.sizes * z, rel=1e-5)
 
 
 def test_infeasible_promises_have_no_answer() -> None:
     """Neighbours so large that the actuator cannot keep up: every decay rate fails, none is 'solved'."""
     assert best_cell(convoy_data(100.0)) is None
+    assert solve_cell(convoy_data(100.0), grid=(0.3,)).status == "infeasible"
 
 
 def test_monotone_in_the_promised_size() -> None:
