@@ -13,17 +13,22 @@ def apply_literally(operator: GainOperator, s: list[float]) -> list[float]:
     result = []
     for i in range(operator.size):
         links = [k for k in range(len(operator.gain)) if operator.to[k] == i]
+        # Links with equal choice >= 0 are alternatives, every other link is an alternative to nothing.
+        alternatives: dict[tuple[str, int], list[int]] = {}
+        for k in links:
+            name = ("choice", int(operator.choice[k])) if operator.choice[k] >= 0 else ("alone", k)
+            alternatives.setdefault(name, []).append(k)
+        terms = [
+            (int(operator.inlet[group[0]]), max(float(operator.gain[k] * s[operator.source[k]]) for k in group))
+            for group in alternatives.values()
+        ]
         if operator.rows[i] == "sum":
-            result.append(math.fsum(operator.gain[k] * s[operator.source[k]] for k in links))
+            result.append(math.fsum(term for _, term in terms))
         elif operator.rows[i] == "max":
-            result.append(max((float(operator.gain[k] * s[operator.source[k]]) for k in links), default=0.0))
+            result.append(max((term for _, term in terms), default=0.0))
         else:
-            inlets = sorted({int(operator.inlet[k]) for k in links})
-            sums = [
-                math.fsum(operator.gain[k] * s[operator.source[k]] for k in links if operator.inlet[k] == g)
-                for g in inlets
-            ]
-            result.append(math.sqrt(math.fsum(value * value for value in sums)))
+            sums = [math.fsum(term for at, term in terms if at == g) for g in sorted({at for at, _ in terms})]
+            result.append(math.hypot(*sums))
     return result
 
 

@@ -25,16 +25,16 @@ def up(value: Fraction) -> float:
 
 def root_down(value: Fraction) -> float:
     """A double at or below the square root of a non-negative rational, within two roundings of it."""
-    near = _root(value)
+    near = min(_root(value), math.nextafter(math.inf, 0.0))
     while near > 0 and Fraction(near) ** 2 > value:
         near = math.nextafter(near, 0.0)
     return near
 
 
 def root_up(value: Fraction) -> float:
-    """A double at or above the square root of a non-negative rational, within two roundings of it."""
+    """A double at or above the square root of a non-negative rational, within two roundings of it (inf beyond)."""
     near = _root(value)
-    while Fraction(near) ** 2 < value:
+    while math.isfinite(near) and Fraction(near) ** 2 < value:
         near = math.nextafter(near, math.inf)
     return near
 
@@ -46,4 +46,7 @@ def _root(value: Fraction) -> float:
     # Scale by a power of four so that the integer root has 60 bits or more.
     shift = 64 - (value.numerator.bit_length() - value.denominator.bit_length()) // 2
     scaled = value * Fraction(4) ** shift
-    return float(Fraction(math.isqrt(int(scaled))) / Fraction(2) ** shift)
+    try:
+        return float(Fraction(math.isqrt(int(scaled))) / Fraction(2) ** shift)
+    except OverflowError:
+        return math.inf

@@ -152,7 +152,7 @@ class Scaling:
         roles = ["scaled" if self.chosen(link) else "fixed" for link in self.network.links] + ["drift"] * len(drifts)
         entries = []
         position = {id(link): i for i, link in enumerate(links)}
-        for link, row, column, lower, upper in found.entries:
+        for link, row, column, lower, upper, *_ in found.entries:
             i = position[id(link)]
             entries.append(Entry(self.network.links[i] if i < count else link, roles[i], row, column, lower, upper))
         return Folded(float(kappa), True, len(found.outlets), tuple(entries))

@@ -22,6 +22,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from synth.base.errors import InputError
+from synth.gain.sensitivity import LinkNetwork
 from synth.network.model import Network
 
 
@@ -42,15 +43,15 @@ def finite_link_tolerances(peaks: Sequence[ArrayLike], links: Sequence[FiniteLin
     ``peaks[u]`` is the peak gain matrix of unit u, shape (outlets, inlets), entries >= 0. Infinite for a link on no
     closed path. Raises InputError if the network as given already has radius >= 1. Source: theory (15), ours.
     """
-    tables = [np.atleast_2d(np.asarray(p, dtype=float)) for p in peaks]
-    count = len(links)
-    M = np.zeros((count, count))
-    for row, reader in enumerate(links):
-        for column, feeder in enumerate(links):
-            if feeder.to == reader.source:
-                M[row, column] = tables[reader.source][reader.outlet, feeder.inlet] * feeder.strength
-    _refuse_unproven(M)
-    return tuple(_from_return(r) for r in np.diag(_solve(M, np.eye(count))))
+    found = LinkNetwork.of(
+        peaks,
+        [one.source for one in links],
+        [one.outlet for one in links],
+        [one.to for one in links],
+        [one.inlet for one in links],
+        [one.strength for one in links],
+    ).tolerances()
+    return tuple(found.tolist())
 
 
 def pattern_link_tolerances(network: Network, peaks: Mapping[str, ArrayLike]) -> tuple[float, ...]:
@@ -91,10 +92,6 @@ def _refuse_unproven(M: NDArray[np.float64]) -> None:
             "a link tolerance needs a network whose radius is below 1 as it stands; "
             "weaken the links or choose other gains first."
         )
-
-
-def _solve(M: NDArray[np.float64], right: NDArray[np.float64]) -> NDArray[np.float64]:
-    return np.asarray(np.linalg.solve(np.eye(len(M)) - M, right))
 
 
 def _from_return(r: float) -> float:

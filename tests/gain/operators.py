@@ -9,8 +9,11 @@ from synth.gain.operator import ROW_TYPES
 
 
 @st.composite
-def operators(draw, rows=None, size=None, fewest=0):
-    """An operator with up to 6 outlets and 14 links; parallel links, self links, empty rows and shared inlets occur."""
+def operators(draw, rows=None, size=None, fewest=0, alternatives=False):
+    """An operator with up to 6 outlets and 14 links; parallel links, self links, empty rows and shared inlets occur.
+
+    ``alternatives``: choices too, at inlets of their own in half of the cases.
+    """
     n = draw(st.integers(1, 6)) if size is None else size
     links = draw(st.integers(fewest, 14))
     ends = st.lists(st.integers(0, n - 1), min_size=links, max_size=links)
@@ -19,7 +22,14 @@ def operators(draw, rows=None, size=None, fewest=0):
         st.one_of(st.sampled_from(ROW_TYPES), st.lists(st.sampled_from(ROW_TYPES), min_size=n, max_size=n))
     )
     inlet = draw(st.one_of(st.none(), st.lists(st.integers(0, 2), min_size=links, max_size=links)))
-    return GainOperator.from_links(n, draw(ends), draw(ends), gains, kinds, inlet)
+    to, source = draw(ends), draw(ends)
+    choice = None
+    if alternatives:
+        choice = draw(st.one_of(st.none(), st.lists(st.integers(-1, 2), min_size=links, max_size=links)))
+        if choice is not None and inlet is not None:
+            # Alternatives must share an inlet.
+            inlet = [i if c < 0 else 10 + c for i, c in zip(inlet, choice, strict=True)]
+    return GainOperator.from_links(n, to, source, gains, kinds, inlet, choice)
 
 
 def vectors(size):

@@ -21,6 +21,102 @@ def encloses(radius, value, slack=1e-13):
     return radius.reached and radius.lower <= value * (1 + slack) and value * (1 - slack) <= radius.upper
 
 
+def max_plus_value(matrix, shift=0.0):
+    """The eigenvalue of a max-plus matrix (nan: no link) is the logarithm of the radius of max rows with gains e^a."""
+    matrix = np.array(matrix, dtype=float)
+    to, source = np.nonzero(~np.isnan(matrix))
+    op = GainOperator.from_links(len(matrix), to, source, np.exp(matrix[to, source] - shift), "max")
+    return op, op.radius(1e-12)
+
+
+def test_c1_and_c2_max_plus_eigenvalues_and_vectors():
+    """From memory: [[2,5],[3,3]] has eigenvalue 4 and vector (1,0) (Heidergott, Olsder, van der Woude, Max Plus at
+    Work, 2006); [[3,7],[2,4]] has 4.5 and (2.5,0) (Baccelli, Cohen, Olsder, Quadrat 1992)."""
+    for matrix, value, vector in (([[2, 5], [3, 3]], 4, (1, 0)), ([[3, 7], [2, 4]], 4.5, (2.5, 0))):
+        op, radius = max_plus_value(matrix)
+        assert encloses(radius, math.exp(value))
+        # Both entries lie on the loop, so that the vector is unique up to scale.
+        point = np.log(radius.point) + 0.0
+        assert point[0] - point[1] == pytest.approx(vector[0] - vector[1], abs=1e-8)
+        assert radius.bottleneck.loop
+        assert sorted(radius.bottleneck.links) == [1, 2]
+        assert np.log(op(np.exp(np.array(vector, dtype=float)))) == pytest.approx(np.array(vector) + value)
+
+
+def test_c3_five_by_five_examples():
+    """Examples credited to the same book of 2006 (from memory), blank = no link: eigenvalues 17 and 8."""
+    no = math.nan
+    first = [[4, 10, 5, 1, 6], [6, 7, 13, 10, 3], [7, 12, no, no, 16], [6, 10, 8, 5, 4], [11, 9, 18, 8, 2]]
+    second = [[2, no, 8, 2, 9], [6, no, no, 8, 8], [8, no, 6, 1, 5], [0, 2, 5, 3, 10], [7, 4, no, no, 6]]
+    for matrix, value in ((first, 17), (second, 8)):
+        _, radius = max_plus_value(matrix)
+        assert encloses(radius, math.exp(value))
+        entries = np.array(matrix)
+        to, source = np.nonzero(~np.isnan(entries))
+        loop = [float(entries[to[k], source[k]]) for k in radius.bottleneck.links]
+        assert sum(loop) / len(loop) == pytest.approx(value)
+
+
+def test_b8_perron_scaling():
+    """From memory: radius .75668192221 of this matrix of peak gains; scaled by its Perron vector all row sums equal it
+    (Khammash & Pearson, IEEE TAC 36(4), 1991; Dahleh & Diaz-Bobillo, Control of Uncertain Systems, 1995)."""
+    op = operator([[0.2, 0.5, 0], [0.3, 0.1, 0.4], [0.6, 0, 0.2]])
+    radius = op.radius(1e-12)
+    assert radius.lower - 6e-12 <= 0.75668192221 <= radius.upper + 6e-12
+    scaled = op.dense() * radius.point / radius.point[:, None]
+    assert scaled.sum(axis=1) == pytest.approx(np.full(3, 0.75668192221), abs=1e-11)
+
+
+@pytest.mark.parametrize(
+    ("a", "b", "c", "n"), [(0.3, 0.5, 0.2, 7), (0, 2, 0.125, 30), (1, 1e-6, 1e6, 12), (0.4, 1, 1, 1)]
+)
+def test_c8_tridiagonal_toeplitz(a, b, c, n):
+    """Noschese, Pasquini, Reichel, Numer. Linear Algebra Appl. 20, 2013 (seen): a + 2 sqrt(bc) cos(k pi/(n+1)); the
+    largest is the radius."""
+    matrix = a * np.eye(n) + b * np.eye(n, k=-1) + c * np.eye(n, k=1)
+    assert encloses(operator(matrix).radius(1e-10), a + 2 * math.sqrt(b * c) * math.cos(math.pi / (n + 1)), 1e-12)
+
+
+def test_c13_leontief():
+    """From memory: consumption matrix of Lay, Linear Algebra and Its Applications (Leontief): (5 + sqrt 7)/10."""
+    radius = operator([[0.5, 0.4, 0.2], [0.2, 0.3, 0.1], [0.1, 0.1, 0.3]]).radius(1e-12)
+    assert encloses(radius, (5 + math.sqrt(7)) / 10)
+    # Below one: production for every demand.
+    assert radius.upper < 1
+
+
+def test_c15_a_geometric_mean_row_is_not_ours_but_its_radius_is_bracketed():
+    """From memory: f(x) = ((x1+x2)/2, sqrt(x1 x2)) has radius 1, iterates from (1, sqrt 2) tend to 1.1981402347
+    (Lemmens & Nussbaum, Nonlinear Perron-Frobenius Theory, 2012; Gauss's arithmetic-geometric mean). A geometric mean
+    is monotone and homogeneous but not subadditive, so it is no row of the operator. It is the least of its supporting
+    sum rows: sqrt(x1 x2) = min over t of (t x1 + x2/t)/2: each of them has radius >= 1, the one at t = 1 exactly 1."""
+    for t in (0.25, 0.5, 1, 2, 8):
+        radius = operator([[0.5, 0.5], [t / 2, 0.5 / t]]).radius(1e-12)
+        assert radius.upper >= 1
+        assert (radius.lower <= 1) == (t == 1)
+    # The iteration itself, with rows of the operator that support f where it stands: the value of the publication.
+    x = np.array([1.0, math.sqrt(2)])
+    for _ in range(8):
+        t = math.sqrt(x[1] / x[0])
+        x = operator([[0.5, 0.5], [t / 2, 0.5 / t]])(x)
+    assert x == pytest.approx([1.1981402347] * 2, abs=6e-11)
+
+
+def test_d8_m_matrix():
+    """Derived from the equivalences for M-matrices (Berman & Plemmons, Nonnegative Matrices in the Mathematical
+    Sciences, 1979; Araki 1978): W = D (I - M) with positive leading minors 3, 11, 24.5: the radius of M is below 1."""
+    W = np.array([[3, -1, -0.5], [-1, 4, -1], [-0.5, -2, 3]])
+    minors = [np.linalg.det(W[:k, :k]) for k in (1, 2, 3)]
+    assert minors == pytest.approx([3, 11, 24.5])
+    M = np.eye(3) - W / np.diag(W)[:, None]
+    radius = operator(M).radius(1e-12)
+    assert radius.lower - 6e-11 <= 0.5902302109 <= radius.upper + 6e-11
+    # The other way: with the largest off-diagonal entries that break a minor the radius passes one as well.
+    assert operator(M * (1 / radius.upper) * 0.999999).radius().upper < 1
+    broken = np.diag(np.diag(W)) + (W - np.diag(np.diag(W))) * (1.000001 / radius.lower)
+    assert np.linalg.det(broken) < 0
+
+
 MAX_PLUS = np.array([[2.0, 5.0], [3.0, 3.0]])
 
 

@@ -13,6 +13,7 @@ import scipy.special
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.gain import GainOperator, assemble, close_unit, pattern_upper_bound
+from synth.gain.sensitivity import LinkNetwork
 from synth.network.model import Link
 from tests.build import scalar_kind
 
@@ -96,6 +97,42 @@ def test_trap_4_closed_form_of_max_rows_elsewhere():
             break
         s = np.maximum(s, term)
     assert op.upper_bound(s) == pytest.approx(0.758, abs=1e-3)
+
+
+def test_trap_6_a_link_is_not_an_entry():
+    """Unit 0 with peak gains [1 1] (outlet x), unit 1 with [1; 1] (outlets a, b); link 0 -> 1 of .4 feeds a and b,
+    which both come back with .5. That link may be 2.5 times as strong; the formula on one matrix entry says 4."""
+
+    def radius(to_a, to_b):
+        return GainOperator.from_links(3, [1, 2, 0, 0], [0, 0, 1, 2], [to_a, to_b, 0.5, 0.5]).radius(1e-12)
+
+    assert radius(0.4, 0.4).upper < 1
+    # The link carries both entries: at 2.5 times its strength the radius is one, below it is less, above it is more.
+    assert radius(0.4 * 2.5, 0.4 * 2.5).lower == pytest.approx(1, abs=1e-12)
+    assert radius(0.4 * 2.49, 0.4 * 2.49).upper < 1 < radius(0.4 * 2.51, 0.4 * 2.51).lower
+    # The entry alone would stand 4.0, and the link at 4.0 is far beyond the limit.
+    assert radius(0.4 * 4, 0.4).lower == pytest.approx(1, abs=1e-12)
+    assert radius(0.4 * 4, 0.4 * 4).lower > 1.2
+    net = LinkNetwork.of([[[1, 1]], [[1], [1]]], [0, 1, 1], [0, 0, 1], [1, 0, 0], [0, 0, 1], [0.4, 0.5, 0.5])
+    assert net.tolerances()[0] == pytest.approx(2.5)
+
+
+def test_trap_7_sections_are_not_the_half_line():
+    """Forward .9, back .2 on a half line: all sections have 2 sqrt(.18) cos(pi/(n+1)) < .8486, the bulk 1.1."""
+    for size in (2, 10, 200):
+        ends = [*range(1, size), *range(size - 1)], [*range(size - 1), *range(1, size)]
+        section = GainOperator.from_links(size, *ends, [0.9] * (size - 1) + [0.2] * (size - 1)).radius(1e-9)
+        value = 2 * math.sqrt(0.18) * math.cos(math.pi / (size + 1))
+        assert section.lower <= value * (1 + 1e-14)
+        assert value * (1 - 1e-14) <= section.upper < 0.8486
+    # The quotient of the endless pattern on one cell listens to its own kind twice.
+    bulk = GainOperator.from_links(1, [0, 0], [0, 0], [0.9, 0.2]).radius()
+    assert bulk.lower <= 0.9 + 0.2 <= bulk.upper * (1 + 1e-15)
+    # No bounded point of the line comes below it, though the unbounded one of the sections does.
+    for s in ([1.0], [3.0, 1.0, 2.0]):
+        assert pattern_upper_bound([-1, 1], [0.9, 0.2], s, left=1.0, right=1.0) >= 1.1 * (1 - 1e-15)
+    with pytest.raises(InputError, match="unbounded s proves nothing"):
+        pattern_upper_bound([-1, 1], [0.9, 0.2], lambda i: math.sqrt(4.5) ** i)
 
 
 def test_trap_8_an_unbounded_point_proves_nothing():
