@@ -37,7 +37,7 @@ Array = NDArray[np.float64]
 _SAMPLES = 500
 _WEIGHT = 200.0  # of a broken limit, in the unit of the time gap
 _LIGHT = 4.0  # of the same while the search is global
-_MARGINS = (0.0, 0.002, 0.005, 0.01, 0.02, 0.05)
+_MARGINS = (0.003, 0.01, 0.03)
 _WIDEST = 50.0  # bound of a gain the user did not bound
 
 
@@ -235,20 +235,21 @@ def _designed(
     estimate = _Estimate(task, chosen, kind)
     box = task.box(kind)
     # Several short searches, each finished by a simplex, find more than one long one.
-    tries = [_search(estimate, box, seed + 1000 * i) for i in range(3)]
-    point = min(tries, key=estimate)
+    tries = [_search(estimate, box, seed + 1000 * i, _LIGHT if i else _WEIGHT) for i in range(3)]
     best: tuple[list[Fraction], list[str]] | None = None
-    for margin in _MARGINS:
-        estimate.margin = margin
-        point = _polished(estimate, point, task.box(kind))
-        values = [Fraction(f"{value:.6g}") for value in point]
-        trial = {**chosen, kind.name: values}
-        hop = task.loop(trial, kind)
-        why = _unproven(task, hop)
-        if best is None or len(why) < len(best[1]):
-            best = (values, why)
-        if not why:
-            break
+    for point in sorted(tries, key=estimate):
+        for margin in _MARGINS:
+            estimate.margin = margin
+            for weight in (4 * _LIGHT, _WEIGHT):
+                estimate.weight = weight
+                point = _polished(estimate, point, box)
+            values = [Fraction(f"{value:.6g}") for value in point]
+            why = _unproven(task, task.loop({**chosen, kind.name: values}, kind))
+            if best is None or len(why) < len(best[1]):
+                best = (values, why)
+            if not why:
+                return values, why
+        estimate.margin = 0.0
     assert best is not None
     return best
 
@@ -399,11 +400,11 @@ def _signed(point: Array, box: Array) -> Array:
     return np.asarray(point**3 * box)
 
 
-def _search(estimate: _Estimate, box: list[float], seed: int) -> Array:
+def _search(estimate: _Estimate, box: list[float], seed: int, light: float) -> Array:
     """A global search with light penalties, along whose valleys it can move, then simplices with heavier ones."""
-    estimate.weight = _LIGHT
+    estimate.weight = light
     point = _global(estimate, box, seed)
-    for weight in (_LIGHT, 4 * _LIGHT, _WEIGHT):
+    for weight in (light, _WEIGHT):
         estimate.weight = weight
         point = _polished(estimate, point, box)
     return point
