@@ -16,7 +16,7 @@ from synth.base.files import MARK, whole_folder
 from synth.base.provenance import sha256
 from synth.handoff.metadata import csvw, data_package
 from synth.handoff.operating import operating_values
-from synth.handoff.readme import NOT_AS_FLASHED, readme_text
+from synth.handoff.readme import AS_FLASHED, NOT_AS_FLASHED, readme_text
 from synth.handoff.scaling import Facts, exact_peaks, scaling
 from synth.handoff.statement import MANIFEST, PROVENANCE, manifest, provenance
 from synth.handoff.table import SIGN_CONVENTION, GainRow, csv_text, gain_rows
@@ -30,6 +30,10 @@ if TYPE_CHECKING:
     DesignOrGains: TypeAlias = Design | Gains
 
 
+# The first checks proofs about the continuous loop; all of them together those about the code as flashed.
+CHECKERS = ("check.py", "check_flashed.py", "check_sampled.py", "check_firmware.py")
+
+
 class UnprovenTable(SynthError):
     """The certificate does not prove these gains, so no bundle is written (exit code 1)."""
 
@@ -40,10 +44,10 @@ class UnprovenTable(SynthError):
 class Bundle:
     """A hand-off folder as written.
 
-    ``proven`` is about the code as flashed (sampled, rounded) and False in this version, ``reason`` says why;
-    ``proven_continuous`` is the certificate's own claim about the continuous loop. ``scaling`` holds, by
-    ``kind.actuator.signal``, the gain with its units and the guaranteed peaks in them. ``files`` are names inside
-    ``path``, sorted.
+    ``proven`` is about the code as flashed (sampled, rounded): True for a certificate of the firmware route, False for
+    the others, ``reason`` says why; ``proven_continuous`` is a claim about the continuous loop, which those make.
+    ``scaling`` holds, by ``kind.actuator.signal``, the gain with its units and the guaranteed peaks in them. ``files``
+    are names inside ``path``, sorted.
     """
 
     path: Path
@@ -76,7 +80,8 @@ class Bundle:
             f"Proven for the continuous loop: {'yes' if self.proven_continuous else 'no'}. "
             f"Proven as flashed: {'yes' if self.proven else 'no'}.",
             self.reason,
-            "Check on the other side: sha256sum -c SHA256SUMS; python3 check.py certificate.json",
+            "Check on the other side: sha256sum -c SHA256SUMS; python3 "
+            f"{'check_firmware.py' if self.proven else 'check.py'} certificate.json",
         ]
         return "\n".join(lines)
 
@@ -109,19 +114,27 @@ def hand_off(network: Network, design_or_gains: DesignOrGains, certificate: Cert
         facts = scaling(network, rows, exact_peaks(certificate.document))
         files = _contents(network, rows, facts, certificate)
         files["certificate.json"] = certificate_bytes
-        files[PROVENANCE] = _json(provenance(files, network.hash, certificate_sha256, True))
+        as_flashed = _as_flashed(certificate)
+        files[PROVENANCE] = _json(provenance(files, network.hash, certificate_sha256, not as_flashed, as_flashed))
         files[MANIFEST] = manifest(files).encode()
         for name, data in files.items():
             (work / name).write_bytes(data)
         left = {path.name for path in work.iterdir()} - set(files) - {MARK}
         if left:
             raise SynthError(f"saving the certificate left unexpected files in the bundle: {sorted(left)}")
-    return Bundle(Path(out), tuple(sorted(files)), False, True, NOT_AS_FLASHED, facts, rows, certificate_sha256)
+    reason = AS_FLASHED if as_flashed else NOT_AS_FLASHED
+    names = tuple(sorted(files))
+    return Bundle(Path(out), names, as_flashed, not as_flashed, reason, facts, rows, certificate_sha256)
 
 
-def checker_text() -> str:
-    """Source of the stand-alone checker, as it is installed."""
-    return resources.files("synth.proof").joinpath("check.py").read_text(encoding="utf-8")
+def _as_flashed(certificate: Certificate) -> bool:
+    """Whether the certificate is about the sampled and rounded code and not about the continuous loop."""
+    return bool(certificate.document.get("route") == "firmware")
+
+
+def checker_text(name: str = "check.py") -> str:
+    """Source of a file of the stand-alone checker, as it is installed."""
+    return resources.files("synth.proof").joinpath(name).read_text(encoding="utf-8")
 
 
 def _fits(network: Network, gains: Gains) -> None:
@@ -177,20 +190,22 @@ def _contents(
     network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], certificate: Certificate
 ) -> dict[str, bytes]:
     """Every file made here but the certificate, the provenance statement and the manifest."""
-    table = csv_text(rows).encode()
+    table, as_flashed = csv_text(rows).encode(), _as_flashed(certificate)
     return {
         "gains.csv": table,
         "gains.csv-metadata.json": _json(csvw(network.title, rows)),
         "datapackage.json": _json(data_package(network.title, rows, table, sha256(table))),
-        "gains.json": _json(_table_document(network, rows, facts)),
-        "check.py": checker_text().encode(),
+        "gains.json": _json(_table_document(network, rows, facts, as_flashed)),
+        **{name: checker_text(name).encode() for name in (CHECKERS if as_flashed else CHECKERS[:1])},
         "README.txt": readme_text(
-            network, rows, facts, certificate.claim, certificate.covers, certificate.excludes
+            network, rows, facts, certificate.claim, certificate.covers, certificate.excludes, as_flashed
         ).encode(),
     }
 
 
-def _table_document(network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts]) -> dict[str, object]:
+def _table_document(
+    network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], as_flashed: bool
+) -> dict[str, object]:
     """The JSON gain table with what a table alone cannot carry."""
     return {
         "table": "localgain gains",
@@ -208,9 +223,9 @@ def _table_document(network: Network, rows: tuple[GainRow, ...], facts: Mapping[
             for kind, values in operating_values(network).items()
         },
         "scaling": dict(facts),
-        "proven_continuous": True,
-        "proven_as_flashed": False,
-        "reason": NOT_AS_FLASHED,
+        "proven_continuous": not as_flashed,
+        "proven_as_flashed": as_flashed,
+        "reason": AS_FLASHED if as_flashed else NOT_AS_FLASHED,
         "cautions": list(CAUTIONS),
     }
 

@@ -16,7 +16,11 @@ def manifest(files: Mapping[str, bytes]) -> str:
 
 
 def provenance(
-    files: Mapping[str, bytes], network_hash: str, certificate_hash: str, proven_continuous: bool
+    files: Mapping[str, bytes],
+    network_hash: str,
+    certificate_hash: str,
+    proven_continuous: bool,
+    proven_as_flashed: bool = False,
 ) -> dict[str, object]:
     """An in-toto statement (version 1) as plain JSON about every file but itself and the manifest.
 
@@ -31,10 +35,11 @@ def provenance(
             "network_sha256": network_hash,
             "certificate": certificate_hash,
             "proven_continuous": proven_continuous,
-            "proven_as_flashed": False,
+            "proven_as_flashed": proven_as_flashed,
             "versions": dict(sorted(versions().items())),
             "spdx": {
-                name: "SPDX-License-Identifier: " + ("MIT" if name == "check.py" else "NOASSERTION")
+                name: "SPDX-License-Identifier: "
+                + ("MIT" if name.startswith("check") and name.endswith(".py") else "NOASSERTION")
                 for name in sorted(files)
             },
         },

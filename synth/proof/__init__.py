@@ -14,10 +14,19 @@ if TYPE_CHECKING:
     from synth.proof.certificate import Certificate as Certificate
     from synth.proof.certificate import Verification as Verification
     from synth.proof.certificate import verify as verify
+    from synth.proof.firmware import Rounding as Rounding
+    from synth.proof.firmware import prove_firmware as prove_firmware
 
-_HOMES = {"Certificate": "certificate", "Verification": "certificate", "prove": "build", "verify": "certificate"}
+_HOMES = {
+    "Certificate": "certificate",
+    "Rounding": "firmware",
+    "Verification": "certificate",
+    "prove": "build",
+    "prove_firmware": "firmware",
+    "verify": "certificate",
+}
 
-__all__ = ["Certificate", "Verification", "prove", "verify"]
+__all__ = list(_HOMES)
 
 
 def __getattr__(name: str) -> object:

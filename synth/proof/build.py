@@ -25,7 +25,7 @@ from synth.proof import check, peak, storage
 from synth.proof.certificate import Certificate, RadiusClaim, from_document
 from synth.proof.numbers import decimal_down, decimal_up
 
-ROUTES = ("auto", "peak", "storage")
+ROUTES = ("auto", "peak", "storage", "firmware")
 
 
 def prove(
@@ -38,9 +38,10 @@ def prove(
 ) -> Certificate:
     """Prove input-to-state stability with printed constants for any number of units (theory: section 2).
 
-    ``design_or_gains``: a Design or Gains, u = K y in the declared units; ``route``: peak (theory 3a), storage (3b), or
-    auto: peak first, then storage; ``target``: the radius must not exceed it, 0 < target < 1 (default: the network's
-    goal); ``width``: relative width of the ball-arithmetic enclosures the peak gains are compared with.
+    ``design_or_gains``: a Design or Gains, u = K y in the declared units; ``route``: peak (theory 3a), storage (3b),
+    auto: peak first, then storage; or firmware: sampled with the network's period (see prove_firmware); ``target``: the
+    radius must not exceed it, 0 < target < 1 (default: the network's goal); ``width``: relative width of the
+    ball-arithmetic enclosures the peak gains are compared with.
 
     An unstable closed unit, a target out of reach or a broken limit is no error: the result has ``proven`` False and
     says why. Raises InputError for an unknown route, target or gains that do not fit, SolverFailure if the two
@@ -49,6 +50,10 @@ def prove(
     need_fixed_pattern(network, "the proof")
     if route not in ROUTES:
         raise InputError(f"route {route!r} is not known; use one of {', '.join(ROUTES)}.")
+    if route == "firmware":
+        from synth.proof.firmware import prove_firmware  # it builds on this module
+
+        return prove_firmware(network, design_or_gains, target=target, progress=progress)
     goal = Fraction(network.goal.target if target is None else target)
     if not 0 < goal < 1:
         raise InputError(f"the target {float(goal):g} must lie strictly between 0 and 1.")

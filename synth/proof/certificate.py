@@ -6,14 +6,17 @@ The file is one JSON object with exactly these fields (numbers are exact texts, 
     network_hash      SHA-256 of the canonical form of ``model``
     model             Network.model_document(): kinds with A B D E C N H F Fw, limits, bands, declared peaks; links
     gains             per kind {kind, actuators, signals, K}: u = K y
-    route, target     "peak" or "storage"; the radius that must not be exceeded
-    evidence          per kind {kind, P, a, tau, tau_w}: a norm, its decay (1/s), multipliers (storage route only)
+    route, target     "peak", "storage" or "firmware"; the radius that must not be exceeded
+    evidence          per kind {kind, P, a, tau, tau_w}: a norm, its decay (1/s), multipliers (storage route only);
+                      firmware route: {kind, P, gamma}, a norm that the transition over one period contracts
     radius            {lower, upper} of the gain operator
     point             per row {of, s, low}: of is kind.offer or (storage) kind; G s <= upper s, G low >= lower low
     constants         {C, alpha, G, norm}: |x(t)| <= C e^(-alpha t) X0 + G sup|w|
     peaks             per offer, state, actuator {kind, role, signal, value, in, limit}, under the declared disturbances
     validity          {X0, w, factor, meaning}; "inf" where no limit is near
     claim, covers, excludes, cautions    sentences; the first three are made from the numbers by check.sentences
+    firmware          firmware route only: {period, delay, kinds}; per kind {kind, sensors, commands, products, form,
+                      stored}, distances of neighbouring numbers; peaks then have "rounding" and constants have R
     provenance, hash  {network_hash, settings, versions} (recorded, not proven); SHA-256 of everything else
 
 Canonical form: keys sorted, no spaces, UTF-8. check.py derives every number of a claim again from model, gains and
@@ -32,7 +35,7 @@ from typing import Any
 from synth.base.errors import InputError
 from synth.base.files import write_text
 from synth.network.model import Network
-from synth.proof import check
+from synth.proof import check, check_firmware
 
 
 @dataclass(frozen=True)
@@ -119,7 +122,12 @@ class Certificate:
                 "C": _plain(constants.C if constants else None),
                 "alpha": _plain(constants.alpha if constants else None),
                 "G": _plain(constants.G if constants else None),
-                "norm": check.NORM,
+                **(
+                    {"R": _plain(number(self.document["constants"]["R"]))}
+                    if self.route == "firmware" and constants
+                    else {}
+                ),
+                "norm": constants.norm if constants else check.NORM,
             },
             "peaks": self._peaks(),
             "validity": {
@@ -239,7 +247,8 @@ def verify(path: str | Path, network: Network | None = None) -> Verification:
         raise InputError(f"cannot read {path}: {error.strerror or error}; name a certificate file.") from error
     except (ValueError, RecursionError) as error:
         raise InputError(f"{path} is not JSON ({error}); name a file written by `synth prove`.") from error
-    reasons = check.check_text(content)
+    sampled = isinstance(document, dict) and document.get("route") == "firmware"
+    reasons = check_firmware.check_text(content) if sampled else check.check_text(content)
     if network is not None and isinstance(document, dict):
         model = document.get("model")
         if not isinstance(model, dict) or check.canonical(model) != check.canonical(network.model_document()):
