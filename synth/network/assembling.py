@@ -261,10 +261,11 @@ def _report(fault: Fault, rows: Sequence[Row], draft: Draft, model: Model) -> No
             node,
         )
     elif isinstance(fault.error, Located):
-        atom = fault.atom
-        names = (
-            sorted(atom_signals(atom) | atom_parameters(atom)) if atom is not None else sorted(row.formula.parameters)
-        )
+        atom, factor = fault.atom, fault.error.factor
+        if atom is not None:
+            names = sorted(factor.signals | factor.parameters or atom_signals(atom) | atom_parameters(atom))
+        else:
+            names = sorted(factor.parameters or row.formula.parameters)
         sort = "the tolerance of" if atom is None else "the bands of"
         _located(fault.row, rows, draft, model, fault.error, f"everywhere in {sort} {', '.join(names)}")
     else:

@@ -286,7 +286,8 @@ def sector(value: Callable[[Cell, int], Dual], sides: Cell, along: int) -> Inter
     ``value(cell, order)`` gives values, with their slopes in xi (order 1) and second derivatives (2). On a cell X of xi
     both the slopes over all between zero and X (mean value theorem) and, if zero is not in X, the chord
     (value(X) - value(0))/X are bounds; their common part is used. Where the second derivative has one sign, the chord
-    is monotone in xi (its derivative is half a second derivative somewhere between), so the two ends decide.
+    is monotone in xi (its derivative is half a second derivative somewhere between), so the two ends decide; elsewhere
+    the chord at the middle and half the range of second derivatives between zero and X bound it as well.
     """
 
     def at(cell: Cell, xi: Interval) -> Cell:
@@ -303,7 +304,28 @@ def sector(value: Callable[[Cell, int], Dual], sides: Cell, along: int) -> Inter
             if 0 in xi:
                 raise
             return chord(cell)
-        return found if 0 in xi else chord(cell).common(found)
+        if 0 not in xi:
+            found = found.common(chord(cell))
+        try:
+            bend = value(at(cell, xi.hull(ZERO)), 2).bend
+        except Located:
+            return found
+        return found if bend is None else found.common(curved(cell, bend))
+
+    def curved(cell: Cell, bend: Interval) -> Interval:
+        """The chords over a cell from those at its middle or ends: their derivative in xi is half a second derivative
+        between zero and xi."""
+        xi = cell[along]
+        if (bend.low >= 0 or bend.high <= 0) and xi.low < xi.high:
+            return start(cell, xi.low).hull(start(cell, xi.high))
+        half = Interval(bend.low / 2, bend.high / 2)
+        return start(cell, xi.middle) + half * Interval(xi.low - xi.middle, xi.high - xi.middle)
+
+    def start(cell: Cell, xi: Fraction) -> Interval:
+        """The chord to one xi; at zero it is the slope there."""
+        if xi == 0:
+            return value(at(cell, ZERO), 1).slope
+        return chord(at(cell, Interval(xi, xi)))
 
     try:
         bend = value(sides, 2).bend

@@ -67,11 +67,11 @@ def read_cell(node: Node, known: Known, problems: Problems) -> Places:
             )
     kinds = {p: replace(known.kinds[k], name=p, group=k) for p, k in kind_of.items() if k in known.kinds}
     parameters = {p: known.parameters.get(k, {}) for p, k in kind_of.items()}
-    inside = Known(kinds, (*kind_of, *lost), parameters, several, known.used)
+    inside = Known(kinds, (*kind_of, *lost), parameters, several, known.used, known.named)
     others = tuple(k for k in known.declared if k not in kind_of)
     everywhere = Known(
         {**{k: kind for k, kind in known.kinds.items() if k not in kind_of}, **kinds},
-        (*kind_of, *lost, *others), {**known.parameters, **parameters}, used=known.used,
+        (*kind_of, *lost, *others), {**known.parameters, **parameters}, used=known.used, named=known.named,
     )  # fmt: skip
     return Places(kind_of, inside, everywhere)
 
@@ -138,14 +138,14 @@ def _named_groups(node: Table, kinds: tuple[Kind, ...], bases: Mapping[str, str]
     meant |= {kind.name: (kind.name,) for kind in kinds if kind.name not in meant}
     names: dict[str, str] = {}
     for entry in named_entries(node, problems, "{crew: [front, middle], tail: [rear]}"):
-        listed = [text_of(item, problems, "the name of a place or kind") for item in _items(entry, problems)]
         chosen: list[str] = []
-        for name in listed:
+        for item in _items(entry, problems):
+            name = text_of(item, problems, "the name of a place or kind")
             if name is not None and name not in meant:
                 problems.add(
                     f"{entry.value.path}: unknown place or kind {name[:40]!r}{nearest(name, meant)}; accepted are "
                     f"{', '.join(meant)}.",
-                    entry.value,
+                    item,
                 )
             chosen += meant.get(name or "", ())
         for name in chosen:

@@ -26,7 +26,10 @@ def _root(dimension: Dimension | None, value: Fraction) -> tuple[Fraction, Dimen
         raise UnitError("sqrt of a negative number is not real")
     halved = None if dimension is None else tuple(d // 2 for d in dimension)
     if dimension is not None and any(d % 2 for d in dimension):
-        raise UnitError(f"sqrt of the unit {dimension_text(dimension)} is not a whole power")
+        raise UnitError(
+            f"sqrt of the unit {dimension_text(dimension)} is not a whole power; multiply by parameters under "
+            "the root, as in sqrt(2*g*h)"
+        )
     above, below = math.isqrt(value.numerator), math.isqrt(value.denominator)
     if above**2 == value.numerator and below**2 == value.denominator:
         return Fraction(above, below), halved

@@ -71,7 +71,7 @@ def inner_text(kind: Kind) -> list[str]:
     takes, offers = {s.name: s for s in kind.takes}, {s.name: s for s in kind.offers}
     for link in kind.inner:
         offer, take = offers[link.offer], takes[link.take]
-        size = f"at most {said(link.strength)} {take.unit} per {offer.unit}"
+        size = f"at most {said(link.strength)} {'' if take.unit == '1' else f'{take.unit} '}per {offer.unit}"
         if link.sort == "tolerance":
             words = f"a link of the unit to itself, {size}, that may change at any time"
         else:
@@ -104,4 +104,4 @@ def variants_text(network: Network, kind: Kind) -> list[str]:
         found = list(dict.fromkeys(changed[parameter] for changed in values if parameter in changed))
         more = ", ..." if len(found) > MOST_VALUES else ""
         examples.append(f"{parameter}: {', '.join(found[:MOST_VALUES])}{more}")
-    return [f"  {counted(len(values), 'set')} of values ({'; '.join(examples)})"]
+    return [f"  {counted(len(values), 'set')} of values; those beside the kind's own: {'; '.join(examples)}"]

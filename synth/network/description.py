@@ -9,12 +9,14 @@ from fractions import Fraction
 
 from synth.base.caution import CAUTIONS, cautions_text
 from synth.base.provenance import Provenance, canonical
-from synth.network.cuts import least_cells, section_of
-from synth.network.describing import internal, kind_text, mode_text, variants_text
+from synth.network.cuts import adapted, written
+from synth.network.describing import kind_text, mode_text, variants_text
 from synth.network.document import kind_document
+from synth.network.intake import intake_of
+from synth.network.layout import Edge, EdgeUnit
 from synth.network.model import Kind, Link, Network
 from synth.network.obstructions import Obstruction, examine
-from synth.network.words import counted, link_units, link_words, said, strength_unit
+from synth.network.words import counted, link_words, said, strength_unit
 
 MOST_KINDS = 12
 MOST_LINKS = 12
@@ -26,7 +28,8 @@ class Description:
 
     ``modes`` holds, per kind, the eigenvalues of A alone in 1/s, slowest decay first; ``intake`` the bound on what may
     enter each ``kind.take``, in (taken unit)/(offered unit): the sum of |strength| over the links of one unit, the
-    largest unit where they differ, the largest choice where a rule leaves one. ``tested`` says what the search for an
+    largest unit where they differ, the largest choice where a rule leaves one; where offers of different quantities
+    enter a take, its keys are ``kind.take (unit)``, one for each. ``tested`` says what the search for an
     obstruction looked at.
     """
 
@@ -81,8 +84,9 @@ class Description:
             lines += ["", f"... and {len(shown) - MOST_KINDS} more kinds (all of them with --json)."]
         lines += ["", "Links", *_links_text(network), *_edges_text(network)]
         lines += ["", "Intake (sum of absolute strengths that may enter a taken signal of one unit)"]
+        units = intake_of(network).units
         lines += [
-            f"  {name:<24} {said(bound)} {_intake_unit(name, network)}".rstrip()
+            f"  {name.split(' (')[0] if f'({units[name]})' in name else name:<24} {said(bound)} {units[name]}".rstrip()
             for name, bound in list(self.intake.items())[:MOST_KINDS]
         ] or ["  none"]
         if network.notes:
@@ -109,53 +113,9 @@ def describe(network: Network) -> Description:
             sorted((complex(v) for v in values), key=lambda v: (-round(v.real, 9), abs(v.imag), v.imag))
         )
     found = examine(network)
-    return Description(network, modes, _intake(network), found.obstruction, found.tested, Provenance(network.hash))
-
-
-def _intake(network: Network) -> dict[str, Fraction]:
-    """The largest sum of absolute strengths into each taken signal that a user declared."""
-    intake = {
-        f"{kind.name}.{t.name}": Fraction(0) for kind in network.kinds for t in kind.takes if not internal(t.name)
-    }
-    if network.members is not None:
-        return _intake_of_members(network, intake)
-    choices: dict[tuple[str, str], Fraction] = {}
-    for link in network.links:
-        if link.sort != "link":
-            continue
-        name = f"{link.kind}.{link.take}"
-        if link.choice:
-            key = (name, link.choice)
-            more = max(abs(link.strength) - choices.get(key, Fraction(0)), Fraction(0))
-            choices[key] = choices.get(key, Fraction(0)) + more
-            intake[name] += more
-        else:
-            intake[name] += abs(link.strength)
-    for edge in network.edges:
-        near = section_of(network, edge, least_cells(edge))
-        at_edge = _intake_of_members(near, dict.fromkeys(intake, Fraction(0)))
-        intake = {name: max(bound, at_edge[name]) for name, bound in intake.items()}
-    return intake
-
-
-def _intake_of_members(network: Network, intake: dict[str, Fraction]) -> dict[str, Fraction]:
-    """Exact: units with the same sorts of links, as many of each, are looked at once."""
-    members = network.members
-    assert members is not None  # the caller has looked
-    to, _, sort = (array.tolist() for array in members.expanded())
-    wired: dict[int, Counter[int]] = {}
-    for unit, link in zip(to, sort, strict=True):
-        wired.setdefault(unit, Counter())[link] += 1
-    for pattern in {frozenset(counter.items()) for counter in wired.values()}:
-        sums: dict[str, Fraction] = {}
-        for index, count in pattern:
-            link = network.links[index]
-            if link.sort == "link":
-                name = f"{link.kind}.{link.take}"
-                sums[name] = sums.get(name, Fraction(0)) + count * abs(link.strength)
-        for name, total in sums.items():
-            intake[name] = max(intake[name], total)
-    return intake
+    return Description(
+        network, modes, intake_of(network).bounds, found.obstruction, found.tested, Provenance(network.hash)
+    )
 
 
 def _counted_links(network: Network) -> list[tuple[Link, int]]:
@@ -297,6 +257,7 @@ def _edges_text(network: Network) -> list[str]:
         for unit in edge.units:
             what = f"a {unit.kind} at place {unit.at}" if line else f"a {row} of {unit.kind} units, {_deep(unit.at)},"
             lines.append(f"  {unit.name}: {what} instead of the {unit.instead_of}")
+            lines += _pattern_links_text(network, edge, unit)
         for single in edge.links:
             link, where = single.link, f"place {single.to}" if line else f"the units {_deep(single.to)}"
             if link.own_part:
@@ -307,17 +268,35 @@ def _edges_text(network: Network) -> list[str]:
     return lines
 
 
+def _pattern_links_text(network: Network, edge: Edge, unit: EdgeUnit) -> list[str]:
+    """Which links of the pattern an edge unit takes part in, because it has signals of the same names."""
+    standing = {(u.at, u.instead_of): u.kind for u in edge.units}
+    takes: dict[str, None] = {}
+    gives: dict[str, None] = {}
+    for group in written(tuple(link for link in network.links if link.sort == "link")):
+        link = group[0]
+        across = link.at[edge.axis]
+
+        def there(to: int, source: int, group: tuple[Link, ...] = group) -> bool:
+            receiver = standing.get((to, group[0].kind), group[0].kind)
+            sender = standing.get((source, group[0].source_kind), group[0].source_kind)
+            inside = edge.inside(to) and edge.inside(source)
+            return inside and bool(adapted(group, network.kind(receiver), network.kind(sender), network))
+
+        if link.kind == unit.instead_of and there(unit.at, unit.at + across):
+            takes[link.name] = None
+        if link.source_kind == unit.instead_of and there(unit.at - across, unit.at):
+            gives[link.name] = None
+    parts = [f"{words} {', '.join(names)}" for words, names in (("takes from", takes), ("gives to", gives)) if names]
+    if not parts:
+        return ["    it takes part in no link of the pattern"]
+    return [f"    of the pattern's links it {' and '.join(parts)}"]
+
+
 def _deep(place: int) -> str:
     if place == 0:
         return "at the edge itself"
     return f"{abs(place)} {'place' if abs(place) == 1 else 'places'} in from the edge"
-
-
-def _intake_unit(name: str, network: Network) -> str:
-    cuts = [section_of(network, edge, least_cells(edge)) for edge in network.edges]
-    every = [*network.links, *(link for cut in cuts for link in cut.links)]
-    units = {" per ".join(link_units(link, network)) for link in every if f"{link.kind}.{link.take}" == name}
-    return next(iter(units)) if len(units) == 1 else ""
 
 
 def _uniform_text(network: Network) -> list[str]:

@@ -18,6 +18,7 @@ import re
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
+from synth.base.errors import nearest
 from synth.base.units import parse_unit
 from synth.network.layout import Edge, EdgeLink, EdgeUnit
 from synth.network.links import FARTHEST, End, Known, Positions, class_name, end_of, links_of, read_form
@@ -36,7 +37,7 @@ def read_edges(
     """The edges, and the kinds that make up the cell: its ``places``, or the kinds that are not there for an edge."""
     items = items_of(node, problems, f"[{EXAMPLE}]") if isinstance(node, Listing) else (node,)
     parts = [part for item in items if (part := section(item, "edge", problems, EXAMPLE)) is not None]
-    in_links = {name for link in pattern_links for name in (link.kind, link.source_kind)}
+    in_links = {name for link in pattern_links for name in (link.kind, link.source_kind)} | known.named
     named = {text for part in parts for text in _kinds_named(part)}
     cell = places or tuple(name for name in known.declared if name not in named or name in in_links)
     around = _Around(cell, pattern_links, dimension, known)
@@ -66,6 +67,20 @@ class _Around:
     links: tuple[Link, ...]
     dimension: int
     known: Known
+    lost: tuple[str, ...] = ()
+
+
+def _side(part: Section, problems: Problems) -> str | None:
+    node = part.need("side", "side: first")
+    side = text_of(node, problems, "'first' or 'last'")
+    if side is not None and side not in ("first", "last"):
+        problems.add(
+            f"{part.table.path}.side: {side[:40]!r} is not accepted; accepted are 'first' (places 0, 1, 2, ...) and "
+            "'last' (places ..., -1, 0).",
+            node,
+        )
+        return None
+    return side
 
 
 def _kinds_named(part: Section) -> list[str]:
@@ -80,42 +95,58 @@ def _kinds_named(part: Section) -> list[str]:
 def _edge(part: Section, around: _Around, positions: Positions, problems: Problems) -> Edge | None:
     before = problems.count
     known, cell = around.known, around.cell
-    side = text_of(part.need("side", "side: first"), problems, "'first' or 'last'")
-    if side is not None and side not in ("first", "last"):
-        problems.add(
-            f"{part.table.path}.side: {side[:40]!r} is not accepted; accepted are first, last.", part.get("side")
-        )
+    side = _side(part, problems)
     axis = whole(part.get("axis"), problems, 1, around.dimension) or 1
-    bounds = (-FARTHEST, 0) if side == "last" else (0, FARTHEST)
+    bounds = {"first": (0, FARTHEST), "last": (-FARTHEST, 0)}.get(side or "", (-FARTHEST, FARTHEST))
     units: list[EdgeUnit] = []
+    lost: list[str] = []  # units with a problem of their own: a link that names one gets no second complaint
     for entry in named_entries(part.get("units"), problems, "{leader: {at: 0, kind: lead_truck}}"):
         inner = section(entry.value, "edge_unit", problems, "{at: 0, kind: lead_truck}")
         if inner is None:
             continue
         at = whole(inner.need("at", "at: 0"), problems, *bounds)
         kind = _kind_name(inner.need("kind", "kind: lead_truck"), known.declared, problems)
-        instead = _kind_name(inner.get("instead_of"), cell, problems)
-        if instead is None and inner.get("instead_of") is None and len(cell) > 1:
+        instead = _place_name(inner.get("instead_of"), cell, problems)
+        if instead is None and inner.get("instead_of") is None and len(cell) > 1 and kind is not None:
             inner.need("instead_of", f"instead_of: {cell[0]}")
         instead = instead or (cell[0] if len(cell) == 1 else None)
         if entry.key in known.declared and entry.key != kind:
             problems.add(f"{entry.value.path}: {entry.key!r} is the name of another kind; choose another name.", entry)
         if at is None or kind is None or instead is None:
+            lost.append(entry.key)
             continue
         if any((u.at, u.instead_of) == (at, instead) for u in units):
             problems.add(f"{entry.value.path}: another unit stands at this place already; choose another place.", entry)
         unit = EdgeUnit(entry.key, kind, at, instead)
         _fits(unit, inner, around.links, known.kinds, problems)
         units.append(unit)
-    edge = Edge(side or "first", tuple(units), axis=axis - 1)
-    links = _edge_links(part, edge, around, positions, problems)
+    if side is None:
+        return None  # which places there are at this edge is not known
+    edge = Edge(side, tuple(units), axis=axis - 1)
+    links = _edge_links(part, edge, replace(around, lost=tuple(lost)), positions, problems)
     return None if problems.count > before else replace(edge, links=links)
 
 
 def _kind_name(node: Node | None, declared: tuple[str, ...], problems: Problems) -> str | None:
     name = text_of(node, problems, "the name of a kind")
     if name is not None and node is not None and name not in declared:
-        problems.add(f"{node.path}: unknown kind {name[:40]!r}; accepted are {', '.join(declared) or 'none'}.", node)
+        problems.add(
+            f"{node.path}: unknown kind {name[:40]!r}{nearest(name, declared)}; accepted are "
+            f"{', '.join(declared) or 'none'}.",
+            node,
+        )
+        return None
+    return name
+
+
+def _place_name(node: Node | None, cell: tuple[str, ...], problems: Problems) -> str | None:
+    name = text_of(node, problems, "the name of a place of the cell")
+    if name is not None and node is not None and name not in cell:
+        problems.add(
+            f"{node.path}: {name[:40]!r} is no place of the cell{nearest(name, cell)}; say whose place the unit takes: "
+            f"{' or '.join(cell) or 'none'}.",
+            node,
+        )
         return None
     return name
 
@@ -147,18 +178,17 @@ def _edge_links(
     part: Section, edge: Edge, around: _Around, positions: Positions, problems: Problems
 ) -> tuple[EdgeLink, ...]:
     found: list[EdgeLink] = []
-    cell, known = around.cell, around.known
     for item in items_of(part.get("links"), problems, f"[{LINK_EXAMPLE}]"):
         inner = section(item, "edge_link", problems, LINK_EXAMPLE)
         if inner is None:
             continue
         name = class_name(inner, item, positions, problems)
-        source = _edge_end(inner.need("from", "from: leader.place"), "offers", edge, cell, known, problems)
-        target = _edge_end(inner.need("to", "to: hauler@2.ahead"), "takes", edge, cell, known, problems)
+        source = _edge_end(inner.need("from", "from: leader.place"), "offers", edge, around, problems)
+        target = _edge_end(inner.need("to", "to: hauler@2.ahead"), "takes", edge, around, problems)
         source_end, target_end = (source[0] if source else None), (target[0] if target else None)
         along = _along(inner, around.dimension - 1, problems)
         itself = bool(source and target and source[1] == target[1] and source[2] == target[2] and not any(along or ()))
-        form = read_form(inner, source_end, target_end, known, problems, itself)
+        form = read_form(inner, source_end, target_end, around.known, problems, itself)
         if form is None or source is None or target is None or along is None:
             continue
         positions.strengths.append((name, form, inner.get("strength") or item))
@@ -187,9 +217,10 @@ def _along(part: Section, numbers: int, problems: Problems) -> tuple[int, ...] |
 
 
 def _edge_end(
-    node: Node | None, side: str, edge: Edge, cell: tuple[str, ...], known: Known, problems: Problems
+    node: Node | None, side: str, edge: Edge, around: _Around, problems: Problems
 ) -> tuple[End, int, str] | None:
     """The end named ``unit.signal`` or ``kind@place.signal``, with its place and the slot of the cell."""
+    cell, known = around.cell, around.known
     text = text_of(node, problems, "a signal written unit.signal or kind@place.signal")
     if text is None or node is None:
         return None
@@ -197,9 +228,11 @@ def _edge_end(
     found = re.fullmatch(r"(\w+)@([-+]?\d{1,4})", unit_text, re.ASCII)
     units = {unit.name: unit for unit in edge.units}
     if found is None:
+        if unit_text in around.lost:
+            return None
         if unit_text not in units or not signal:
             problems.add(
-                f"{node.path}: {text[:40]!r} names no unit of this edge; accepted are "
+                f"{node.path}: {text[:40]!r} names no unit of this edge{nearest(unit_text, units)}; accepted are "
                 f"{', '.join(f'{n}.signal' for n in units) or 'no names'} and kind@place.signal, such as "
                 f"{cell[0] if cell else 'hauler'}@{2 if edge.side == 'first' else -2}.ahead.",
                 node,

@@ -11,6 +11,8 @@ Law: the dimension of every term of a sum is the same, and equals the one asked 
 from __future__ import annotations
 
 import ast
+import keyword
+import re
 import warnings
 from collections.abc import Mapping
 from dataclasses import dataclass, field
@@ -74,10 +76,24 @@ def parse_expression(text: str, scope: Scope) -> ast.expr:
             warnings.simplefilter("ignore")
             return ast.parse(stripped[lead:], mode="eval").body
     except SyntaxError as error:
+        if gap := _gap(stripped):
+            raise gap from None
         offset = min(max((error.offset or 1) - 1 + lead, 0), max(len(text) - 1, 0))
         raise Refused(f"this is not an expression{_hint(text, scope)}; {_ACCEPTED}", offset) from None
     except (ValueError, RecursionError, MemoryError):
         raise Refused(f"this expression cannot be read; {_ACCEPTED}", 0) from None
+
+
+def _gap(text: str) -> Refused | None:
+    """Two names side by side: a product without its *, or a function without its parentheses."""
+    found = re.search(r"(?<![\w.])(?P<left>[A-Za-z_]\w*)\s+(?P<right>[A-Za-z_]\w*)", text, re.ASCII)
+    if found is None or keyword.iskeyword(found["left"]) or keyword.iskeyword(found["right"]):
+        return None
+    left, right = found["left"], found["right"]
+    advice = f"write {left}({right})" if left in FUNCTIONS else f"write {left}*{right} for the product"
+    return Refused(
+        f"nothing stands between {left!r} and {right!r}; {advice}", found.start(), found.end() - found.start()
+    )
 
 
 def _hint(text: str, scope: Scope) -> str:

@@ -65,6 +65,7 @@ class Known:
     parameters: Mapping[str, Parameters]
     places: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
     used: set[tuple[str, str]] = field(default_factory=set)  # (kind, parameter) that the strength of a link names
+    named: set[str] = field(default_factory=set)  # what the ends of links name, also where a link cannot be read
 
     def of(self, kind: Kind) -> Parameters:
         """The parameters of a kind, none where matrices give it."""
@@ -134,6 +135,8 @@ def read_end(node: Node | None, side: str, known: Known, problems: Problems) -> 
             node,
         )
         return None
+    if not known.declared and problems.found:
+        return None  # that no kind could be read has a sentence of its own
     if kind_name not in known.declared:
         problems.add(
             f"{node.path}: unknown {'place' if known.places else 'kind'} {kind_name!r}"
@@ -141,6 +144,7 @@ def read_end(node: Node | None, side: str, known: Known, problems: Problems) -> 
             node,
         )
         return None
+    known.named.add(kind_name)
     return end_of(known.kinds.get(kind_name), side, signal, node, problems)
 
 
@@ -314,9 +318,12 @@ def _own_ratio(part: Section, source: End, target: End, itself: bool, problems: 
         )
         return None
     if itself:
+        if "at" in part.known:
+            key, advice = "at", "name a neighbour, such as at: -1"
+        else:
+            key, advice = "from", "name another unit, or in a field one farther along the edge, such as along: -1"
         problems.add(
-            f"{path}.at: a relative link of a unit to itself is always zero; name a neighbour, such as at: -1.",
-            part.get("at") or where,
+            f"{path}.{key}: a relative link of a unit to itself is always zero; {advice}.", part.get(key) or where
         )
         return None
     return unit.factor / source.declared.unit.factor

@@ -19,12 +19,14 @@ from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.base.provenance import canonical, sha256
 from synth.network.layout import Edge, Members, Rule
+from synth.network.rounding import Rounding
 
 if TYPE_CHECKING:
     import networkx as nx
 
     from synth.network.controller import Controller
     from synth.network.dynamics import Dynamics
+    from synth.network.hop_wish import HopWish
 
 _DESCRIPTIONS = {
     "pattern": ("a pattern", "patterns"),
@@ -172,10 +174,13 @@ class Goal:
     """What the design must reach; rates in 1/s, gain bounds in (actuator unit)/(sensor unit).
 
     ``gain_bounds[kind][actuator][sensor]`` bounds one entry's absolute value; ``uses[kind][actuator]`` lists the
-    sensors an actuator may use (absent: all). ``period`` is the controller's sample period in seconds, printed in the
-    gain table; the proofs of this version are about the continuous loop. ``aim`` is what the design makes small:
+    sensors an actuator may use (absent: all). ``period`` is the controller's sample period and
+    ``computation_delay`` the time from a sample to its command in force, in seconds, 0 <= delay <= period; ``rounding``
+    is what the code rounds: the firmware route proves the loop with them, the other routes and all margins are about
+    the continuous loop. ``aim`` is what the design makes small:
     'radius', or, with the radius no larger than the target, 'effort' (the guaranteed peak of the actuators) or 'peak'
-    (the guaranteed peak of the signals ``aim_of``, pairs of kind and signal).
+    (the guaranteed peak of the signals ``aim_of``, pairs of kind and signal). ``hop``: what is asked for instead of a
+    proof of calm, for strings that see only gaps.
     """
 
     target: Fraction = Fraction(9, 10)
@@ -186,6 +191,9 @@ class Goal:
     uses: Mapping[str, Mapping[str, tuple[str, ...]]] = field(default_factory=dict)
     aim: str = "radius"
     aim_of: tuple[tuple[str, str], ...] = ()
+    hop: HopWish | None = None
+    computation_delay: Fraction = Fraction(0)
+    rounding: Rounding = field(default_factory=Rounding)
 
 
 @dataclass(frozen=True)

@@ -126,7 +126,20 @@ def _announced(network: Network, symbol: Symbol, finding: Finding) -> Obstructio
     leaders = tuple(unit.name for edge in network.edges for unit in edge.units)
     helpful = _helpful(symbol, finding, weights)
     advice = advise(finding.theta, finding.s, weights, finding.cause, helpful, symbol.sensors, leaders)
-    return Obstruction(finding.theta, finding.s, weights, finding.cause, advice + split_advice(symbol, finding))
+    advice += split_advice(symbol, finding) + _weaker(network, finding)
+    return Obstruction(finding.theta, finding.s, weights, finding.cause, advice)
+
+
+def _weaker(network: Network, finding: Finding) -> str:
+    """Where a one-way line drifts as a whole: the claim that could be asked for instead."""
+    steps = {link.at[0] for link in network.links if link.sort == "link" and not link.own_part}
+    one_way = network.dimension == 1 and not network.edges and (steps <= {0, -1} or steps <= {0, 1})
+    if any(finding.theta) or abs(finding.s) > 1e-9 or not one_way:
+        return ""
+    return (
+        " What can still be shown is weaker, that what a leader does is not amplified from unit to unit; it must be "
+        "asked for, with 'claim: hop' in the section design."
+    )
 
 
 def split_advice(symbol: Symbol, finding: Finding) -> str:

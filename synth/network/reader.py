@@ -16,12 +16,14 @@ from synth.base.errors import InputError, Place, Problem
 from synth.network.aim_reading import with_aim
 from synth.network.cell import grouped
 from synth.network.controller_reading import with_structure
+from synth.network.hop_reading import with_hop
 from synth.network.inner import with_self_links
 from synth.network.kinds import read_kind
 from synth.network.links import table_names
 from synth.network.members import spread_goal
 from synth.network.model import Kind, Network
 from synth.network.notes import unused_parameters
+from synth.network.rounding_reading import with_code
 from synth.network.sections import named_entries, section, text_of
 from synth.network.settings import Nameable, read_goal, read_simulation
 from synth.network.wiring import Surroundings, Wired, read_wiring
@@ -48,7 +50,7 @@ def read(source: str | os.PathLike[str] | Mapping[str, object]) -> Network:
     else:
         file = os.fspath(source)
         root = parse(load_text(file, "problem file", "a YAML problem file"), file, problems)
-    network = None if root is None else _network(root, file, graph, problems)
+    network = None if root is None else network_from(root, file, graph, problems)
     if problems.found or network is None:
         raise InputError(problems.in_order())
     return network
@@ -109,7 +111,8 @@ def _not_utf8(file: str, data: bytes, at: int, what: str) -> Problem:
     )
 
 
-def _network(root: Node, file: str | None, graph: object | None, problems: Problems) -> Network | None:
+def network_from(root: Node, file: str | None, graph: object | None, problems: Problems) -> Network | None:
+    """The network that a parsed file describes; None, or a network not to be used, where there are problems."""
     part = section(root, "problem", problems, "synth: 1")
     if part is None:
         return None
@@ -136,6 +139,7 @@ def _network(root: Node, file: str | None, graph: object | None, problems: Probl
     design = part.get("design")
     nameable = _nameable(wired, kinds, declared)
     goal = with_aim(read_goal(design, nameable, problems), design, nameable, problems)
+    goal = with_code(goal, design, nameable, problems)
     simulation = read_simulation(part.get("simulation"), problems)
     if wired.members is not None and wired.kinds is not None:
         goal = spread_goal(goal, wired.kinds, wired.members.origins)
@@ -143,6 +147,7 @@ def _network(root: Node, file: str | None, graph: object | None, problems: Probl
     asked = design.entries["gains"].value if isinstance(design, Table) and "gains" in design.entries else None
     standing = grouped(asked, standing, wired.bases, goal, design, Problems() if problems.found else problems)
     goal = with_structure(goal, standing, design, problems)
+    goal = with_hop(goal, design, standing, wired.links, root, problems)
     network = Network(
         title, standing, wired.links, goal, simulation,
         wired.dimension, wired.description, file, wired.edges, wired.cell, wired.rules, wired.members,

@@ -39,7 +39,15 @@ KEYS: dict[str, tuple[str, ...]] = {
     "rule": ("to", "from", "most", "strength", "relative", "late", "delay", "weakens"),
     "members": ("units", "links", "graph"),
     "class": ("sign",),
-    "design": ("target", "slowest", "fastest", "period", "gain_bounds", "uses", "gains", "aim"),
+    "design": ("target", "slowest", "fastest", "period", "gain_bounds", "uses", "gains", "aim", "claim", "hop",
+               "computation_delay", "rounding"),
+    "rounding": ("sensors", "commands", "products", "stored", "form", "gains"),
+    "gain_words": ("word", "fraction"),
+    "hop": (
+        "notion", "signal", "gap_error", "any_order", "dead_time", "sensing", "jerk", "time_gap", "standstill",
+        "gap_parameter", "radio", "least", "leader",
+    ),
+    "leader": ("acceleration", "speed", "recorded"),
     "aim": ("least", "of"),
     "simulation": ("units", "seconds"),
 }  # fmt: skip
@@ -65,10 +73,13 @@ LATER: dict[str, tuple[str, ...]] = {
     "members": (),
     "class": ("tolerance", "cause", "strength", "most"),
     "design": (
-        "rounding", "operating_points", "tables", "messages", "feed_through", "noise", "jitter",
-        "computation_delay", "window", "route",
+        "operating_points", "tables", "messages", "feed_through", "noise", "jitter", "window", "route",
     ),
+    "rounding": (),
+    "gain_words": (),
     "aim": (),
+    "hop": ("loss", "jitter", "period"),
+    "leader": (),
     "simulation": ("losses", "silence", "leader", "step", "effects"),
 }  # fmt: skip
 
@@ -146,7 +157,8 @@ def named_entries(node: Node | None, problems: Problems, example: str) -> Iterat
     if node is None:
         return
     if not isinstance(node, Table):
-        problems.add(f"{_named(node)}: a mapping of names is expected here, such as '{example}'.", node)
+        form = "list or mapping" if example.startswith("[") else "mapping"
+        problems.add(f"{_named(node)}: a {form} of names is expected here, such as '{example}'.", node)
         return
     for entry in node.entries.values():
         if name_is_good(entry.key, problems, entry, node.path):
@@ -156,8 +168,9 @@ def named_entries(node: Node | None, problems: Problems, example: str) -> Iterat
 def name_is_good(name: str, problems: Problems, where: Node | Entry, path: str) -> bool:
     """Whether ``name`` can stand for a signal, a kind or a class; if not, say why."""
     if not re.fullmatch(r"[A-Za-z_][A-Za-z0-9_]{0,62}", name, re.ASCII):
+        comma = "; a number has a decimal point and no comma" if re.match(r"\d+(\s|$)", name) else ""
         problems.add(
-            f"{path}: {name[:70]!r} cannot be a name; accepted are up to 63 letters, digits and underscores, "
+            f"{path}: {name[:70]!r} cannot be a name{comma}; accepted are up to 63 letters, digits and underscores, "
             "not starting with a digit.",
             where,
         )
@@ -254,7 +267,7 @@ def truth(node: Node | None, problems: Problems) -> bool:
         return False
     if isinstance(node, Scalar) and isinstance(node.value, bool):
         return node.value
-    problems.add(f"{_named(node)}: true or false is expected here (YAML 1.2: yes and no are text).", node)
+    problems.add(f"{_named(node)}: true or false is expected here (yes and no are text).", node)
     return False
 
 

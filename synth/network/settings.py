@@ -77,7 +77,7 @@ def _said(value: Fraction) -> str:
     return f"{float(value):g}"
 
 
-def _kinds(
+def kinds_named(
     node: Node | None, known: Nameable, problems: Problems, example: str
 ) -> Iterator[tuple[Kind, Entry, tuple[str, ...]]]:
     """The kinds that a table names, each with its entry and the names of the kinds that the entry is about."""
@@ -98,9 +98,10 @@ def _kinds(
             )
 
 
-def _known(
+def is_known(
     entry: Entry, name: str, names: Mapping[str, str], what: str, problems: Problems, where: Node | Entry
 ) -> bool:
+    """Whether ``name`` is one of ``names``; if not, say so with the nearest of them."""
     if name in names:
         return True
     problems.add(
@@ -115,13 +116,13 @@ def _gain_bounds(node: Node | None, known: Nameable, problems: Problems) -> dict
     """Bounds on the absolute value of gains, ``kind: {actuator: {sensor: bound}}``."""
     result: dict[str, dict[str, dict[str, Fraction]]] = {}
     example = "{hauler: {demand: {speed: 6 1/s}}}"
-    for kind, entry, about in _kinds(node, known, problems, example):
+    for kind, entry, about in kinds_named(node, known, problems, example):
         inputs, sensors = {a.name: a.unit for a in kind.inputs}, {s.name: s.unit for s in kind.sensors}
         for actuator in named_entries(entry.value, problems, "{demand: {speed: 6 1/s}}"):
-            if not _known(entry, actuator.key, inputs, f"input of {kind.name}", problems, actuator):
+            if not is_known(entry, actuator.key, inputs, f"input of {kind.name}", problems, actuator):
                 continue
             for sensor in named_entries(actuator.value, problems, "{speed: 6 1/s}"):
-                if not _known(actuator, sensor.key, sensors, f"sensor of {kind.name}", problems, sensor):
+                if not is_known(actuator, sensor.key, sensors, f"sensor of {kind.name}", problems, sensor):
                     continue
                 unit = parse_unit(inputs[actuator.key]) / parse_unit(sensors[sensor.key])
                 text = unit.text if unit.factor == 1 else f"({inputs[actuator.key]})/({sensors[sensor.key]})"
@@ -139,15 +140,15 @@ def _gain_bounds(node: Node | None, known: Nameable, problems: Problems) -> dict
 def _uses(node: Node | None, known: Nameable, problems: Problems) -> dict[str, dict[str, tuple[str, ...]]]:
     """Which sensors an actuator may use, ``kind: {actuator: [sensors]}``."""
     result: dict[str, dict[str, tuple[str, ...]]] = {}
-    for kind, entry, about in _kinds(node, known, problems, "{hauler: {demand: [slot, speed]}}"):
+    for kind, entry, about in kinds_named(node, known, problems, "{hauler: {demand: [slot, speed]}}"):
         inputs, sensors = {a.name: a.unit for a in kind.inputs}, {s.name: s.unit for s in kind.sensors}
         for actuator in named_entries(entry.value, problems, "{demand: [slot, speed]}"):
-            if not _known(entry, actuator.key, inputs, f"input of {kind.name}", problems, actuator):
+            if not is_known(entry, actuator.key, inputs, f"input of {kind.name}", problems, actuator):
                 continue
             names = []
             for item in items_of(actuator.value, problems, "[slot, speed]"):
                 name = text_of(item, problems, "the name of a sensor")
-                if name is not None and _known(actuator, name, sensors, f"sensor of {kind.name}", problems, item):
+                if name is not None and is_known(actuator, name, sensors, f"sensor of {kind.name}", problems, item):
                     names.append(name)
             for place in about:
                 result.setdefault(place, {})[actuator.key] = tuple(dict.fromkeys(names))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import shlex
 from importlib import resources
 from pathlib import Path
 
@@ -45,6 +46,6 @@ def write_starter(name: str | os.PathLike[str]) -> str:
         f"{file} is a problem to start from; change it to describe your units and links.\n"
         f"{schema} lets editors complete and check it.\n"
         "Next:\n"
-        f"  synth check {file}\n"
-        f"  synth run {file} --out out/{file.stem}\n"
+        f"  synth check {shlex.quote(str(file))}\n"
+        f"  synth run {shlex.quote(str(file))} --out {shlex.quote(f'out/{file.stem}')}\n"
     )

@@ -21,6 +21,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from fractions import Fraction
 
+from synth.base.errors import nearest
 from synth.base.units import NONE, Dimension, UnitError, dimension_text, parse_quantity
 from synth.network.bounds import Located, least_and_most
 from synth.network.curves import short
@@ -90,6 +91,8 @@ def read_strength(
                 span = _expression(text, ends, wanted)
             elif has_tolerance(text):
                 span = _range(text, wanted)
+            else:
+                _refuse_bare(text, ends)
         except StrengthRefused as error:
             problems.add(f"{node.path}: {error.sentence}.", node.place_at(error.offset) or node)
             return None
@@ -112,6 +115,18 @@ def read_strength(
         return None
     value = quantity(node, wanted, problems, bare=False)
     return None if value is None else Span(value, value)
+
+
+def _refuse_bare(text: str, ends: Mapping[str, Parameters]) -> None:
+    """Say how a parameter is named, where a text that is no quantity names one without its end."""
+    try:
+        parse_quantity(text)
+    except UnitError:
+        for found in re.finditer(r"(?<![\w.])[A-Za-z_]\w*", text, re.ASCII):
+            if owners := [f"{end}.{found[0]}" for end, parameters in ends.items() if found[0] in parameters]:
+                raise StrengthRefused(
+                    f"{found[0]!r} is a parameter, and a link has two ends; write {' or '.join(owners)}", found.start()
+                ) from None
 
 
 def _range(text: str, wanted: Declared) -> Span:
@@ -171,8 +186,9 @@ def _expression(text: str, ends: Mapping[str, Parameters], wanted: Declared) -> 
                 )
     for found in _NAMED.finditer(plain):
         if found[0] not in known:
+            accepted = ", ".join(known) or "none (matrices carry numbers)"
             raise StrengthRefused(
-                f"unknown parameter {found[0]!r}; known here are {', '.join(known) or 'none (matrices carry numbers)'}",
+                f"unknown parameter {found[0]!r}{nearest(found[0], known)}; known here are {accepted}",
                 found.start(),
             )
     if clash := re.search(r"(?<![\w.])(?:from|to)_\w+", plain):

@@ -52,7 +52,9 @@ def _own_part(link: Link, network: Network) -> Link | None:
     ends = (link.name, link.kind, link.take, link.offer)
     beside = next((edge for edge in network.edges if any(single.link is link for single in edge.links)), None)
     links = network.links if beside is None else tuple(single.link for single in beside.links)
-    return next((p for p in links if p.own_part and (p.name, p.kind, p.take, p.offer) == ends), None)
+    found = [k for k, p in enumerate(links) if p.own_part and (p.name, p.kind, p.take, p.offer) == ends]
+    # An own part stands behind the neighbour's part it belongs to; several links into one taken signal have their own.
+    return next((links[k] for k in found if k and links[k - 1] is link), links[found[0]] if found else None)
 
 
 def link_nature(link: Link, network: Network) -> str:

@@ -54,7 +54,11 @@ def test_every_description_of_a_network_is_explained() -> None:
             "into place 2, relief",
         ),
         "rules": ("wired in any way that obeys the rules", "at most 3 such into one unit", "strength 0.02 "),
-        "members": ("5 units (5 basin) and 4 links", "3 sets of values (area: ", "2 x basin"),
+        "members": (
+            "5 units (5 basin) and 4 links",
+            "3 sets of values; those beside the kind's own: area: ",
+            "2 x basin",
+        ),
         "curved": ("tolerance of lag: a link of the unit to itself, at most 0.20202 m/s^3 per m/s^2", "curve of speed"),
     }
     for name, parts in wanted.items():

@@ -159,7 +159,7 @@ def test_units_are_converted_at_an_edge() -> None:
 @pytest.mark.parametrize(
     ("edge", "sentence"),
     [
-        ({"side": "left"}, "accepted are first, last"),
+        ({"side": "left"}, "accepted are 'first' (places 0, 1, 2, ...) and 'last'"),
         ({}, "the key 'side' is missing"),
         ({**LED, "units": {"leader": {"at": -1, "kind": "truck"}}}, "from 0 to 1000"),
         ({**LED, "units": {"leader": {"at": 0, "kind": "trck"}}}, "unknown kind 'trck'"),

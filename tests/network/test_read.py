@@ -195,7 +195,14 @@ def test_own_strength_follows_the_unit_of_the_own_signal(tmp_path: Path) -> None
         ("slowest: 0.4", "slowest: -1", "zero or more"),
         ("fastest: 1.3", "fastest: 0.4", "no mode fits"),
         ("period: 0.02 s", "period: 0 s", "above zero"),
-        ("period: 0.02 s", "rounding: {}", "not honoured by this version"),
+        ("period: 0.02 s", "jitter: 1 ms", "not honoured by this version"),
+        ("period: 0.02 s", "rounding: {}", "no sample period is declared"),
+        ("period: 0.02 s", "computation_delay: 1 ms", "no sample period is declared"),
+        ("period: 0.02 s", "period: 0.02 s, computation_delay: 30 ms", "zero to one period (0.02 s)"),
+        ("period: 0.02 s", "period: 0.02 s, rounding: {gains: {word: 16}}", "the key 'fraction' is missing"),
+        ("period: 0.02 s", "period: 0.02 s, rounding: {sensors: {hauler: {slot: 1 s}}}", "has the unit s, but m"),
+        ("period: 0.02 s", "period: 0.02 s, rounding: {sensors: {hauler: {slot: -1 mm}}}", "zero or more"),
+        ("period: 0.02 s", "period: 0.02 s, rounding: {form: double, stored: {hauler: {slot: 0}}}", "in fixed point"),
         ("target: 0.6", "target: 1", "above 0 and below 1"),
         ("units: 50", "units: 1", "from 2 to 100000"),
         ("seconds: 60 s", "seconds: 0 s", "above zero"),
@@ -230,6 +237,19 @@ def test_what_the_goal_may_say(tmp_path: Path) -> None:
     assert goal.gain_bounds == {"hauler": {"demand": {"speed": 6, "slot": 5}}}
     assert goal.uses == {"hauler": {"demand": ("slot", "speed")}}
     assert goal.period is None
+
+
+def test_how_the_code_is_timed_and_what_it_rounds(tmp_path: Path) -> None:
+    rounding = (
+        "rounding: {sensors: {hauler: {slot: 1 mm, speed: 0.01}}, commands: {hauler: {demand: 5 mm/s^2}}, "
+        "gains: {word: 16, fraction: 12}}"
+    )
+    text = convoy_text(("period: 0.02 s", f"period: 20 ms, computation_delay: 5 ms, {rounding}"))
+    goal = read_text(text, tmp_path).goal
+    assert (goal.period, goal.computation_delay) == (Fraction(1, 50), Fraction(1, 200))
+    assert goal.rounding.sensors == {"hauler.slot": Fraction(1, 1000), "hauler.speed": Fraction(1, 100)}
+    assert goal.rounding.commands == {"hauler.demand": Fraction(1, 200)}
+    assert (goal.rounding.form, goal.rounding.word, goal.rounding.fraction) == ("exact", 16, 12)
 
 
 def test_signs_of_classes(tmp_path: Path) -> None:
