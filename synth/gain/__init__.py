@@ -43,8 +43,14 @@ if TYPE_CHECKING:
     from synth.gain.sampled_numbers import gains_as_flashed as gains_as_flashed
     from synth.gain.sampled_period import cycle_radius as cycle_radius
     from synth.gain.sampled_period import longest_period as longest_period
+    from synth.gain.sensitivity import LinkNetwork as LinkNetwork
+    from synth.gain.sensitivity import slopes as slopes
     from synth.gain.unit import UnitPeaks as UnitPeaks
     from synth.gain.unit import state_peaks as state_peaks
+    from synth.gain.window.factor import WindowFactor as WindowFactor
+    from synth.gain.window.factor import window_factor as window_factor
+    from synth.gain.window.route import WindowRadius as WindowRadius
+    from synth.gain.window.route import window_radius as window_radius
 
 _HOMES = {
     "Assembly": "assembly",
@@ -55,6 +61,7 @@ _HOMES = {
     "GainOperator": "operator",
     "HopGains": "hop",
     "HopGrowth": "hop_length",
+    "LinkNetwork": "sensitivity",
     "MeanSquareGain": "mean_square",
     "NetworkRadius": "enclosure",
     "PeakGain": "peak",
@@ -62,6 +69,8 @@ _HOMES = {
     "QuasiPolynomial": "dead_time",
     "Radius": "radius",
     "UnitPeaks": "unit",
+    "WindowFactor": "window.factor",
+    "WindowRadius": "window.route",
     "assemble": "assembly",
     "close_network": "closed",
     "close_plan": "closed",
@@ -80,7 +89,10 @@ _HOMES = {
     "peak_to_peak_gain": "peak",
     "plan_of": "descriptions",
     "sampled_peak_gain": "sampled",
+    "slopes": "sensitivity",
     "state_peaks": "unit",
+    "window_factor": "window.factor",
+    "window_radius": "window.route",
 }
 
 __all__ = list(_HOMES)

@@ -73,18 +73,23 @@ class NetworkRadius:
 
 
 def network_radius(
-    network: Network, gains: Gains, alpha: Rate = Fraction(0), width: float = 1e-9, peak_width: float = 1e-6
+    network: Network,
+    gains: Gains,
+    alpha: Rate = Fraction(0),
+    width: float = 1e-9,
+    peak_width: float = 1e-6,
+    table: PeakTable | None = None,
 ) -> NetworkRadius:
     """Enclose the radius of the gain operator of a network with the given gains, for everything it describes.
 
     ``alpha`` rate in 1/s, >= 0; ``width`` relative width of the radius for given peak gains, ``peak_width`` that of the
-    peak gains. Raises UnstableLoop if a closed unit (shifted by alpha) is not Hurwitz, InputError for numbers out of
+    peak gains. ``table``: peak gains that are known already, for these gains, rate and peak width. Raises UnstableLoop if a closed unit (shifted by alpha) is not Hurwitz, InputError for numbers out of
     range, missing gains or links that do not fit, WidthNotReached if a peak gain does not close. Theory (9), (10),
     (13), (14).
     """
     if not (isinstance(width, (int, float)) and 0 < width < 1):
         raise InputError(f"width must lie between 0 and 1 (relative), not {width!r}.")
-    table = PeakTable(gains, alpha, peak_width)
+    table = PeakTable(gains, alpha, peak_width) if table is None else table
     if network.description == "edge pattern":
         return _with_edges(network, table, width)
     name = {"pattern": "pattern", "rules": "worst wiring", "members": "members"}[network.description]

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.sparse import csr_array, eye_array
-from scipy.sparse.linalg import splu
+from scipy.sparse.linalg import SuperLU, splu
 
 from synth.gain.points import Floats
 
@@ -22,8 +22,10 @@ _THIN, _THIN_SIZE = 2.3, 3_000_000
 _FLAT, _FLAT_SIZE = 4.6, 150_000
 _ANY_SIZE = 2_000
 _BUSY = 60
-# More links at one outlet than this make a hub.
-_HUB = 64
+# So many loops more than one are eliminated quickly wherever they run.
+_LOOPS = 1_500
+# Balls of so many outlets reached in fewer layers than these, seen from most of the seeds, mean links that spread.
+_BALL, _LAYERS, _SEEDS = 3_000, 10, 3
 
 
 @dataclass(frozen=True)
@@ -35,16 +37,21 @@ class Solve:
     work: int
 
     @property
+    def settled(self) -> bool:
+        """Whether it solves the system, with whatever signs."""
+        return self.residual < 1 and bool(np.all(np.isfinite(self.x)))
+
+    @property
     def proves(self) -> bool:
         """Whether x is a point for lambda in doubles."""
-        return self.residual < 1 and bool(np.all(np.isfinite(self.x))) and float(self.x.min()) > 0
+        return self.settled and float(self.x.min()) > 0
 
 
-def bicgstab(B: csr_array, level: float, goal: float = 0.5, steps: int = _STEPS) -> Solve:
-    """(level I - B) x = 1 until the residual is below ``goal`` in every row, or the steps are used up."""
+def bicgstab(B: csr_array, level: float, goal: float = 0.5, steps: int = _STEPS, right: Floats | None = None) -> Solve:
+    """(level I - B) x = right (ones) until the residual is below ``goal`` in every row, or the steps are used up."""
     size = B.shape[0]
     x = np.zeros(size)
-    r = np.ones(size)
+    r = np.ones(size) if right is None else right.copy()
     shadow = r.copy()
     p = np.zeros(size)
     v = np.zeros(size)
@@ -85,23 +92,61 @@ def bicgstab(B: csr_array, level: float, goal: float = 0.5, steps: int = _STEPS)
             if most < goal:
                 break
     # The residual is computed afresh: the recurrence drifts away from it.
-    true = 1.0 - (level * x - B @ x)
+    true = (1.0 if right is None else right) - (level * x - B @ x)
     return Solve(x, float(np.abs(true).max()) if np.all(np.isfinite(true)) else np.inf, work + 1)
 
 
 def is_thin(B: csr_array) -> bool:
     """Whether there are so few links per outlet that elimination creates next to none."""
     size = B.shape[0]
-    return bool(B.nnz <= _THIN * size and size <= _THIN_SIZE) and _busiest(B) <= _BUSY
+    if B.nnz > _THIN * size or size > _THIN_SIZE or _busiest(B) > _BUSY:
+        return False
+    return B.nnz <= size + _LOOPS or not spreads(B)
 
 
 def may_factor(B: csr_array) -> bool:
     """Whether a sparse factorisation of level I - B can be expected to stay small."""
     size = B.shape[0]
-    if size > _ANY_SIZE and max(int(np.diff(B.indptr).max()), int(np.bincount(B.indices).max(initial=0))) > _HUB:
+    if size <= _ANY_SIZE:
+        return True
+    if _busiest(B) > _BUSY or B.nnz > _FLAT * size or size > _THIN_SIZE:
         return False  # hubs fill a factorisation up whatever the average
-    flat = B.nnz <= _FLAT * size and size <= _FLAT_SIZE and _busiest(B) <= _BUSY
-    return size <= _ANY_SIZE or is_thin(B) or flat
+    return is_thin(B) or (size <= _FLAT_SIZE and not spreads(B))
+
+
+def spreads(B: csr_array) -> bool:
+    """Whether balls grow so fast that no small set of outlets separates the network: elimination would fill up.
+
+    Counted from a few outlets: links from where a ball holds 100 outlets to where it holds 3,000. On a line there are
+    thousands, on a square grid 30, in three dimensions 9, among links drawn at random 5.
+    """
+    size = B.shape[0]
+    most = min(_BALL, size // 2)
+    fast = 0
+    for turn, seed in enumerate((np.arange(_SEEDS) * size) // _SEEDS):
+        if 2 * fast > _SEEDS or 2 * (fast + _SEEDS - turn) < _SEEDS:
+            break
+        fast += _ball_fills(B, int(seed), most)
+    return 2 * fast > _SEEDS
+
+
+def _ball_fills(B: csr_array, seed: int, most: int) -> bool:
+    """Whether the ball round ``seed`` holds ``most`` outlets within a few layers of holding a hundred."""
+    taken = np.zeros(B.shape[0], dtype=bool)
+    taken[seed] = True
+    edge, count, early, late = np.array([seed]), 1, 0, 0
+    while edge.size and early < 2 * _LAYERS and late < _LAYERS:
+        begin, length = B.indptr[edge], B.indptr[edge + 1] - B.indptr[edge]
+        within = np.arange(int(length.sum())) - np.repeat(np.cumsum(length) - length, length)
+        near = B.indices[np.repeat(begin, length) + within]
+        edge = np.unique(near[~taken[near]])
+        taken[edge] = True
+        count += edge.size
+        if count >= most:
+            return True
+        early += count <= 100
+        late += count > 100
+    return False
 
 
 def has_hubs(B: csr_array) -> bool:
@@ -114,8 +159,8 @@ def _busiest(B: csr_array) -> int:
     return int(max(np.diff(B.indptr).max(initial=0), np.bincount(B.indices).max(initial=0)))
 
 
-def factored(B: csr_array, level: float, right: Floats | None = None) -> Floats | None:
-    """(level I - B)^-1 right (ones unless given) by a sparse factorisation; None if it breaks down.
+def factors(B: csr_array, level: float) -> SuperLU | None:
+    """A sparse factorisation of level I - B; None if it breaks down.
 
     Pivots stay on the diagonal: for level above the radius the matrix is an M-matrix, of which elimination without
     pivoting keeps all signs, so that even the smallest entries of a positive solution come out accurate.
@@ -124,9 +169,16 @@ def factored(B: csr_array, level: float, right: Floats | None = None) -> Floats 
     if not (np.isfinite(level) and np.all(np.isfinite(B.data))):
         return None  # a factorisation that meets a NaN may end the process
     system = (level * eye_array(size, format="csc") - B.tocsc()).tocsc()
-    ones = np.ones(size) if right is None else right
     try:
-        x = splu(system, "MMD_AT_PLUS_A", 0.0, options={"SymmetricMode": True}).solve(ones)
+        return splu(system, "MMD_AT_PLUS_A", 0.0, options={"SymmetricMode": True})
     except (RuntimeError, ValueError, MemoryError):
         return None
+
+
+def factored(B: csr_array, level: float, right: Floats | None = None) -> Floats | None:
+    """(level I - B)^-1 right (ones unless given) by a sparse factorisation; None if it breaks down."""
+    found = factors(B, level)
+    if found is None:
+        return None
+    x: Floats = found.solve(np.ones(B.shape[0]) if right is None else right)
     return x if np.all(np.isfinite(x)) else None

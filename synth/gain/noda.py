@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import numpy as np
 
+from synth.gain.active import slope_weights
 from synth.gain.operator import Floats, GainOperator
-from synth.gain.slopes import slope_weights
 
 _NODA_STEPS = 60
 

@@ -1,11 +1,11 @@
 """Points for one strongly connected class of sum rows: the Perron vector, as far as it is needed for the two bounds.
 
-A lower bound needs the vector only where it is large: the radius of a part is at most that of the whole (theory (10)
-with s zero elsewhere), so that a ball round the place where power steps have gathered, grown until it stops to matter,
-is enough. An upper bound needs a positive s with G(s) <= lambda s: one loose solve of (lambda I - G) s = 1 just above
-the lower bound, by Krylov steps or a sparse factorisation. Where that fails, Noda's iteration (Noda, Numer. Math. 17,
-1971) on the whole class takes over. All of it in the coordinates of a point that keeps the row sums close together:
-power steps, and where gains or paths span many decades the values of the largest loop (max-plus scaling). Ours.
+A vector is only needed where it is large: the leading pair of a ball round the place where power steps have gathered
+gives both points once the rest is fenced in by one loose solve (see leading). Where links spread, so that balls soon
+are everything, the pair is one of the whole. Where that fails, more power steps reach from end to end; then Noda's
+iteration (Noda, Numer. Math. 17, 1971) on the whole class takes over, for a limited number of steps. All of it in the
+coordinates of a point that keeps the row sums close together: power steps, and where gains or paths span many decades
+the values of the largest loop (max-plus scaling). Ours.
 
 Rows that are roots of squares with one link per inlet are sum rows of squares (theory (11)).
 """
@@ -19,20 +19,28 @@ from numpy.typing import NDArray
 from scipy.sparse import csr_array
 
 from synth.gain.frame import Frame
-from synth.gain.krylov import Solve, bicgstab, factored, has_hubs, is_thin, may_factor
+from synth.gain.krylov import bicgstab, factored, has_hubs, may_factor, spreads
+from synth.gain.leading import Fenced, fence, is_long, leading_pair
 from synth.gain.operator import MAX, SQUARE, GainOperator
 from synth.gain.points import ClassPoint, Exponents, Floats, plain
 from synth.gain.single_loop import single_loop
 
-# Power steps gather at hot spots; where there are hubs the spots are plain, on large networks steps are dear.
-_POWER_STEPS, _POWER_STEPS_HUB, _POWER_STEPS_LARGE, _LARGE = 60, 20, 30, 200_000
+# Power steps gather at hot spots, after some time along loops; where links spread there are none; the last but one try.
+_POWER_STEPS, _POWER_STEPS_LONG, _POWER_STEPS_FAST, _POWER_STEPS_FAR = 30, 60, 6, 1500
+_FAR_WORK = 300_000_000
+_WHOLE = "vector of the whole"
 _SPOTS, _SPOT_SIZE = 12, 60
-_BALLS = (800, 2700, 8100, 24300)
-_LOCAL_FROM = 1500
-_NODA_STEPS = 40
+_BALLS = (1_000, 4_000, 16_000, 64_000)
+_CENTRES = 4
+# Below this size factorisations are the quickest.
+_LOCAL_FROM = 300
+# Noda steps: fewer for large networks.
+_NODA_STEPS, _NODA_LEAST, _NODA_WORK = 40, 4, 400_000
 _NEAR = 1e-6
-# Entries of a local vector below this share of the largest are left out when its tail is lost in rounding.
-_CORE = 1e-8
+# Krylov vectors to this error; what a vector may leave at the edge of its ball; error for comparing spots.
+_GOAL, _FADED, _LOOSE = 1e-11, 1e-6, 1e-4
+# Vectors of which more than this leaves the surroundings of their spot are wider than these.
+_SEEN = 0.02
 
 
 @dataclass(frozen=True, eq=False)
@@ -54,7 +62,7 @@ class _Search:
         self.high = np.inf
         self.top = (frame.mantissa, frame.exponent)
         self.work = 0
-        self.hubs = has_hubs(frame.B)
+        self.spreads = frame.size >= _LOCAL_FROM and (has_hubs(frame.B) or spreads(frame.B))
         self.method = "power steps"
 
     def look(self) -> bool:
@@ -92,11 +100,17 @@ def solve(inner: GainOperator, width: float) -> ClassPoint | None:
         return None
     if inner.gain.size == inner.size:
         return single_loop(inner)
-    search = _Search(Frame(inner, squared), width)
+    frame = Frame(inner, squared)
+    search = _Search(frame, width)
     _start(search, inner, squared)
     if not search.done:
-        if search.frame.size >= _LOCAL_FROM and not search.hubs:
+        if search.frame.size >= _LOCAL_FROM:
             _local(search)
+            if not search.done:
+                # Where gains drive one way, coordinates have to reach from end to end before anything is accurate.
+                _power(search, int(np.clip(_FAR_WORK / frame.B.nnz, 100, _POWER_STEPS_FAR)))
+                if not search.done:
+                    _local(search)
         if not search.done:
             _noda(search)
     if not search.done and not search.frame.wide:
@@ -123,13 +137,24 @@ def _start(search: _Search, inner: GainOperator, squared: bool) -> None:
         _balance(search, inner, squared)
         if search.look():
             return
+    steps = _POWER_STEPS_FAST if search.spreads else _POWER_STEPS_LONG if is_long(frame.B) else _POWER_STEPS
+    _power(search, steps)
+
+
+def _power(search: _Search, steps: int) -> None:
+    """Shifted power steps, whose result becomes the coordinates."""
+    frame = search.frame
     x = np.ones(frame.size)
-    for _ in range(_POWER_STEPS_HUB if search.hubs else _POWER_STEPS_LARGE if frame.size > _LARGE else _POWER_STEPS):
+    # The shift keeps the steps from going in circles on periodic graphs.
+    high = float(frame.quotients.max())
+    shift = 0.6 * high
+    often = 8 if high < 1e30 else 1
+    for step in range(steps):
         image = frame.B @ x
-        # The shift keeps the steps from going in circles on periodic graphs.
-        image += 0.6 * search.high * x
-        x = image / image.max()
-        search.work += 1
+        x *= shift
+        image += x
+        x = image / image.max() if step % often == 0 or step == steps - 1 else image
+    search.work += steps
     if x.min() > 1e-250:
         frame.rescale(x)
         search.look()
@@ -154,133 +179,107 @@ def _balance(search: _Search, inner: GainOperator, squared: bool) -> None:
 
 
 def _local(search: _Search) -> None:
-    """The lower point from balls round hot spots, then one solve just above it; again where that finds a hotter one."""
+    """A leading pair, fenced in: of a ball round a hot spot whose edge does not matter, or of the whole."""
+    frame = search.frame
+    whole = frame.size <= 2 * _BALLS[0] or search.spreads
+    centre, least = (np.zeros(1, dtype=np.intp), 0) if whole else _hottest(search)
+    for _ in range(_CENTRES):
+        fenced = _round(search, centre, frame.size if whole else least)
+        if fenced is None:
+            return
+        if fenced.x is not None and fenced.y is not None:
+            image = frame.B @ fenced.y
+            kept = fenced.y > 0
+            if kept.any():
+                search.offer(float((image[kept] / fenced.y[kept]).min()), fenced.y)
+            if fenced.x.min() > 0:
+                frame.rescale(fenced.x)
+                search.look()
+            return
+        if fenced.spot < 0 or search.method.startswith(_WHOLE):
+            return
+        # Below the radius the solution turns negative where a hotter spot is.
+        centre = np.array([fenced.spot])
+
+
+def _round(search: _Search, centre: NDArray[np.intp], least: int) -> Fenced | None:
+    """The pair of the smallest ball round ``centre`` on whose edge the vector has faded, fenced in.
+
+    Balls of fewer than ``least`` outlets are not tried.
+    """
+    frame = search.frame
+    search.method = "vector of a part, fenced in"
+    v = np.ones(frame.size)
+    long = is_long(frame.B)
+    for most in _BALLS:
+        if most > frame.size / 2 or most < least:
+            continue
+        ball = frame.ball(centre, most)
+        pair = leading_pair(frame.block(ball), v[ball] + 1e-3 * v.max(), _GOAL)
+        search.work += 1
+        if pair is None:
+            if long:
+                continue
+            return None
+        v = np.zeros(frame.size)
+        v[ball] = pair[1]
+        centre = ball[[int(np.argmax(pair[1]))]]
+        # Along long loops little of what leaves the ball ever comes back.
+        if not long and _leak(frame, v) > _FADED * pair[0]:
+            continue
+        fenced = _fenced(search, pair[0], v)
+        if fenced.closes or fenced.spot >= 0:
+            return fenced
+    search.method = f"{_WHOLE}, fenced in"
+    pair = leading_pair(frame.B, v + 1e-3 * v.max(), _GOAL)
+    search.work += 1
+    return None if pair is None else _fenced(search, *pair)
+
+
+def _leak(frame: Frame, v: Floats) -> float:
+    """The most that an outlet with v = 0 hears."""
+    return float(np.where(v > 0, 0.0, frame.B @ v).max())
+
+
+def _fenced(search: _Search, theta: float, v: Floats) -> Fenced:
+    fenced = fence(search.frame.B, theta, v, search.width)
+    search.work += fenced.work
+    return fenced
+
+
+def _hottest(search: _Search) -> tuple[NDArray[np.intp], int]:
+    """Where the leading vector of the surroundings of some hot spots is largest, and how small a ball can be enough."""
     frame = search.frame
     spots = _spots(frame)
-    for _ in range(4):
-        before = search.low.value
-        _grow(search, spots)
-        if search.low.value <= before * (1 + search.width) or search.done:
-            return
-        way, solved = _above(search)
-        if solved.proves:
-            frame.rescale(solved.x)
-            search.method = f"local Perron vector, {way}"
-            search.look()
-            return
-        if not np.all(np.isfinite(solved.x)):
-            return
-        # Below the radius the solution turns negative where the true Perron vector is.
-        spots = np.array([int(np.argmin(solved.x))])
-
-
-def _above(search: _Search) -> tuple[str, Solve]:
-    """The solve at the level that closes the enclosure: factored where the graph is thin, else by Krylov steps."""
-    frame = search.frame
-    solved = None
-    if not is_thin(frame.B):
-        solved = bicgstab(frame.B, search.level)
-        search.work += solved.work
-        if solved.proves or not may_factor(frame.B):
-            return "Krylov solve", solved
-    x = factored(frame.B, search.level)
-    search.work += 1
-    if x is None:
-        return "sparse solve", solved or Solve(np.full(frame.size, np.nan), np.inf, 0)
-    residual = 1.0 - (search.level * x - frame.B @ x)
-    return "sparse solve", Solve(x, float(np.abs(residual).max()), 1)
+    most = _SPOT_SIZE * spots.size
+    top, least = spots[:1], 0
+    for size in (most, 5 * most):
+        ball = frame.ball(spots, size)
+        pair = leading_pair(frame.block(ball), np.ones(ball.size), _LOOSE)
+        search.work += 1
+        if pair is None:
+            break
+        top = ball[[int(np.argmax(pair[1]))]]
+        v = np.zeros(frame.size)
+        v[ball] = pair[1]
+        if _leak(frame, v) <= _SEEN * pair[0]:
+            break
+        least = size
+        if frame.size < 4 * least:
+            break
+    return top, 3 * least
 
 
 def _spots(frame: Frame) -> NDArray[np.intp]:
-    """Outlets where power steps have gathered, not next to each other, largest first."""
+    """Outlets where power steps have gathered: those above all they listen to, largest first."""
     size = np.ldexp(frame.mantissa, np.clip(frame.exponent - frame.exponent.max(), -1000, 0).astype(np.int32))
-    most = min(2000, frame.size - 1)
-    order = np.argpartition(-size, most)[:most]
-    order = order[np.argsort(-size[order], kind="stable")]
-    near: set[int] = set()
-    chosen: list[int] = []
-    for i in order.tolist():
-        if i not in near:
-            chosen.append(i)
-            near.update(frame.ball(np.array([i]), 20).tolist())
-        if len(chosen) == _SPOTS:
-            break
-    return np.array(chosen, dtype=np.intp)
-
-
-def _grow(search: _Search, spots: NDArray[np.intp]) -> None:
-    """Perron vectors of growing balls round the hottest spot until growing no longer raises the lower bound."""
-    frame = search.frame
-    centre = spots
-    if spots.size > 1:
-        ball = frame.ball(spots, _SPOT_SIZE * spots.size)
-        x, _ = _inside(search, ball)
-        if x is None:
-            return
-        centre = ball[[int(np.argmax(x))]]
-    before = 0.0
-    for most in _BALLS:
-        if most > frame.size / 2:
-            return
-        ball = frame.ball(centre, most)
-        x, value = _inside(search, ball, guess=before)
-        if x is None or value <= before * (1 + 0.05 * search.width) or x.min() < 1e-10:
-            return
-        centre, before = ball[[int(np.argmax(x))]], value
-
-
-def _inside(
-    search: _Search, ball: NDArray[np.intp], start: Floats | None = None, guess: float = 0.0
-) -> tuple[Floats | None, float]:
-    """Perron vector of B between the outlets of the ball, by Noda's iteration; its lower bound is offered.
-
-    ``guess``: the radius of a smaller ball; a little above it most of the way is one solve.
-    """
-    frame = search.frame
-    block = frame.block(ball)
-    x = np.ones(ball.size) if start is None else start
-    if guess > 0 and may_factor(block):
-        first = factored(block, guess * (1 + 1e-6))
-        if first is not None and first.min() > 0:
-            x = np.maximum(first / first.max(), 1e-200)
-    best, spread = x, np.inf
-    for _ in range(12):
-        quotients = (block @ x) / x
-        high, low = float(quotients.max()), float(quotients.min())
-        search.work += 1
-        if not high - low < spread:
-            break
-        best, spread = x, high - low
-        if spread <= 0.02 * search.width * high:
-            break
-        # In the coordinates of x the solution is the factor of the next step.
-        scaled = _similar(block, x)
-        if not may_factor(scaled):
-            return None, 0.0
-        # A hair above the radius: closer, rounding would turn signs; the error shrinks by this over the gap a step.
-        factor = factored(scaled, high * (1 + 1e-12))
-        if factor is None or factor.min() <= 0:
-            break
-        x = x * np.maximum(factor / factor.max(), 1e-100)
-        x = np.maximum(x / x.max(), 1e-200)
-    x = best
-    value, kept = _trimmed(block, x, 0.05 * search.width)
-    if value > search.low.value:
-        whole = np.zeros(frame.size)
-        whole[ball] = kept
-        search.offer(value, whole)
-    core = x > _CORE
-    if start is None and not core.all():
-        # Far out the vector drowns in rounding, and its quotients with it; the core without it loses next to nothing.
-        _, inner_value = _inside(search, ball[core], x[core])
-        value = max(value, inner_value)
-    return x, value
-
-
-def _similar(block: csr_array, x: Floats) -> csr_array:
-    """The block in the coordinates of x."""
-    data = block.data * x[block.indices] / np.repeat(x, np.diff(block.indptr))
-    return csr_array((data, block.indices, block.indptr), shape=block.shape)
+    near = np.maximum.reduceat(size[frame.source], frame.start[:-1])
+    tops = np.flatnonzero(size >= near)
+    if tops.size == 0:
+        return np.array([int(np.argmax(size))])
+    most = min(_SPOTS, tops.size)
+    best = tops[np.argpartition(-size[tops], most - 1)[:most]]
+    return best[np.argsort(-size[best], kind="stable")]
 
 
 def _trimmed(B: csr_array, x: Floats, share: float) -> tuple[float, Floats]:
@@ -308,7 +307,7 @@ def _noda(search: _Search) -> None:
     may = may_factor(frame.B)
     search.method = f"{search.method}, Noda iteration"
     stuck = 0
-    for _ in range(_NODA_STEPS):
+    for _ in range(int(np.clip(_NODA_WORK / frame.size, _NODA_LEAST, _NODA_STEPS))):
         here = frame.quotients
         high = float(here.max())
         value, kept = _trimmed(frame.B, np.ones(frame.size), 0.05 * search.width)

@@ -8,10 +8,12 @@ So any slope A bounds from below: radius(A) <= radius(G), with the same point. T
     below    the Perron vector of the leading strongly connected class of A, which may leave out most outlets
     above    (lambda I - A) t = 1 for lambda just above: t > 0 is the next point, and G(t) <= lambda t ends the search
 
-(Howard 1960 and Hoffman & Karp 1966 for policies; Noda 1971 for the eigenvalue). The ones on the right keep t positive
-and away from zero where A is reducible or its Perron vector is local, which is where plain policy iteration on
-eigenvectors breaks down. That putting together is ours. Where it stalls, shifted power steps in logarithms go on; a
-width that is not reached shows in the bounds, which are worked out elsewhere.
+(Howard 1960 and Hoffman & Karp 1966 for policies; Noda 1971 for the eigenvalue). On large networks the leading pair of
+one slope is followed to the next, worked out anew only where it is large and fenced in elsewhere (see leading), which
+gives both bounds from every slope. The ones on the right keep t positive and away from zero where A is reducible or
+its Perron vector is local, which is where plain policy iteration on eigenvectors breaks down. That putting together is
+ours. Where it stalls, or a budget of work is used up, shifted power steps in logarithms go on for a while; a width that
+is not reached shows in the bounds, which are worked out elsewhere.
 """
 
 from __future__ import annotations
@@ -25,14 +27,19 @@ from scipy.sparse.csgraph import connected_components
 
 from synth.gain.certify import certified_lower
 from synth.gain.krylov import bicgstab, factored, may_factor
+from synth.gain.leading import fence, leading_pair
 from synth.gain.operator import MAX, GainOperator
 from synth.gain.points import ClassPoint, Exponents, Floats, from_logarithms, normal, plain
 
-_POWER_STEPS = 30
+_POWER_STEPS = 15
+# Work times links beyond which no new round begins.
+_BUDGET = 2_000_000_000
+# Matrices of slopes in a row; entries of the leading vector that are worked out anew for each.
+_FOLLOWED, _CORE = 10, 1e-7
 _ROUNDS = 14
 _NEWTON_STEPS = 8
 # Classes of the slopes whose Perron vector is tried in one round, most promising first.
-_CLASSES = 6
+_CLASSES, _CLASSES_SMALL = 6, 200
 _CLASS_STEPS = 12
 # Power steps of the last resort: fewer for large operators (the product is the number of links passed).
 _LAST_STEPS, _LAST_LINKS = 4000, 30_000_000
@@ -55,6 +62,8 @@ class _Search:
         self.low, self.low_at = 0.0, (self.mantissa, self.exponent)
         self.high, self.high_at = np.inf, (self.mantissa, self.exponent)
         self.work = 0
+        # Where a class with a larger radius showed.
+        self.spot = -1
         self.method = "power steps"
         self.move(self.mantissa, self.exponent)
 
@@ -163,8 +172,13 @@ def _rounds(search: _Search) -> None:
         _below(search, matrix)
         if search.done:
             return
-        new = _above(search, matrix)
-        if new is None and search.low == before:
+        spot = search.spot
+        new = _follow(search, matrix) if x.size > _SMALL else None
+        if search.done or search.work * search.op.gain.size > _BUDGET:
+            return
+        if new is None and (search.spot < 0 or search.spot == spot):
+            new = _above(search, matrix)
+        if new is None and search.low == before and search.spot in (-1, spot):
             return
         x = x if new is None else new
 
@@ -217,8 +231,13 @@ def _leading(search: _Search, matrix: csr_array, label: NDArray[np.int32]) -> li
     most = np.zeros(count)
     np.maximum.at(most, label, quotient)
     most = np.where(np.isfinite(most), most, np.inf)
-    best = np.argsort(-most, kind="stable")[:_CLASSES]
-    return [int(c) for c in best if most[c] > search.low]
+    if search.spot >= 0:
+        most[label[search.spot]] = np.inf
+    best = np.argsort(-most, kind="stable")[:_CLASSES_SMALL]
+    # Once a class was missed: small ones are cheap, as many of them as make up a large one.
+    most_outlets = _SMALL if search.spot >= 0 else 0
+    before = np.cumsum(np.bincount(label, minlength=count)[best])
+    return [int(c) for k, c in enumerate(best) if most[c] > search.low and (k < _CLASSES or before[k] < most_outlets)]
 
 
 def _above(search: _Search, matrix: csr_array) -> Floats | None:
@@ -238,6 +257,56 @@ def _above(search: _Search, matrix: csr_array) -> Floats | None:
             break
         matrix = search.slopes(t)
     return last
+
+
+def _follow(search: _Search, matrix: csr_array) -> Floats | None:
+    """The leading pair of the slopes, followed from one matrix of slopes to the next; the last point, None if none.
+
+    The pair is worked out where it is large, the rest is fenced in (see leading): both bounds from every matrix.
+    """
+    if search.low <= 0:
+        return None
+    theta, v, last = search.low, _low_vector(search), None
+    for _ in range(_FOLLOWED):
+        fenced = fence(matrix, theta, v, search.width)
+        search.work += fenced.work
+        x, y = fenced.x, fenced.y
+        search.spot = fenced.spot
+        if x is None or y is None or not (np.all(np.isfinite(x)) and x.min() > 0):
+            break
+        kept = y > 0
+        if kept.any():
+            value = float(((matrix @ y)[kept] / y[kept]).min())
+            if value > search.low:
+                search.low, search.low_at = value, normal(search.mantissa * y, search.exponent)
+        last = x / x.max()
+        search.take(last)
+        if search.done:
+            break
+        matrix = search.slopes(last)
+        core = np.flatnonzero(last > _CORE)
+        block = matrix if 2 * core.size > last.size else matrix[core][:, core]
+        start = last if block is matrix else last[core]
+        pair = leading_pair(block, start, 0.02 * search.width)
+        search.work += 1
+        if pair is None:
+            break
+        theta, v = pair
+        if block is not matrix:
+            whole = np.zeros(last.size)
+            whole[core] = v
+            v = whole
+    return last
+
+
+def _low_vector(search: _Search) -> Floats:
+    """The point of the lower bound in the present coordinates, largest entry 1."""
+    mantissa, exponent = search.low_at
+    live = mantissa > 0
+    shift = np.where(live, exponent - search.exponent, -(2**60))
+    gap = np.clip(shift - shift.max(), -1200, 0).astype(np.int32)
+    v = np.ldexp(mantissa / search.mantissa, gap)
+    return np.asarray(v / v.max())
 
 
 def _resolvent(search: _Search, matrix: csr_array, level: float) -> Floats | None:

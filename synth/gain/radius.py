@@ -24,11 +24,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.errors import InputError
+from synth.gain.active import slope_weights
 from synth.gain.bottleneck import Bottleneck, Leading
 from synth.gain.certify import certified_lower, certified_upper, row_bounds
 from synth.gain.operator import MAX, Floats, GainOperator
 from synth.gain.points import ClassPoint, Exponents, normal, plain
-from synth.gain.slopes import slope_weights
 
 if TYPE_CHECKING:
     from synth.gain.classes import Classes

@@ -37,6 +37,7 @@ class SampledUnit:
     """
 
     kind: Kind
+    gains: ExactMatrix
     loop: SampledLoop
     takes: tuple[Inlet, ...]
     waves: tuple[Inlet, ...]
@@ -162,6 +163,7 @@ def sampled_unit(
     readings = _readings(kind, links)
     return SampledUnit(
         kind,
+        K,
         loop,
         tuple(takes),
         tuple(Inlet(_column(kind.E, j), none, still) for j in range(len(kind.disturbances))),
@@ -252,6 +254,18 @@ def sampled_peaks(unit: SampledUnit, alpha: Number = Fraction(0), width: float =
 
 
 _DIRECT = ("takes", "waves")
+
+
+def sampled_gains(unit: SampledUnit, inlets: Sequence[Inlet], outlets: Sequence[Outlet], width: float) -> PeakGain:
+    """Peak gains of a sampled unit from some inlets to some outlets, what passes at once left out; shape and errors as
+    sampled_peaks."""
+    check_width(width)
+    try:
+        low, high = _enclosed(unit.loop, Fraction(0), inlets, outlets, (), width)
+    except UnstableLoop as error:
+        raise UnstableLoop(f"kind {unit.kind.name!r}: {error}") from error
+    low, high = low[:, : len(inlets)], high[:, : len(inlets)]
+    return PeakGain(low, high, relative_width(low, high))
 
 
 def _enclosed(

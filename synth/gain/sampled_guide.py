@@ -16,7 +16,7 @@ import scipy.linalg
 from synth.gain.sampled_loop import Floats, SampledLoop
 from synth.gain.sampled_sup import Inlet, Outlet, absolute_integral, bernstein_matrix
 
-_REST = 1e-11  # the sums are cut where the slowest mode has fallen to this part
+_REST = 1e-11
 _MOST_PERIODS = 1 << 17
 _TERMS = 14
 
@@ -35,12 +35,18 @@ class SampledGuide:
 
 
 def sampled_peak_guide(
-    loop: SampledLoop, inlets: Sequence[Inlet], outlets: Sequence[Outlet], alpha: float = 0.0, grid: int = 9
+    loop: SampledLoop,
+    inlets: Sequence[Inlet],
+    outlets: Sequence[Outlet],
+    alpha: float = 0.0,
+    grid: int = 9,
+    rest: float = _REST,
 ) -> SampledGuide | None:
     """Estimate the peak gains of a sampled loop, signals weighted with e^{alpha t}; None if it is not stable then.
 
-    ``grid`` phases per command in force, at least 3. Law: agrees with the enclosure to about 1e-3 of its value at the
-    default grid. What passes at once (feed-through) is not part of it.
+    ``grid`` phases per command in force, at least 3; ``rest``: sums are cut where the slowest mode has fallen to it.
+    Law: agrees with the enclosure to about 1e-3 of its value at the default grid. What passes at once (feed-through) is
+    not part of it.
     """
     n, size = loop.states, loop.size
     T, d = float(loop.period), float(loop.delay)
@@ -62,7 +68,7 @@ def sampled_peak_guide(
     sampled = _exp(M * (T - d)) @ fresh
     sampled[:n] += gx * np.exp(alpha * T)
     kernels, step = _kernels(M[:n, :n], D, T, size)
-    periods = min(_MOST_PERIODS, int(np.ceil(np.log(_REST) / np.log(max(radius, 1e-3)))) + size)
+    periods = min(_MOST_PERIODS, int(np.ceil(np.log(rest) / np.log(max(radius, 1e-3)))) + size)
     Y = _powers(Phi, np.hstack([kernels.reshape(size, -1), sampled]), periods)
     rows = np.array([[float(v) for v in o.row] for o in outlets]).reshape(len(outlets), size)
     bernstein = bernstein_matrix(_TERMS)

@@ -5,12 +5,16 @@ Everything is rational arithmetic on the stored values themselves, so that a pro
 
 from __future__ import annotations
 
+import math
+import struct
+from collections.abc import Callable
 from dataclasses import dataclass
 from fractions import Fraction
 
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix, Number, exact
 from synth.network.gains import Gains, GainSet
+from synth.network.rounding import Rounding
 
 ROUNDINGS = ("half away from zero", "half to even", "down")
 
@@ -88,17 +92,52 @@ def gains_as_flashed(gains: Gains, numbers: FixedPoint) -> Gains:
             f"these gains do not fit into [{float(numbers.lowest):g}, {float(numbers.highest):g}]: {'; '.join(wrong)}; "
             "give the word fewer bits behind the point, or scale the signals."
         )
+    return _each(gains, numbers.round)
+
+
+def stored_gains(gains: Gains, rounding: Rounding) -> Gains:
+    """The gains as the code stores them: in fixed-point words, in single or double precision, or digit for digit.
+
+    ``rounding`` says which. Law: stored_gains(stored_gains(g, r), r) == stored_gains(g, r). InputError where a gain is
+    beyond the range of such numbers.
+    """
+    if rounding.word is not None and rounding.fraction is not None:
+        return gains_as_flashed(gains, FixedPoint(rounding.word, rounding.fraction))
+    if rounding.form == "exact":
+        return gains
+    return _each(gains, _single if rounding.form == "single" else _double)
+
+
+def _each(gains: Gains, change: Callable[[Fraction], Fraction]) -> Gains:
     return Gains(
         tuple(
             GainSet(
                 one.kind,
                 one.actuators,
                 one.signals,
-                ExactMatrix(tuple(tuple(numbers.round(v) for v in row) for row in one.K.rows), one.K.shape),
+                ExactMatrix(tuple(tuple(change(v) for v in row) for row in one.K.rows), one.K.shape),
             )
             for one in gains.sets
         )
     )
+
+
+def _double(value: Fraction) -> Fraction:
+    """The nearest number of double precision."""
+    if abs(value) > Fraction(10) ** 300:
+        raise InputError(f"the gain {float(value):g} is too large to be kept in floating point; scale the signals.")
+    return Fraction(float(value))
+
+
+def _single(value: Fraction) -> Fraction:
+    """The number of single precision nearest to the double that is nearest to the value."""
+    try:
+        (found,) = struct.unpack("f", struct.pack("f", float(_double(value))))
+    except OverflowError:
+        found = math.inf
+    if not math.isfinite(found):
+        raise InputError(f"the gain {float(value):g} is too large for single precision; scale the signals.")
+    return Fraction(found)
 
 
 def unit_roundoff(form: str) -> Fraction:

@@ -40,7 +40,7 @@ def mean_of(op: GainOperator, loop: tuple[int, ...]) -> float:
     return math.exp(math.fsum(math.log(op.gain[k]) for k in loop) / len(loop))
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(max_classes())
 def test_value_loop_and_points_against_all_simple_loops(op):
     found = solve(op, 1e-9)

@@ -16,14 +16,14 @@ from synth.gain.dense import apply_literally
 from tests.gain.operators import operators, vectors
 
 
-@settings(max_examples=200, deadline=None)
+@settings(max_examples=120, deadline=None)
 @given(operators(alternatives=True), st.data())
 def test_fast_code_equals_the_definition_loop(op, data):
     s = data.draw(vectors(op.size))
     assert op(s) == pytest.approx(apply_literally(op, s), rel=1e-12, abs=1e-300)
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=90, deadline=None)
 @given(operators(alternatives=True), st.data())
 def test_monotone_homogeneous_subadditive(op, data):
     """Law of the operator (theory: section 4)."""

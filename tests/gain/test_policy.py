@@ -49,7 +49,7 @@ def run(seed: int, count: int) -> None:
 
 
 def test_random_classes_of_all_row_types() -> None:
-    run(31, 400)
+    run(31, 250)
 
 
 @pytest.mark.long

@@ -22,7 +22,7 @@ def contains(radius, value, slack=1e-12):
     return radius.lower * (1 - slack) <= value <= radius.upper * (1 + slack)
 
 
-@settings(max_examples=250, deadline=None)
+@settings(max_examples=150, deadline=None)
 @given(operators())
 def test_enclosure_contains_the_definition(op):
     """|G^n(1)|^{1/n} is above the radius for every n and tends to it; min and max growth over many steps bracket it."""
@@ -107,7 +107,7 @@ def test_more_gain_never_lowers_the_radius(op, data):
     assert raised.radius(1e-10).upper >= op.radius(1e-10).lower
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=80, deadline=None)
 @given(operators())
 def test_the_point_proves_the_upper_end(op):
     """op.upper_bound(point) is an upper bound in its own right, near the upper end also for reducible operators."""
@@ -121,7 +121,7 @@ def test_the_point_proves_the_upper_end(op):
         assert bound <= 1e-6
 
 
-@settings(max_examples=150, deadline=None)
+@settings(max_examples=80, deadline=None)
 @given(operators(), st.data())
 def test_every_point_bounds_the_radius(op, data):
     """Theory (10): quotients of any positive point bracket the radius."""
@@ -332,7 +332,7 @@ def test_bad_numbers_never_reach_a_factorisation():
         assert factored(good, bad) is None
 
 
-@settings(max_examples=100, deadline=None)
+@settings(max_examples=60, deadline=None)
 @given(operators(alternatives=True))
 def test_alternatives_keep_the_enclosure(op):
     radius = op.radius(1e-9)

@@ -59,7 +59,7 @@ def test_tolerances_are_what_theory_15_says(network):
             assert value == pytest.approx(expected, rel=1e-8)
 
 
-@settings(max_examples=25, deadline=None)
+@settings(max_examples=12, deadline=None)
 @given(networks(), st.data())
 def test_a_tolerance_is_where_the_radius_certainly_stays_below_one_and_certainly_does_not(network, data):
     """A hair below the factor the enclosure proves the network, a hair above it the enclosure excludes it."""

@@ -70,6 +70,12 @@ def scale_free(size: int, rng: np.random.Generator) -> Links:
     return size, np.concatenate([a, b]), np.concatenate([b, a]), _gains(rng, 2 * a.size)
 
 
+def random(size: int, rng: np.random.Generator) -> Links:
+    """Every outlet hears two others drawn at random, random gains: an expander, which no elimination likes."""
+    to, source = np.repeat(np.arange(size), 2), rng.integers(0, size, 2 * size)
+    return size, to, source, _gains(rng, to.size)
+
+
 def string(size: int, rng: np.random.Generator) -> Links:
     """A one-way string with one feedback link per thousand outlets, each over a few dozen outlets."""
     i = np.arange(1, size)
@@ -93,6 +99,7 @@ FAMILIES: dict[str, Callable[[int, np.random.Generator], Links]] = {
     "smooth grid": smooth_grid,
     "geometric": geometric,
     "scale-free": scale_free,
+    "random": random,
     "string": string,
     "cycle": cycle,
 }
