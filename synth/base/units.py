@@ -152,6 +152,8 @@ def _tokens(text: str) -> Iterator[tuple[str, str, bool]]:
     at = 0
     while at < len(plain.rstrip()):
         found = _TOKEN.match(plain, at)
+        if found is None and re.match(r"\s*(?:[.,]\d|\^|\*\*)", plain[at:]):
+            raise UnitError(f"the powers in the unit {text!r} must be whole numbers, such as 'm^2' or 's^-1'")
         if found is None:
             raise UnitError(
                 f"{text!r} is not a unit; accepted are names, '1', products, '/', powers: 'm/s^2', '1/s', 'kW'"
@@ -271,10 +273,15 @@ def parse_number(text: str) -> Fraction:
 
 
 def _close_unit(name: str) -> str:
-    """The hint for a misspelt unit: the same letters in the other case first, and no guess from a single letter."""
-    same = [known for known in UNITS if known.lower() == name.lower()]
-    if same:
-        return f" (did you mean {same[0]!r}?)"
+    """The hint for a misspelt unit: a product without its space, the same letters in the other case, a near name.
+
+    No guess is made from a single letter. A capital K for kilo is a commoner slip than a missing space behind kelvin.
+    """
+    same = [known for known in UNITS if known.lower() == name.lower()][:1]
+    parts = [f"{name[:k]} {name[k:]}" for k in range(1, len(name)) if name[:k] in UNITS and name[k:] in UNITS][:1]
+    meant = same + parts if name.startswith("K") else parts + same
+    if meant:
+        return f" (did you mean {' or '.join(map(repr, meant))}?)"
     return nearest(name, UNITS) if len(name) > 1 else ""
 
 

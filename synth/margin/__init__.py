@@ -18,6 +18,12 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from synth.margin.exact import ExactLimit as ExactLimit
     from synth.margin.find import margin as margin
+    from synth.margin.gap import SmallestGap as SmallestGap
+    from synth.margin.gap import TimeGapPolicy as TimeGapPolicy
+    from synth.margin.gap import gap_table as gap_table
+    from synth.margin.gap import smallest_gap as smallest_gap
+    from synth.margin.hop_finding import HopMargin as HopMargin
+    from synth.margin.hop_finding import hop_margin as hop_margin
     from synth.margin.result import LinkTolerance as LinkTolerance
     from synth.margin.result import Margin as Margin
     from synth.margin.roots import rightmost_roots as rightmost_roots
@@ -28,23 +34,35 @@ if TYPE_CHECKING:
 _HOMES = {
     "ExactLimit": "exact",
     "FiniteLink": "tolerance",
+    "HopMargin": "hop_finding",
     "LinkTolerance": "result",
     "Margin": "result",
+    "SmallestGap": "gap",
+    "TimeGapPolicy": "gap",
     "finite_link_tolerances": "tolerance",
+    "gap_table": "gap",
+    "hop_margin": "hop_finding",
     "margin": "find",
     "pattern_link_tolerances": "tolerance",
     "rightmost_roots": "roots",
+    "smallest_gap": "gap",
 }
 
 __all__ = [
     "ExactLimit",
     "FiniteLink",
+    "HopMargin",
     "LinkTolerance",
     "Margin",
+    "SmallestGap",
+    "TimeGapPolicy",
     "finite_link_tolerances",
+    "gap_table",
+    "hop_margin",
     "margin",
     "pattern_link_tolerances",
     "rightmost_roots",
+    "smallest_gap",
 ]
 
 

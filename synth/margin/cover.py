@@ -67,24 +67,34 @@ def stable_at_every_angle(loop: Loop, budget: int = 400_000) -> Covering:
     """Show that every root of ``loop`` lies in Re s < 0 at every angle theta, for exactly the declared delays.
 
     First no root of theta = 0 lies in Re s >= 0 (a box of that half plane, outside of which there is none); then no
-    root lies on the imaginary axis for any theta in [0, pi]. Roots move continuously with theta and cannot come from
+    root lies on the imaginary axis for any theta in [0, pi] (in more directions: times [-pi, pi] for the others).
+    Roots move continuously with theta and cannot come from
     infinity, so none ever reaches the right half plane; theta < 0 follows by conjugation.
     """
     if not np.isfinite(loop.radius):
         return Covering(False, 0)
-    R = loop.radius
+    R, d = loop.radius, loop.directions
+
+    def angles(points: NDArray[np.float64]) -> NDArray[np.float64]:
+        return points[:, 0] if d == 1 else points
 
     def right_half(points: NDArray[np.float64]) -> ComplexArray:
-        return loop.matrix(np.zeros(len(points)), points[:, 0] + 1j * points[:, 1])
+        return loop.matrix(angles(np.zeros((len(points), d))), points[:, 0] + 1j * points[:, 1])
 
     def axis(points: NDArray[np.float64]) -> ComplexArray:
-        return loop.matrix(points[:, 0], 1j * points[:, 1])
+        return loop.matrix(angles(points[:, :d]), 1j * points[:, d])
 
     still = cover(np.array([0.0, 0.0]), np.array([R, R]), right_half, np.array([loop.step_s, loop.step_s]), budget)
     if not still.complete:
         return Covering(False, still.boxes, (0.0, *(still.gap or ())))
-    turn = cover(np.array([0.0, -R]), np.array([np.pi, R]), axis, np.array([loop.step_theta, loop.step_s]), budget)
+    steps = np.array([*loop.steps_theta, loop.step_s])
+    turn = cover(_lowest(d, -R), np.array([*[np.pi] * d, R]), axis, steps, budget)
     return Covering(turn.complete, still.boxes + turn.boxes, turn.gap)
+
+
+def _lowest(directions: int, last: float) -> NDArray[np.float64]:
+    """The lower corner of half of all angles (the other half follows by conjugation), and one more number."""
+    return np.array([0.0, *[-np.pi] * (directions - 1), last])
 
 
 def no_crossing_between(family: LoopFamily, low: float, high: float, budget: int = 400_000) -> Covering:
@@ -100,12 +110,16 @@ def no_crossing_between(family: LoopFamily, low: float, high: float, budget: int
         R = _joint_bound(family, start, end)
         if not np.isfinite(R):
             return Covering(False, seen)
-        steps = np.array([family.step_kappa, max(e.step_theta for e in ends), max(e.step_s for e in ends)])
+        d = ends[0].directions
+        turns = np.max([e.steps_theta for e in ends], axis=0)
+        steps = np.array([family.step_kappa, *turns, max(e.step_s for e in ends)])
 
         def axis(points: NDArray[np.float64]) -> ComplexArray:
-            return family.matrix(points[:, 0], points[:, 1], 1j * points[:, 2])
+            theta = points[:, 1] if points.shape[1] == 3 else points[:, 1:-1]
+            return family.matrix(points[:, 0], theta, 1j * points[:, -1])
 
-        done = cover(np.array([start, 0.0, -R]), np.array([end, np.pi, R]), axis, steps, budget - seen)
+        lowest = np.concatenate([[start], _lowest(d, -R)])
+        done = cover(lowest, np.array([end, *[np.pi] * d, R]), axis, steps, budget - seen)
         seen += done.boxes
         if not done.complete:
             return Covering(False, seen, done.gap)

@@ -14,7 +14,8 @@ from math import inf, pi
 import numpy as np
 
 from synth.base.progress import Listener, silent
-from synth.margin.cover import no_crossing_between, stable_at_every_angle
+from synth.margin.cover import Covering, no_crossing_between, stable_at_every_angle
+from synth.margin.large import LargeFamily, LargeLoop, rightmost_of_large
 from synth.margin.roots import Root, candidates, encircled, polished
 from synth.margin.symbol import Loop, LoopFamily
 
@@ -22,23 +23,30 @@ CAP = 1000.0
 _RATIO = 1.1
 _FLOOR = 1e-3
 _BETWEEN = 1_200_000  # boxes: a few seconds for small cells
+_COVERED = 40  # rows of a symbol up to which coverings are tried
+_WOUND = 120  # rows up to which a winding number is followed
+_GRID = {2: 13, 3: 7}  # angles per direction between 0 and pi
+Family = LoopFamily | LargeFamily
 
 
 @dataclass(frozen=True)
 class ExactLimit:
     """Bracket [lower, upper] of the first factor at which the declared network breaks (see ``note``).
 
-    ``theta`` (rad per cell, 0 to pi), ``wavelength`` (cells per period, inf: all alike) and ``frequency`` (rad/s)
-    describe the mode that breaks. ``lower_certified``: a covering shows the network stable at ``lower``;
+    ``theta`` (rad per cell, 0 to pi; one number per direction in two and three dimensions, None for members),
+    ``wavelength`` (cells per period, inf: all alike) and ``frequency`` (rad/s) describe the mode that breaks.
+    ``lower_certified``: a covering shows the network stable at ``lower``;
     ``upper_certified``: a polished root with positive real part, and a winding number about it, at ``upper``.
     ``capped``: nothing failed up to ``cap``, so ``upper`` is inf only because nothing more is known.
     ``between_certified``: a covering shows that nothing breaks between today's strength (or the factor proven by other
     means) and ``lower``, so that this is the first failure; otherwise the factors in between were scanned in steps.
+    ``about`` says in words what breaks at ``upper``. Where nothing could be judged the bracket is [0, inf) and ``note``
+    says why.
     """
 
     lower: float
     upper: float
-    theta: float | None = None
+    theta: float | tuple[float, ...] | None = None
     wavelength: float | None = None
     frequency: float | None = None
     cap: float = CAP
@@ -49,6 +57,7 @@ class ExactLimit:
     between_certified: bool = False
     with_delays: bool = True
     note: str = ""
+    about: str = "the nominal network"
 
     def as_json(self) -> dict[str, object]:
         """Plain data; infinity as 'inf'."""
@@ -58,14 +67,22 @@ class ExactLimit:
         return found
 
 
-def rightmost(loop: Loop) -> Root | None:
+def rightmost(loop: Loop | LargeLoop) -> Root | None:
     """The root with the largest real part over all angles: a grid in theta, refined about its best points.
 
-    None if no candidate could be polished. A search, not a proof; theta in [0, pi] is enough by conjugation.
+    None if no candidate could be polished. A search, not a proof; theta in [0, pi] is enough by conjugation (in more
+    directions: for the first of them).
     """
     from scipy.optimize import minimize_scalar
 
-    turns = max((abs(t.at) for t in loop.terms), default=0)
+    if isinstance(loop, LargeLoop):
+        return rightmost_of_large(loop)
+    if loop.directions > 1:
+        return _rightmost_on_lattice(loop)
+    if not any(t.at or t.delay for t in loop.terms) and loop.A.shape[0] == loop.states > _WOUND:
+        values = np.linalg.eigvals(loop.A + sum(t.J for t in loop.terms))  # many members: one matrix, nothing to polish
+        return Root(complex(values[np.argmax(values.real)]), 0.0, 0.0)
+    turns = max((int(np.abs(t.at).sum()) for t in loop.terms), default=0)
     grid = np.linspace(0.0, pi, 24 * max(turns, 1) + 1) if turns else np.array([0.0])
     heights = candidates(loop, grid, fine=False)[:, 0].real
 
@@ -86,8 +103,53 @@ def rightmost(loop: Loop) -> Root | None:
     return max(found, key=lambda r: r.s.real, default=None)
 
 
+def _rightmost_on_lattice(loop: Loop) -> Root | None:
+    """The same in two or three directions: a grid of waves, and a search downhill from the best of them."""
+    from scipy.optimize import minimize
+
+    d = loop.directions
+    reach = max((max(map(abs, t.at)) for t in loop.terms if not isinstance(t.at, int)), default=1) or 1
+    half = np.linspace(0.0, pi, (_GRID[d] - 1) * reach + 1)
+    full = np.concatenate([-half[:0:-1], half])
+    grid = np.stack(np.meshgrid(half, *[full] * (d - 1), indexing="ij"), axis=-1).reshape(-1, d)
+    heights = candidates(loop, grid, fine=False)[:, 0].real
+
+    def low(theta: np.ndarray) -> float:
+        return -float(candidates(loop, theta[None, :], fine=False)[0, 0].real)
+
+    best = grid[np.argsort(-heights)[:3]]
+    step = half[1] - half[0]
+    tries = [*best]
+    for start in best:
+        corners = np.vstack([start, start + step / 2 * np.eye(d)])
+        found = minimize(low, start, method="Nelder-Mead", options={"initial_simplex": corners, "xatol": 1e-6})
+        tries.append(np.asarray(found.x))
+    roots = [root for theta in tries for root in polished(loop, tuple(map(float, theta)), 2)]
+    return max(roots, key=lambda r: r.s.real, default=None)
+
+
+def _shown_stable(loop: Loop | LargeLoop, budget: int = 400_000) -> bool:
+    """Whether a covering shows every root in Re s < 0; not tried where the symbol is large."""
+    return isinstance(loop, Loop) and loop.A.shape[0] <= _COVERED and stable_at_every_angle(loop, budget).complete
+
+
+def _shown_between(family: Family, low: float, high: float) -> Covering:
+    if isinstance(family, LargeFamily) or family.A0.shape[0] > _COVERED:
+        return Covering(False, 0)
+    return no_crossing_between(family, low, high, _BETWEEN)
+
+
+def _shown_unstable(loop: Loop | LargeLoop, root: Root) -> bool:
+    return isinstance(loop, Loop) and loop.A.shape[0] <= _WOUND and encircled(loop, root)
+
+
+def unjudged(note: str, cap: float = CAP, delays: bool = True) -> ExactLimit:
+    """Nothing is known: the bracket [0, inf) and the reason."""
+    return ExactLimit(0.0, inf, cap=cap, with_delays=delays, note=note)
+
+
 def exact_limit(
-    family: LoopFamily,
+    family: Family,
     start: float = 1.0,
     cap: float = CAP,
     width: float = 1e-3,
@@ -118,9 +180,9 @@ def _stable(root: Root | None) -> bool:
     return root is not None and root.s.real < -1e-9 * (1 + abs(root.s))
 
 
-def _unaffected(family: LoopFamily, root: Root, cap: float, delays: bool) -> ExactLimit:
+def _unaffected(family: Family, root: Root, cap: float, delays: bool) -> ExactLimit:
     stable = _stable(root)
-    certified = stable and stable_at_every_angle(family.at(1.0)).complete
+    certified = stable and _shown_stable(family.at(1.0))
     note = "the scaled links lie on no closed path, so no mode depends on their strength."
     value = inf if stable else 0.0
     return ExactLimit(
@@ -128,7 +190,7 @@ def _unaffected(family: LoopFamily, root: Root, cap: float, delays: bool) -> Exa
     )
 
 
-def _upward(family: LoopFamily, start: float, cap: float, width: float, progress: Listener) -> ExactLimit:
+def _upward(family: Family, start: float, cap: float, width: float, progress: Listener) -> ExactLimit:
     low = start
     while low < cap:
         high = min(low * _RATIO, cap)
@@ -137,16 +199,16 @@ def _upward(family: LoopFamily, start: float, cap: float, width: float, progress
             return _first(family, start, _bracket(family, low, high, width, cap, True))
         progress(f"declared network stable at {high:.4g} times today's strength")
         low = high
-    certified = stable_at_every_angle(family.at(cap)).complete
+    certified = _shown_stable(family.at(cap))
     limit = ExactLimit(cap, inf, cap=cap, capped=True, lower_certified=certified, with_delays=family.delayed)
     limit = _first(family, start, limit)
     word = "nothing fails" if limit.between_certified else "no failure was found"
     return replace(limit, note=f"{word} up to {cap:g} times today's strength; beyond that nothing is said.")
 
 
-def _first(family: LoopFamily, start: float, limit: ExactLimit) -> ExactLimit:
+def _first(family: Family, start: float, limit: ExactLimit) -> ExactLimit:
     """Try to show that nothing breaks between ``start`` and the lower end, and say which it is."""
-    sure = limit.lower_certified and no_crossing_between(family, start, limit.lower, _BETWEEN).complete
+    sure = limit.lower_certified and _shown_between(family, start, limit.lower).complete
     ending = (
         "a covering shows that nothing breaks before it."
         if sure
@@ -155,7 +217,7 @@ def _first(family: LoopFamily, start: float, limit: ExactLimit) -> ExactLimit:
     return replace(limit, between_certified=sure, note=f"first failure going up from today's strength; {ending}")
 
 
-def _downward(family: LoopFamily, first: Root, cap: float, width: float, progress: Listener) -> ExactLimit:
+def _downward(family: Family, first: Root, cap: float, width: float, progress: Listener) -> ExactLimit:
     high = 1.0
     while high > _FLOOR:
         low = high / _RATIO**2
@@ -168,12 +230,12 @@ def _downward(family: LoopFamily, first: Root, cap: float, width: float, progres
         lower=0.0,
         upper=high,
         nominal_stable=False,
-        upper_certified=encircled(family.at(1.0), first),
+        upper_certified=_shown_unstable(family.at(1.0), first),
         note=f"the network is not stable at any factor tried between {high:.2g} and 1, today's strength included.",
     )
 
 
-def _bracket(family: LoopFamily, low: float, high: float, width: float, cap: float, stable: bool) -> ExactLimit:
+def _bracket(family: Family, low: float, high: float, width: float, cap: float, stable: bool) -> ExactLimit:
     """Bisect between a stable and a failing factor, then certify both ends (moving them outward within the width)."""
     while high - low > width / 4 * high:
         middle = (low + high) / 2
@@ -186,7 +248,7 @@ def _bracket(family: LoopFamily, low: float, high: float, width: float, cap: flo
     for step in range(4):
         upper = high * (1 + step * width / 8)
         found = rightmost(family.at(upper))
-        if found is not None and encircled(family.at(upper), found):
+        if found is not None and _shown_unstable(family.at(upper), found):
             upper_ok, witness = True, found
             break
     if not upper_ok:
@@ -194,7 +256,7 @@ def _bracket(family: LoopFamily, low: float, high: float, width: float, cap: flo
     lower, lower_ok = low, False
     for step in range(3):
         lower = low * (1 - step * width / 8)
-        if stable_at_every_angle(family.at(lower), 300_000).complete:
+        if _shown_stable(family.at(lower), 300_000):
             lower_ok = True
             break
     if not lower_ok:
@@ -219,12 +281,12 @@ def _describe(root: Root | None, delays: bool, cap: float) -> ExactLimit:
     """The mode that breaks, in the words of a person who watches the line."""
     if root is None:
         return ExactLimit(0.0, inf, cap=cap, with_delays=delays)
-    wavelength = inf if root.theta < 1e-9 else 2 * pi / root.theta
+    length = float(np.linalg.norm(root.theta))
     return ExactLimit(
         0.0,
         inf,
         theta=root.theta,
-        wavelength=wavelength,
+        wavelength=inf if length < 1e-9 else 2 * pi / length,
         frequency=abs(root.s.imag),
         cap=cap,
         with_delays=delays,

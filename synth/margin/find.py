@@ -7,20 +7,21 @@ from fractions import Fraction
 from math import inf
 from typing import Protocol
 
+import numpy as np
+
 from synth.base.errors import InputError, SynthError, nearest
 from synth.base.progress import Listener, silent
 from synth.base.provenance import Provenance
-from synth.gain import assemble
-from synth.gain.closed import close_network
+from synth.gain.sensitivity import LinkNetwork
 from synth.margin.coupling import CAP, CouplingLimit, Folded, Scaling, bottleneck, coupling_limit, tidy
-from synth.margin.exact import ExactLimit, exact_limit
+from synth.margin.folded import DRIFT
 from synth.margin.limits import has_limits, largest_within, worst_use
+from synth.margin.nominal import nominal_limits
 from synth.margin.redesign import NEAR_ONE, largest_redesigned
 from synth.margin.result import LinkTolerance, Margin
-from synth.margin.symbol import LoopFamily, loop_family
 from synth.margin.tolerance import pattern_link_tolerances
 from synth.network.gains import Gains
-from synth.network.model import Link, Network, need_fixed_pattern
+from synth.network.model import Link, Network
 from synth.proof import Certificate, prove
 
 
@@ -47,10 +48,14 @@ def margin(
     ``classes``: names of link classes to scale (None: all). ``own_parts``: whether the own part of a relative link
     grows with it (default yes). ``redesign``: also pick gains anew at each strength. ``width``: relative width of
     every bracket, between 1e-6 and 0.1. Raises InputError for an unknown class, a width outside that range, or gains
-    that do not fit. Law: proven_factor <= class_limit <= exact.upper (up to the widths), all as factors on today's
+    that do not fit. Every description of a network is taken; what an exact limit is about, and where there is none,
+    is said in its note. Law: proven_factor <= class_limit <= exact.upper (up to the widths), all as factors on today's
     strengths. Sources: theory (1), (2), (3), (15) and sections 6 and 9; the coverings are ours.
     """
-    need_fixed_pattern(network, "the margin")
+    if not isinstance(network, Network):
+        raise InputError(
+            f"the margin needs a network, not {type(network).__name__}; read a problem file first: synth.read(path)."
+        )
     gains = design_or_gains if isinstance(design_or_gains, Gains) else design_or_gains.gains
     chosen = _checked(network, gains, classes, width)
     scaling = Scaling(network, gains, chosen, own_parts, width / 20)
@@ -59,9 +64,7 @@ def margin(
     proven, certificate = _certify(scaling, limit, width)
     notes = _notes(scaling, limit, proven, certificate)
     progress("bracketing the strength at which the declared network breaks")
-    # The network as wired has its parameters at the middle of their tolerances and its curves on their centre lines.
-    family = loop_family(network.without_self_links(), gains, chosen, own_parts)
-    exact, fresh = _exact(family, scaling, limit, width, progress)
+    exact, fresh = nominal_limits(scaling, limit, width, progress)
     folded = scaling.folded(1.0)
     progress("looking at each link by itself")
     links = _links(scaling, folded, limit, width)
@@ -78,7 +81,7 @@ def margin(
         route="peak",
         classes=chosen,
         own_parts=own_parts,
-        relative=any(link.relative for link in network.links),
+        relative=any(link.relative for link in scaling.links),
         links=links,
         bottleneck=bottleneck(folded),
         within_limits_factor=within,
@@ -87,6 +90,7 @@ def margin(
         certificate=certificate,
         notes=notes,
         units_word=_units_word(network),
+        whole=_whole(network),
         provenance=Provenance(network.hash, {"classes": chosen, "own_parts": own_parts, "width": width, "cap": CAP}),
     )
 
@@ -94,8 +98,6 @@ def margin(
 def _checked(network: Network, gains: Gains, classes: tuple[str, ...] | None, width: float) -> tuple[str, ...] | None:
     if not 1e-6 <= width <= 0.1:
         raise InputError(f"width is {width}; a relative width between 1e-6 and 0.1 is accepted.")
-    if network.dimension != 1:
-        raise InputError(f"the pattern has dimension {network.dimension}; margins are computed for dimension 1.")
     for kind in network.kinds:
         if kind.name not in gains:
             raise InputError(f"the gains have no entry for kind {kind.name!r}; every kind of the network needs one.")
@@ -113,9 +115,26 @@ def _checked(network: Network, gains: Gains, classes: tuple[str, ...] | None, wi
 
 
 def _certify(scaling: Scaling, limit: CouplingLimit, width: float) -> tuple[float, Certificate | None]:
-    """The largest factor at or just below the one found at which a certificate is accepted, and that certificate."""
+    """The largest factor at or just below the one found at which a certificate is accepted, and that certificate.
+
+    Where certificates are not offered for the description the factor stands on the enclosure of the radius alone.
+    """
     if limit.proven <= 0:
         return 0.0, None
+    try:
+        return _certified(scaling, limit, width)
+    except InputError:
+        if _plain_pattern(scaling.network):
+            raise
+    return limit.proven, None
+
+
+def _plain_pattern(network: Network) -> bool:
+    fixed = not any(link.weakens or link.choice for link in network.links)
+    return network.description == "pattern" and network.dimension == 1 and fixed
+
+
+def _certified(scaling: Scaling, limit: CouplingLimit, width: float) -> tuple[float, Certificate | None]:
     if limit.unlimited:
         found = _proof(scaling, Fraction(1))
         return (inf, found) if found.proven else (0.0, None)
@@ -153,27 +172,12 @@ def _undisturbed(network: Network) -> Network:
     return replace(network, kinds=kinds)
 
 
-def _exact(
-    family: LoopFamily, scaling: Scaling, limit: CouplingLimit, width: float, progress: Listener
-) -> tuple[ExactLimit, ExactLimit]:
-    """The exact limit with the declared constant delays and with every link fresh; the proof covers both below it."""
-    start = max(1.0, min(limit.covered, 1e9)) if limit.nominal_proven else 1.0
-    cap = max(CAP, 2 * start)
-    exact = exact_limit(family, start, cap, width, scaling.unaffected, progress)
-    if not family.delayed:
-        return exact, exact
-    return exact, exact_limit(family.without_delays(), start, cap, width, scaling.unaffected, progress)
-
-
 def _links(scaling: Scaling, folded: Folded, limit: CouplingLimit, width: float) -> tuple[LinkTolerance, ...]:
     """Both tolerances of every link; none where today's network is not proven (then no single link has a margin)."""
     network = scaling.network
     if not network.links or not folded.stable or folded.radius()[1] >= 1:
         return ()
-    units = assemble(close_network(network, scaling.gains), network.links, width=scaling.width).unit_peaks
-    single = pattern_link_tolerances(
-        network, {kind.name: peak.upper for kind, peak in zip(network.kinds, units, strict=True)}
-    )
+    single = _single(scaling, folded)
     whole: dict[str, CouplingLimit] = {}
     for name in network.classes():
         alone = Scaling(network, scaling.gains, (name,), scaling.own_parts, scaling.width)
@@ -186,12 +190,44 @@ def _links(scaling: Scaling, folded: Folded, limit: CouplingLimit, width: float)
     )
 
 
+def _single(scaling: Scaling, folded: Folded) -> tuple[float | None, ...]:
+    """The factor on one copy of each link alone; of members the least over all copies, None where it is not offered.
+
+    Rows with alternatives (rules, links that may weaken) are no sums, and beside an edge copies differ: None.
+    """
+    network, plan = scaling.network, folded.plan
+    assert plan is not None
+    nothing: tuple[float | None, ...] = (None,) * len(network.links)
+    if network.description == "pattern" and network.dimension == 1 and plan.choice.max(initial=-1) < 0:
+        peaks = {network.kinds[spec.kind].name: p.upper for spec, p in zip(plan.specs, folded.peaks, strict=True)}
+        return pattern_link_tolerances(network, peaks)
+    if network.members is None or plan.choice.max(initial=-1) >= 0:
+        return nothing
+    return _least_over_copies(network, folded, nothing)
+
+
+def _least_over_copies(network: Network, folded: Folded, nothing: tuple[float | None, ...]) -> tuple[float | None, ...]:
+    plan = folded.plan
+    assert plan is not None
+    peaks = [folded.peaks[k].upper for k in plan.unit_spec.tolist()]
+    first = np.flatnonzero((plan.row_offer[plan.row] == 0) & (folded.role != DRIFT))  # one term per ray
+    strengths = [abs(float(link.strength)) for link in plan.links]
+    source = plan.source[first]
+    found = LinkNetwork.of(
+        peaks, plan.row_unit[source], plan.row_offer[source], plan.row_unit[plan.row[first]], plan.take[first],
+        np.array(strengths)[plan.link[first]],
+    ).tolerances()  # fmt: skip
+    least = np.full(len(network.links), inf)
+    np.minimum.at(least, plan.link[first], found)
+    return tuple(float(v) for v in least) if len(first) else nothing
+
+
 def _within(
     scaling: Scaling, proven: float, certificate: Certificate | None, width: float, progress: Listener
 ) -> tuple[float | None, bool]:
     """Largest factor within actuator limits and bands, and whether a certificate at that factor agrees."""
-    if not has_limits(scaling):
-        return None, False
+    if not has_limits(scaling) or proven <= 0:
+        return (0.0 if has_limits(scaling) else None), False
     progress("checking actuator limits and bands")
     if certificate is not None and proven < inf and not _peaks_set_aside(scaling, certificate):
         return proven, True  # the certificate at the proven factor already keeps every limit
@@ -214,7 +250,12 @@ def _notes(scaling: Scaling, limit: CouplingLimit, proven: float, certificate: C
     notes = []
     if not limit.nominal_proven:
         notes.append("today's network itself is not proven with these gains; the factor is below 1 or 0.")
-    if limit.proven > 0 and certificate is None:
+    if limit.proven > 0 and certificate is None and proven > 0:
+        notes.append(
+            "the radius is enclosed below 1 up to there; no certificate of this description was made, so no "
+            "stand-alone check has confirmed it."
+        )
+    elif limit.proven > 0 and certificate is None:
         notes.append(f"the search found {limit.proven:.6g}, but no certificate was accepted there; nothing is claimed.")
     if not limit.lost_confirmed:
         notes.append("the limit of the class is an estimate: no enclosure confirmed it within the width.")
@@ -247,11 +288,25 @@ def _peaks_set_aside(scaling: Scaling, certificate: Certificate) -> bool:
 
 def _words(link: Link) -> str:
     delay = f", up to {_decimal(link.delay)} s late" if link.delay else ""
-    return f"{link.name} ({link.source_kind}.{link.offer} at {link.at[0]:+d} -> {link.kind}.{link.take}{delay})"
+    at = f" at {' '.join(f'{step:+d}' for step in link.at)}" if link.at else ""
+    if link.choice:
+        at = " within its rule"
+    return f"{link.name} ({link.source_kind}.{link.offer}{at} -> {link.kind}.{link.take}{delay})"
 
 
 def _decimal(value: Fraction) -> str:
     return f"{float(value):g}"
+
+
+def _whole(network: Network) -> str:
+    """What the proof is about, to be read after 'for'."""
+    units = _units_word(network)
+    if network.members is not None:
+        return f"these {len(network.members.names)} units and no larger network"
+    if network.description == "rules":
+        return f"any number of {units} in every wiring within the rules, rewired at any time"
+    edges = " behind this edge" if len(network.edges) == 1 else " between these edges" if network.edges else ""
+    return f"any number of {units}{edges}"
 
 
 def _units_word(network: Network) -> str:

@@ -13,6 +13,7 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from fractions import Fraction
+from typing import Any
 
 from synth.base.caution import CAUTIONS
 from synth.base.errors import InputError
@@ -86,7 +87,8 @@ def _put(D: dict[Fraction, ExactMatrix], late: Fraction, column: Sequence[Number
     D[late] = D[late] + add if late in D else add
 
 
-Builder = Callable[[Fraction], "DelayLoop | tuple[QuasiPolynomial, QuasiPolynomial]"]
+Single = DelayLoop | tuple[QuasiPolynomial, QuasiPolynomial]
+Builder = Callable[[Fraction], "Single | list[DelayLoop]"]
 
 
 @dataclass(frozen=True)
@@ -140,8 +142,9 @@ def smallest_gap(
 ) -> SmallestGap:
     """Bracket the smallest time gap h (s) in [low, high] at which the hop claim of ``notion`` holds.
 
-    ``policy``: a TimeGapPolicy, or a call that gives, for an exact h, a DelayLoop with the outlet 'hop' or a pair
-    (numerator, denominator). ``width``: relative width of the bracket, 1e-6 to 0.5. Raises InputError for these.
+    ``policy``: a TimeGapPolicy, or a call that gives, for an exact h, a DelayLoop with the outlet 'hop', a list of
+    such (all must hold) or a pair (numerator, denominator). ``width``: relative width of the bracket, 1e-6 to 0.5.
+    Raises InputError for these.
     Law: the gap ``proven`` holds and ``breaks`` < ``proven`` does not, both decided in exact or interval arithmetic.
     """
     if notion not in NOTIONS:
@@ -168,14 +171,22 @@ class _Search:
     def holds(self, h: Fraction) -> bool | None:
         """Whether the claim holds at ``h``; None if neither was shown."""
         if h not in self.tried:
-            self.tried[h] = holds_at(self.build(h), self.notion)
+            verdicts = [holds_at(one, self.notion) for one in self._all(h)]
+            self.tried[h] = False if False in verdicts else None if None in verdicts else True
         return self.tried[h]
+
+    def _all(self, h: Fraction) -> list[Any]:
+        built = self.build(h)
+        return list(built) if isinstance(built, list) else [built]
 
     def constant_distance(self, h: Fraction) -> bool:
         """Whether the string keeps the same distance at every speed: T(0) = 1 and T'(0) = 0, exactly."""
-        num, den = _fraction(self.build(h))
-        n, d = num.taylor(1), den.taylor(1)
-        return n[0] == d[0] and n[1] == d[1]
+        for built in self._all(h):
+            num, den = _fraction(built)
+            n, d = num.taylor(1), den.taylor(1)
+            if n[0] == d[0] and n[1] == d[1]:
+                return True
+        return False
 
     def bracket(self, lowest: Fraction, highest: Fraction, width: float) -> tuple[Fraction | None, Fraction | None]:
         """A gap that holds and the largest smaller one found that does not."""
@@ -228,13 +239,11 @@ def _between(one: Fraction, two: Fraction) -> Fraction:
     return _rounded(math.sqrt(float(one) * float(two)))
 
 
-def _fraction(
-    built: DelayLoop | tuple[QuasiPolynomial, QuasiPolynomial],
-) -> tuple[QuasiPolynomial, QuasiPolynomial]:
+def _fraction(built: Single) -> tuple[QuasiPolynomial, QuasiPolynomial]:
     return built.transfer("hop") if isinstance(built, DelayLoop) else built
 
 
-def holds_at(built: DelayLoop | tuple[QuasiPolynomial, QuasiPolynomial], notion: str) -> bool | None:
+def holds_at(built: Single, notion: str) -> bool | None:
     """Whether the hop claim of ``notion`` holds for a loop: True or False, both proven, or None.
 
     An unstable loop does not hold. Peak: with T(0) = 1 the peak hop gain is 1 iff the impulse response has one sign.

@@ -10,10 +10,16 @@ from math import inf
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.sparse import coo_array, csr_array, eye_array
+from scipy.sparse.linalg import spsolve
 
-from synth.gain.closed import ClosedUnit, close_network
+from synth.gain.closed import ClosedUnit, close_plan
+from synth.gain.descriptions import across, section_wiring, settled_cells, wiring_of
 from synth.gain.guide import peak_gain_guide
-from synth.margin.coupling import Scaling, tidy
+from synth.gain.operator import GainOperator
+from synth.gain.plan import Indices, Wiring, plan_of_units, starts
+from synth.margin.folded import Scaling, rays_of, tidy
+from synth.network.model import Network
 
 Array = NDArray[np.float64]
 
@@ -29,41 +35,97 @@ def has_limits(scaling: Scaling) -> bool:
 def worst_use(scaling: Scaling, factor: float) -> float:
     """Estimate of the largest peak over its bound under the declared disturbances, from rest (inf: no proof).
 
-    Below one every actuator stays below its limit and every state and offered signal inside its band. Theory (3).
+    Below one every actuator stays below its limit and every state and offered signal inside its band. Theory (3). Of an
+    edge pattern: of the bulk and of sections cut off at the edges, which hear less than the whole line.
     """
     network = scaling.at(tidy(factor))
-    closed = close_network(network, scaling.gains)
-    tables = []
-    for unit in closed:
-        table = _tables(unit)
-        if table is None:
-            return inf
-        tables.append(table)
-    position = {unit.kind.name: i for i, unit in enumerate(closed)}
-    first = [sum(len(u.kind.offers) for u in closed[:i]) for i in range(len(closed))]
-    total = sum(len(u.kind.offers) for u in closed)
-    intake = [np.zeros((len(u.kind.takes), total)) for u in closed]  # |v| <= intake @ z
-    for link in network.links:
-        i, j = position[link.kind], position[link.source_kind]
-        column = first[j] + closed[j].kind.index("offers", link.offer)
-        intake[i][closed[i].kind.index("takes", link.take), column] += abs(float(link.strength))
-    M, b = np.zeros((total, total)), np.zeros(total)
-    for i, unit in enumerate(closed):
-        rows = slice(first[i], first[i] + len(unit.kind.offers))
-        from_links, from_outside = _parts(unit, tables[i], slice(0, len(unit.kind.offers)))
-        M[rows], b[rows] = from_links @ intake[i], from_outside
-    if total and np.max(np.abs(np.linalg.eigvals(M))) >= 1 - 1e-9:
+    return max(_worst_of(wiring, scaling) for wiring in _wirings(network))
+
+
+def _wirings(network: Network) -> list[Wiring]:
+    found = [wiring_of(network)]
+    if network.description == "edge pattern":
+        line = across(network)
+        found += [section_wiring(line, edge, 3 * settled_cells(line, edge)) for edge in line.edges]
+    return found
+
+
+def _worst_of(wiring: Wiring, scaling: Scaling) -> float:
+    plan = plan_of_units(wiring)
+    closed = close_plan(plan, scaling.gains)
+    tables = [_tables(unit) for unit in closed]
+    if any(table is None for table in tables):
         return inf
-    z = np.linalg.solve(np.eye(total) - M, b)
+    parts = [
+        _parts(unit, table, slice(0, len(table)))
+        for unit, table in zip(closed, tables, strict=True)
+        if table is not None
+    ]
+    spec = plan.unit_spec
+    takes = np.array([len(unit.kind.takes) for unit in closed], dtype=np.intp)[spec]
+    first_take, first_row = starts(takes), plan.first_row
+    rows, columns, values, b = [], [], [], np.zeros(plan.size)
+    for k, unit in enumerate(closed):
+        units, offers = np.flatnonzero(spec == k), len(unit.kind.offers)
+        for q in range(offers):
+            b[first_row[units] + q] = parts[k][1][q]
+            for take in range(len(unit.kind.takes)):
+                rows.append(first_row[units] + q)
+                columns.append(first_take[units] + take)
+                values.append(np.full(units.size, parts[k][0][q, take]))
+    ends = [np.concatenate(x) if x else np.zeros(0) for x in (values, rows, columns)]
+    heads = coo_array(
+        (ends[0], (ends[1].astype(int), ends[2].astype(int))), shape=(plan.size, int(first_take[-1]))
+    ).tocsr()
+    rays = rays_of(wiring)
+    at, source = first_take[rays.to] + rays.take, first_row[rays.source] + rays.offer
+    brought = _settled(heads, at, source, rays.strength, rays.group, b)
+    if brought is None:
+        return inf
     worst = 0.0
-    for i, unit in enumerate(closed):
-        from_links, from_outside = _parts(unit, tables[i], slice(0, len(tables[i])))
-        peaks = from_links @ (intake[i] @ z) + from_outside
-        kind = unit.kind
+    for k, unit in enumerate(closed):
+        units, kind = np.flatnonzero(spec == k), unit.kind
+        arriving = brought[first_take[units][:, None] + np.arange(len(kind.takes))]
+        peaks = (arriving @ parts[k][0].T + parts[k][1]).max(axis=0, initial=0.0)
         bounds = [s.band for s in kind.offers] + [a.limit for a in kind.inputs] + [s.band for s in kind.states]
         pairs = [(float(p), float(bound)) for p, bound in zip(peaks, bounds, strict=True) if bound is not None]
         worst = max([worst, *(_ratio(peak, bound) for peak, bound in pairs)])
     return worst
+
+
+def _settled(
+    heads: csr_array, take: Indices, source: Indices, strength: Array, group: Indices, b: Array
+) -> Array | None:
+    """What arrives at every take where z = heads (largest rays of z) + b; None if the radius is one or more.
+
+    Policies: the largest ray of every group, solve, choose again (the sizes only grow, so it ends).
+    """
+    size, width = heads.shape
+    z = b + (b == 0) * 1e-300
+    chosen = None
+    for _ in range(40):
+        value = strength * z[source]
+        order = np.lexsort((strength, value, group))
+        last = np.append(group[order][1:] != group[order][:-1], True) if group.size else np.zeros(0, dtype=bool)
+        again = np.sort(order[last])
+        if chosen is not None and np.array_equal(again, chosen):
+            break
+        chosen = again
+        web = coo_array((strength[chosen], (take[chosen], source[chosen])), shape=(width, size)).tocsr()
+        M = (heads @ web).tocsr()
+        if size and _too_large(M):
+            return None
+        z = np.atleast_1d(spsolve((eye_array(size, format="csc") - M).tocsc(), b)) if size else z
+    return np.asarray(web @ z) if size else np.zeros(width)
+
+
+def _too_large(M: csr_array) -> bool:
+    """Whether the Perron root is one or more: a small matrix by its eigenvalues, a large one by its operator."""
+    if M.shape[0] <= 60:
+        return bool(np.max(np.abs(np.linalg.eigvals(M.toarray()))) >= 1 - 1e-9)
+    entries = M.tocoo()
+    operator = GainOperator.from_links(M.shape[0], entries.row, entries.col, entries.data)
+    return operator.radius(1e-6).upper >= 1 - 1e-9
 
 
 def largest_within(scaling: Scaling, proven: float, width: float) -> float:

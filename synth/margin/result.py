@@ -19,13 +19,14 @@ class LinkTolerance:
 
     ``tolerance``: all its copies along the pattern, and all links of its class, get stronger together (own parts as
     the margin says; ``capped``: nothing failed up to that factor). ``single``: one copy only, its own part as it is;
-    inf where nothing that the link carries ever returns to it. ``link`` describes the line in words.
+    inf where nothing that the link carries ever returns to it, None where it is not offered.
+    ``link`` describes the line in words.
     """
 
     name: str
     link: str
     tolerance: float
-    single: float
+    single: float | None
     capped: bool = False
 
     def as_json(self) -> dict[str, object]:
@@ -69,6 +70,7 @@ class Margin:
     units_word: str
     provenance: Provenance
     smallest_gap: None = None
+    whole: str = "any number of units"
 
     def as_json(self) -> dict[str, object]:
         """Plain data with the keys of the contract; infinity as 'inf'."""
@@ -113,14 +115,20 @@ class Margin:
                 f"Under the declared disturbances every actuator and band stays inside its bound up to "
                 f"{_number_below(self.within_limits_factor)} times today's strength ({word})."
             )
+        lines.append(
+            "Proven here means that the radius is below 1; 'synth prove' asks for a radius of at most the target of "
+            "the goal, so it may refuse what is proven here with less room."
+        )
+        if self.exact.note:
+            lines.append(f"Where it breaks: {self.exact.note}")
         if self.exact.with_delays:
             lines.append(f"With every link fresh: {_breaks(self.exact_no_delay, self.units_word)}.")
         for link in self.links:
             reach = "at least " if link.capped else ""
-            lines.append(
-                f"{link.link}: the whole class may get {reach}{_number_below(link.tolerance)} times as strong, "
-                f"one single copy, its own part as it is, {_number_below(link.single)} times."
-            )
+            line = f"{link.link}: the whole class may get {reach}{_number_below(link.tolerance)} times as strong"
+            if link.single is not None:
+                line += f", one single copy, its own part as it is, {_number_below(link.single)} times"
+            lines.append(line + ".")
         if self.bottleneck:
             lines.append("Share in the radius: " + ", ".join(f"{n} {100 * s:.0f} %" for n, s in self.bottleneck) + ".")
         if self.redesigned is not None:
@@ -137,11 +145,11 @@ class Margin:
         if self.proven_factor <= 0:
             first = "Nothing is proven at any strength tried"
         elif isinf(self.proven_factor):
-            first = f"Proven at every strength for any number of {self.units_word}"
+            first = f"Proven at every strength for {self.whole}"
         else:
             upto = "up to" if self.covered >= self.proven_factor else "at"
             times = f"{_number_below(self.proven_factor)} times today's strength"
-            first = f"Proven {upto} {times} for any number of {self.units_word}"
+            first = f"Proven {upto} {times} for {self.whole}"
         if self.class_capped:
             second = "the class was not lost at any strength tried"
         elif isinf(self.class_limit):
@@ -151,7 +159,7 @@ class Margin:
         inside = ""
         if self.within_limits_factor is not None and self.within_limits_factor < self.proven_factor:
             inside = f" (inside actuator limits and bands up to {_number_below(self.within_limits_factor)})"
-        return f"{first}{inside}; {second}; the nominal network {_breaks(self.exact, self.units_word)}."
+        return f"{first}{inside}; {second}; {self.exact.about} {_breaks(self.exact, self.units_word)}."
 
     def __repr__(self) -> str:
         """The sentence."""
@@ -165,7 +173,7 @@ def _breaks(limit: ExactLimit, units: str) -> str:
     if isinf(limit.lower):
         return "never breaks, because no mode depends on these links"
     if isinf(limit.upper):
-        return "could not be judged"
+        return "could not be judged exactly"
     if not limit.nominal_stable and limit.lower <= 0:
         return "is unstable at every strength tried"
     parts = []

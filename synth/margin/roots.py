@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.margin.symbol import ComplexArray, Loop, Term
+from synth.margin.symbol import Angle, ComplexArray, Loop, Term
 
 
 @dataclass(frozen=True)
@@ -21,7 +21,7 @@ class Root:
     """A polished root ``s`` (1/s) at angle ``theta``; ``residual`` is |M(s) x| over the size of the parts of M."""
 
     s: complex
-    theta: float
+    theta: Angle
     residual: float
 
 
@@ -46,16 +46,19 @@ def rightmost_roots(
 
 
 def candidates(loop: Loop, thetas: NDArray[np.float64], fine: bool = True) -> ComplexArray:
-    """Approximate roots at each angle, shape (angles, roots), sorted by falling real part."""
+    """Approximate roots at each angle, shape (angles, roots), sorted by falling real part.
+
+    ``thetas``: shape (angles,) on a line, (angles, directions) otherwise.
+    """
     nodes = _nodes(loop, fine)
-    stack = np.stack([_discretised(loop, float(theta), nodes)[0] for theta in thetas])
+    stack = np.stack([_discretised(loop, _angle(theta), nodes)[0] for theta in thetas])
     if loop.A.shape[0] == loop.states:
         found = np.linalg.eigvals(stack)
     else:
         from scipy.linalg import eigvals
 
         found = np.stack(
-            [eigvals(m, _discretised(loop, float(t), nodes)[1]) for m, t in zip(stack, thetas, strict=True)]
+            [eigvals(m, _discretised(loop, _angle(t), nodes)[1]) for m, t in zip(stack, thetas, strict=True)]
         )
         found = np.where(np.isfinite(found) & (np.abs(found) < 1e8), found, -1e300)
     order = np.argsort(-found.real, axis=1)
@@ -63,7 +66,11 @@ def candidates(loop: Loop, thetas: NDArray[np.float64], fine: bool = True) -> Co
     return sorted_roots
 
 
-def polished(loop: Loop, theta: float, count: int = 1) -> tuple[Root, ...]:
+def _angle(theta: NDArray[np.float64]) -> Angle:
+    return float(theta) if np.ndim(theta) == 0 else tuple(float(t) for t in theta)
+
+
+def polished(loop: Loop, theta: Angle, count: int = 1) -> tuple[Root, ...]:
     """The ``count`` rightmost roots at one angle after Newton's method; fewer if some did not converge."""
     rough = candidates(loop, np.array([theta]))[0]
     found: list[Root] = []
@@ -75,7 +82,7 @@ def polished(loop: Loop, theta: float, count: int = 1) -> tuple[Root, ...]:
     return tuple(found[:count])
 
 
-def polish(loop: Loop, theta: float, guess: complex) -> Root | None:
+def polish(loop: Loop, theta: Angle, guess: complex) -> Root | None:
     """Newton on M(s) x = 0 with a normalised vector; None if the residual does not become small."""
     angle = np.array([theta])
     M = loop.matrix(angle, np.array([guess]))[0]
@@ -114,7 +121,7 @@ def encircled(loop: Loop, root: Root) -> bool:
         return False
     for points in (64, 512, 4096):
         circle = root.s + radius * np.exp(2j * np.pi * np.arange(points + 1) / points)
-        values = np.linalg.det(loop.matrix(np.full(points + 1, root.theta), circle))
+        values = np.linalg.det(loop.matrix(np.repeat(np.array([root.theta]), points + 1, axis=0), circle))
         if np.any(values == 0):
             return True
         turns = np.angle(values[1:] / values[:-1])
@@ -132,7 +139,7 @@ def _nodes(loop: Loop, fine: bool) -> int:
     return int(np.clip(np.ceil(8 + reach), 10, 40 if fine else 16))
 
 
-def _discretised(loop: Loop, theta: float, nodes: int) -> tuple[ComplexArray, ComplexArray]:
+def _discretised(loop: Loop, theta: Angle, nodes: int) -> tuple[ComplexArray, ComplexArray]:
     """Matrices (left, right) of the eigenvalue problem left u = s right u for the loop at one angle."""
     now, late = loop.split(theta)
     size = len(now)

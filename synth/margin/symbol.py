@@ -19,9 +19,11 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.gain.closed import ClosedUnit, close_network
+from synth.gain.closed import ClosedUnit, close_plan
+from synth.gain.descriptions import wiring_of
+from synth.gain.plan import Wiring, plan_of_units
 from synth.network.gains import Gains
-from synth.network.model import Link, Network
+from synth.network.model import Kind, Link, Network
 
 Array = NDArray[np.float64]
 ComplexArray = NDArray[np.complexfloating[Any, Any]]
@@ -29,12 +31,27 @@ ComplexArray = NDArray[np.complexfloating[Any, Any]]
 
 @dataclass(frozen=True)
 class Term:
-    """One link in the symbol: matrix ``J`` (strength included), cell offset, delay (s), whether kappa multiplies it."""
+    """One link in the symbol: matrix ``J`` (strength included), cell offset, delay (s), whether kappa multiplies it.
+
+    ``at`` is a whole number on a line and for members (0), and one per direction in two and three dimensions.
+    """
 
     J: Array
-    at: int
+    at: int | tuple[int, ...]
     delay: float
     scaled: bool
+
+
+Angle = float | tuple[float, ...]
+
+
+def _turn(at: int | tuple[int, ...], theta: Angle) -> float:
+    return float(phases(at, np.array([theta], dtype=float))[0])
+
+
+def phases(at: int | tuple[int, ...], theta: Array) -> Array:
+    """at . theta (rad) at ``k`` angles: ``theta`` has the shape (k,) on a line, (k, directions) otherwise."""
+    return theta * at if isinstance(at, int) else theta @ np.array(at, dtype=float)
 
 
 @dataclass(frozen=True)
@@ -58,22 +75,37 @@ class Loop:
         """M at ``k`` points at once: two arrays of shape (k,) give an array of shape (k, size, size)."""
         found: ComplexArray = s[:, None, None] * self.E - self.A
         for term in self.terms:
-            found = found - np.exp(1j * term.at * theta - s * term.delay)[:, None, None] * term.J
+            found = found - np.exp(1j * phases(term.at, theta) - s * term.delay)[:, None, None] * term.J
         return found
 
-    def slope(self, theta: float, s: complex) -> ComplexArray:
+    @property
+    def directions(self) -> int:
+        """How many angles a mode has: 1 on a line (and for members, whose terms do not turn), else 2 or 3."""
+        first = self.terms[0].at if self.terms else 0
+        return 1 if isinstance(first, int) else len(first)
+
+    @property
+    def steps_theta(self) -> tuple[float, ...]:
+        """Bound on the change (2-norm) of M per unit of every angle, in Re s >= 0."""
+        if self.directions == 1:
+            return (self.step_theta,)
+        norms = [float(np.linalg.norm(t.J, 2)) for t in self.terms]
+        offsets = np.array([np.abs(t.at) for t in self.terms], dtype=float)
+        return tuple(float(v) for v in np.array(norms) @ offsets)
+
+    def slope(self, theta: Angle, s: complex) -> ComplexArray:
         """dM/ds at one point."""
         found = self.E.astype(complex)
         for term in self.terms:
-            found = found + term.delay * np.exp(1j * term.at * theta - s * term.delay) * term.J
+            found = found + term.delay * np.exp(1j * _turn(term.at, theta) - s * term.delay) * term.J
         return found
 
-    def split(self, theta: float) -> tuple[ComplexArray, list[tuple[ComplexArray, float]]]:
+    def split(self, theta: Angle) -> tuple[ComplexArray, list[tuple[ComplexArray, float]]]:
         """A with the undelayed links added at this angle, and (matrix, delay) per distinct positive delay."""
         now = self.A.astype(complex)
         late: dict[float, ComplexArray] = {}
         for term in self.terms:
-            J = np.exp(1j * term.at * theta) * term.J
+            J = np.exp(1j * _turn(term.at, theta)) * term.J
             if term.delay == 0:
                 now = now + J
             else:
@@ -100,14 +132,14 @@ class LoopFamily:
         terms = tuple(Term(t.J * kappa, t.at, t.delay, t.scaled) if t.scaled else t for t in self.terms)
         norms = [float(np.linalg.norm(t.J, 2)) for t in terms]
         step_s = 1.0 + sum(norm * t.delay for norm, t in zip(norms, terms, strict=True))
-        step_theta = sum(norm * abs(t.at) for norm, t in zip(norms, terms, strict=True))
+        step_theta = sum(norm * float(np.abs(t.at).sum()) for norm, t in zip(norms, terms, strict=True))
         return Loop(self.E, A, terms, self.states, root_bound(A, terms, self.states), step_s, step_theta)
 
     def matrix(self, kappa: Array, theta: Array, s: ComplexArray) -> ComplexArray:
         """M at ``k`` points at once, the factor included: three arrays of shape (k,) give shape (k, size, size)."""
         found: ComplexArray = s[:, None, None] * self.E - self.A0 - kappa[:, None, None] * self.A1
         for term in self.terms:
-            wave = np.exp(1j * term.at * theta - s * term.delay)
+            wave = np.exp(1j * phases(term.at, theta) - s * term.delay)
             found = found - (wave * kappa if term.scaled else wave)[:, None, None] * term.J
         return found
 
@@ -133,16 +165,20 @@ def loop_family(
 ) -> LoopFamily:
     """The symbol of ``network`` under ``gains`` when kappa multiplies the links of ``classes`` (None: all).
 
-    ``own_parts`` says whether the own part of a relative link grows with it. Patterns of dimension one.
+    ``own_parts`` says whether the own part of a relative link grows with it. Patterns of any dimension, members (one
+    cell that holds every unit), and of an edge pattern the bulk. Links that may weaken stand at their full strength.
+    Raises InputError for rules, which describe no single network.
     """
-    none = close_network(network.scaled(Fraction(0), classes, own_parts), gains)
-    full = close_network(network, gains)
-    feed = any(any(unit.F.rows[unit.kind.index("offers", link.offer)]) for unit, link in _sources(full, network.links))
-    A0, first = _blocks([unit.A.floats() for unit in none]), _starts([unit.A.shape[0] for unit in none])
-    A1 = _blocks([(a.A - b.A).floats() for a, b in zip(full, none, strict=True)])
-    n = A0.shape[0]
-    inlet = _starts([unit.D.shape[1] for unit in full])
-    taken = sum(unit.D.shape[1] for unit in full) if feed else 0
+    network.refuse_beyond("the symbol", "pattern", "members", "edge pattern")
+    wiring = wiring_of(network)
+    full, none = _units(wiring, gains), _units(wiring_of(network.scaled(Fraction(0), classes, own_parts)), gains)
+    links, kinds = wiring.links, wiring.kinds
+    arrivals = _arrivals(network, wiring)
+    feed = any(any(full[j].F.rows[_place(kinds, links[n])[1]]) for _, j, n, _ in arrivals)
+    states, inlets = [unit.A.shape[0] for unit in full], [unit.D.shape[1] for unit in full]
+    first, inlet = _starts(states), _starts(inlets)
+    A0, A1 = _blocks([unit.A.floats() for unit in none]), _blocks(_changes(full, none))
+    n, taken = A0.shape[0], sum(inlets) if feed else 0
     E = np.diag([1.0] * n + [0.0] * taken)
     pad = np.zeros((n + taken, n + taken))
     big0, big1 = pad.copy(), pad.copy()
@@ -150,28 +186,59 @@ def loop_family(
     if feed:
         big0[:n, n:] = _blocks([unit.D.floats() for unit in full])
         big0[n:, n:] = -np.eye(taken)
-    position = {unit.kind.name: i for i, unit in enumerate(full)}
-    terms = []
-    for link in network.links:
-        i, j = position[link.kind], position[link.source_kind]
-        k, q = full[i].kind.index("takes", link.take), full[j].kind.index("offers", link.offer)
-        J = pad.copy()
-        columns = slice(first[j], first[j] + full[j].A.shape[0])
+    found: dict[tuple[int | tuple[int, ...], float, bool, int], Array] = {}
+    blocks: dict[tuple[int, int, int], Array] = {}
+    for i, j, number, at in arrivals:
+        link = links[number]
+        take, offer = _place(kinds, link)
+        scaled = (classes is None or link.name in classes) and (own_parts or not link.own_part)
+        # On a lattice every link stays a term of its own; of members all with one delay are one matrix.
+        key = (at, float(link.delay), scaled, -1 if network.members is not None else number)
+        J = found.setdefault(key, pad.copy())
+        columns = slice(first[j], first[j] + states[j])
         if feed:
-            J[n + inlet[i] + k, columns] = full[j].H.row(q).scaled(link.strength).floats()[0]
-            wide = slice(n + inlet[j], n + inlet[j] + full[j].D.shape[1])
-            J[n + inlet[i] + k, wide] = full[j].F.row(q).scaled(link.strength).floats()[0]
+            J[n + inlet[i] + take, columns] += full[j].H.row(offer).scaled(link.strength).floats()[0]
+            wide = slice(n + inlet[j], n + inlet[j] + inlets[j])
+            J[n + inlet[i] + take, wide] += full[j].F.row(offer).scaled(link.strength).floats()[0]
         else:
-            block = full[i].D.column(k).scaled(link.strength) @ full[j].H.row(q)
-            J[first[i] : first[i] + full[i].A.shape[0], columns] = block.floats()
-        if np.any(J):
-            terms.append(Term(J, link.at[0], float(link.delay), classes is None or link.name in classes))
-    return _balanced(LoopFamily(E, big0, big1, tuple(terms), n))
+            same = (id(full[i]), id(full[j]), number)
+            if same not in blocks:
+                blocks[same] = (full[i].D.column(take).scaled(link.strength) @ full[j].H.row(offer)).floats()
+            J[first[i] : first[i] + states[i], columns] += blocks[same]
+    terms = tuple(Term(J, at, delay, scaled) for (at, delay, scaled, _), J in found.items() if np.any(J))
+    return _balanced(LoopFamily(E, big0, big1, terms, n))
 
 
-def _sources(units: Sequence[ClosedUnit], links: Sequence[Link]) -> list[tuple[ClosedUnit, Link]]:
-    by_name = {unit.kind.name: unit for unit in units}
-    return [(by_name[link.source_kind], link) for link in links]
+def _units(wiring: Wiring, gains: Gains) -> list[ClosedUnit]:
+    """Every unit with its loop closed; units of one specification are one object."""
+    plan = plan_of_units(wiring)
+    closed = close_plan(plan, gains)
+    return [closed[k] for k in plan.unit_spec.tolist()]
+
+
+def _changes(full: Sequence[ClosedUnit], none: Sequence[ClosedUnit]) -> list[Array]:
+    known: dict[tuple[int, int], Array] = {}
+    for a, b in zip(full, none, strict=True):
+        if (id(a), id(b)) not in known:
+            known[id(a), id(b)] = (a.A - b.A).floats()
+    return [known[id(a), id(b)] for a, b in zip(full, none, strict=True)]
+
+
+def _arrivals(network: Network, wiring: Wiring) -> list[tuple[int, int, int, int | tuple[int, ...]]]:
+    """(receiving unit, sending unit, link, offset) of everything that is sent by a unit that is there."""
+    found: list[tuple[int, int, int, int | tuple[int, ...]]] = []
+    for i, j, number in zip(wiring.to.tolist(), wiring.source.tolist(), wiring.link.tolist(), strict=True):
+        link = wiring.links[number]
+        if j >= 0 and link.strength != 0:
+            at: int | tuple[int, ...] = link.at if network.dimension > 1 else link.at[0] if link.at else 0
+            found.append((i, j, number, at))
+    return found
+
+
+def _place(kinds: Sequence[Kind], link: Link) -> tuple[int, int]:
+    """Position of the link's take in the receiving kind and of its offer in the sending one."""
+    by_name = {kind.name: kind for kind in kinds if kind.name in (link.kind, link.source_kind)}
+    return by_name[link.kind].index("takes", link.take), by_name[link.source_kind].index("offers", link.offer)
 
 
 def _starts(sizes: list[int]) -> list[int]:

@@ -11,6 +11,7 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 
 from synth.base.exact import ExactMatrix
+from synth.base.unit_text import quotient
 from synth.base.units import Unit
 from synth.network.bounds import Box, Dual, Line, Located, evaluate, line_of
 from synth.network.curves import NoBand, Surroundings
@@ -201,7 +202,7 @@ def _no_rest(i: int, rows: Sequence[Row], draft: Draft, model: Model, rest: Mapp
     names = {name: Dual(value) for name, value in rest.items()}
     names |= {name: Dual(Interval.of(draft.parameters[name][0])) for name in draft.ranges}
     value = rounded(evaluate(row.formula, Box(names, {})).value.middle / row.unit.factor)
-    unit = f"({row.text})/s" if row.group == "states" else row.text
+    unit = quotient(row.text, "s") if row.group == "states" else row.text
     path = model.table.path if node is None else node.path
     if draft.pointed:
         draft.problems.add(
@@ -332,7 +333,7 @@ def _uncertain_entry(entry: UncertainEntry, rows: Sequence[Row], columns: Sequen
     i = [k for k, row in enumerate(rows) if row.group == down][entry.row]
     j = [k for k, column in enumerate(columns) if column.group == across][entry.column]
     name = f"tolerance of {entry.matrix}[{entry.row + 1},{entry.column + 1}]"
-    unit = f"({rows[i].text})/s" if down == "states" else rows[i].text
+    unit = quotient(rows[i].text, "s") if down == "states" else rows[i].text
     inner.takes.append(InnerSource(name, unit, tuple(Fraction(int(k == i)) for k in range(len(rows)))))
     offer = InnerOffer(Signal(name, columns[j].text), tuple(Fraction(int(k == j)) for k in range(len(columns))))
     inner.connect(offer, name, entry.half, "tolerance")

@@ -103,14 +103,14 @@ def grouped(
     names: dict[str, str] = {}
     if isinstance(node, Table):
         names = _named_groups(node, kinds, bases, problems)
-    elif isinstance(node, Scalar) and node.value in ("per_kind", "per_place"):
+    elif isinstance(node, Scalar) and node.value in ("per_kind", "per_place", "per_unit"):
         names = {
             kind.name: bases.get(kind.name, kind.name) if node.value == "per_kind" else kind.name for kind in kinds
         }
     elif node is not None and not (isinstance(node, Scalar) and node.value is None):
         problems.add(
-            f"{node.path}: accepted are 'per_kind' (places of one kind carry the same gains), 'per_place', and a "
-            "mapping of gain sets such as '{crew: [front, middle], tail: [rear]}'.",
+            f"{node.path}: accepted are 'per_kind' (units of one kind carry the same gains), 'per_place' or "
+            "'per_unit', and a mapping of gain sets such as '{crew: [front, middle], tail: [rear]}'.",
             node,
         )
     found = tuple(replace(kind, group=names.get(kind.name, kind.group)) for kind in kinds)

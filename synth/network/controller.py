@@ -17,6 +17,7 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 
 from synth.base.exact import ExactMatrix
+from synth.base.unit_text import product, quotient
 from synth.network.model import Actuator, Kind, Signal
 
 Rows = list[list[Fraction]]
@@ -145,11 +146,9 @@ class _Names:
         estimated = kind.states if wanted.estimator is not None else ()
         estimates = tuple(Signal(f"{s.name}_estimate", s.unit) for s in estimated)
         innovations = tuple(Signal(f"{name}_innovation", units[name]) for name in wanted.estimator or ())
-        integrals = tuple(
-            Signal(f"{name}_integral", "s" if units[name] == "1" else f"({units[name]}) s") for name in wanted.integrals
-        )
+        integrals = tuple(Signal(f"{name}_integral", product(units[name], "s")) for name in wanted.integrals)
         memory = tuple(Signal(f"memory_{k + 1}", "1") for k in range(wanted.memory))
-        rates = tuple(Actuator(f"{s.name}_correction", f"({s.unit})/s") for s in estimated)
+        rates = tuple(Actuator(f"{s.name}_correction", quotient(s.unit, "s")) for s in estimated)
         return _Names(
             (*estimates, *integrals, *memory),
             (*rates, *(Actuator(f"{s.name}_rate", "1/s") for s in memory)),

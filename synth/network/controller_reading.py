@@ -56,6 +56,7 @@ def _sensors(node: Node | None, kind: Kind, example: str, problems: Problems) ->
     """The sensors that a list names, each once."""
     names = [s.name for s in kind.sensors]
     found: list[str] = []
+    before = problems.count
     items = items_of(node, problems, example)
     for item in items:
         name = text_of(item, problems, "the name of a sensor")
@@ -75,7 +76,7 @@ def _sensors(node: Node | None, kind: Kind, example: str, problems: Problems) ->
                 f"{', '.join(names) or 'none'}.",
                 item,
             )
-    if node is not None and not items and isinstance(node.path, str):
+    if node is not None and not items and problems.count == before:
         problems.add(f"{node.path}: name at least one sensor, such as '{example}'.", node)
     return tuple(dict.fromkeys(found))
 

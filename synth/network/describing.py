@@ -9,6 +9,7 @@ from synth.network.model import Kind, Network
 from synth.network.words import counted, said
 
 MOST_VALUES = 6
+MOST_ROWS = 4  # of a matrix whose entries are printed
 
 
 def internal(name: str) -> bool:
@@ -40,6 +41,7 @@ def kind_text(kind: Kind, modes: tuple[complex, ...], names: tuple[str, ...] = (
     lines += _signals("offers", [f"{s.name} ({s.unit}{band(s.band)})" for s in kind.offers if not internal(s.name)])
     lines += _signals("sensors", [f"{s.name} ({s.unit})" for s in kind.sensors])
     lines += [f"  {key:<13} {text}" for key, text in kind.equations.items()]
+    lines += [] if kind.equations else _matrices_text(kind)
     lines += _rest_text(kind)
     lines += inner_text(kind)
     lines.append(f"  {'modes alone':<13} {', '.join(mode_text(m) for m in modes)} (1/s, before any feedback)")
@@ -48,6 +50,25 @@ def kind_text(kind: Kind, modes: tuple[complex, ...], names: tuple[str, ...] = (
 
 def _signals(label: str, parts: list[str]) -> list[str]:
     return [f"  {label:<13} {', '.join(parts)}"] if parts else []
+
+
+def _matrices_text(kind: Kind) -> list[str]:
+    """The dynamics of a kind given by matrices: the entries of small ones, the size of large ones."""
+    wanted = (("A", kind.states, kind.states), ("B", kind.states, kind.inputs), ("D", kind.states, kind.takes),
+              ("E", kind.states, kind.disturbances), ("C", kind.sensors, kind.states))  # fmt: skip
+    lines = []
+    for name, down, across in wanted:
+        if not down or not across:
+            continue
+        rows = getattr(kind, name).rows
+        if len(down) <= MOST_ROWS and len(across) <= MOST_ROWS:
+            text = f"[{'; '.join(' '.join(said(value) for value in row) for row in rows)}]"
+        else:
+            filled = sum(value != 0 for row in rows for value in row)
+            text = f"{len(down)} x {len(across)}, {filled} entries not zero"
+        lines.append(f"  {name:<13} {text}")
+    lines.append("  (declared units, time in s: x' = A x + B u + D v + E w with inputs u, takes v, disturbances w)")
+    return lines
 
 
 def _rest_text(kind: Kind) -> list[str]:

@@ -76,13 +76,13 @@ class Description:
     def as_text(self) -> str:
         """Lines for a person."""
         network = self.network
-        lines = [network.title, "=" * len(network.title), "", *_layout_text(network)]
+        lines = [network.title, "=" * len(network.title), "", *layout_text(network)]
         shown = _one_of_each(network)
         for kind, names in shown[:MOST_KINDS]:
             lines += ["", *kind_text(kind, self.modes[kind.name], names), *variants_text(network, kind)]
         if len(shown) > MOST_KINDS:
             lines += ["", f"... and {len(shown) - MOST_KINDS} more kinds (all of them with --json)."]
-        lines += ["", "Links", *_links_text(network), *_edges_text(network)]
+        lines += ["", "Links", *_links_text(network), *edges_text(network)]
         lines += ["", "Intake (sum of absolute strengths that may enter a taken signal of one unit)"]
         units = intake_of(network).units
         lines += [
@@ -183,7 +183,8 @@ def _names(kinds: Iterable[Kind]) -> str:
     return ", ".join(kind.name for kind in kinds)
 
 
-def _layout_text(network: Network) -> list[str]:
+def layout_text(network: Network) -> list[str]:
+    """How many units there are, how they are arranged, and what a proof holds for; shared gains below it."""
     members = network.members
     if members is not None:
         counts = Counter(members.kind.tolist())
@@ -248,7 +249,8 @@ def _links_text(network: Network) -> list[str]:
     return lines or ["  none: the units do not influence each other"]
 
 
-def _edges_text(network: Network) -> list[str]:
+def edges_text(network: Network) -> list[str]:
+    """What stands at the ends of a line or the edges of a field, a line each; empty where there is none."""
     lines: list[str] = []
     line, row = network.dimension == 1, "row" if network.dimension == 2 else "layer"
     for edge in network.edges:

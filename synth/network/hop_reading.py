@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 from dataclasses import replace
 from fractions import Fraction
@@ -85,12 +86,12 @@ def _wish(
     gap_error = _offer(part.get("gap_error"), kinds, problems)
     dead = _positive(part.get("dead_time"), _TIME, "a dead time", problems, zero=True)
     time_gap = _positive(part.get("time_gap"), _TIME, "a time gap", problems)
-    if notion is None or aim is None or signal is None:
-        return None
+    if notion is None or aim is None or signal is None or not kinds:
+        return None  # said already
     unit = next(o.unit for kind in kinds for o in kind.offers if o.name == signal)
-    rate = Declared(f"{unit} per second", parse_unit(unit) / _SECOND)
-    jerk = _positive(part.get("jerk"), Declared(f"{rate.text} per second", rate.unit / _SECOND), "a jerk", problems)
-    gap = Declared(f"{unit} times s", parse_unit(unit) * _SECOND)
+    rate = Declared(per_second(unit), parse_unit(unit) / _SECOND)
+    jerk = _positive(part.get("jerk"), Declared(per_second(rate.text), rate.unit / _SECOND), "a jerk", problems)
+    gap = Declared(unit[:-2] if unit.endswith("/s") else f"{unit}*s", parse_unit(unit) * _SECOND)
     standstill = _positive(part.get("standstill"), gap, "the gap at standstill", problems, zero=True)
     leader = _leader(part.get("leader"), rate, Declared(unit, parse_unit(unit)), problems)
     if jerk is not None and leader.acceleration is None:
@@ -123,6 +124,14 @@ def _wish(
     )
 
 
+def per_second(unit: str) -> str:
+    """The unit divided by seconds, as people write it: m/s becomes m/s^2."""
+    found = re.fullmatch(r"(.*)/s(?:\^(\d+))?", unit)
+    if found:
+        return f"{found[1]}/s^{int(found[2] or 1) + 1}"
+    return f"{unit}/s" if re.fullmatch(r"\w+", unit) else f"({unit})/s"
+
+
 def _positive(
     node: Node | None, declared: Declared, what: str, problems: Problems, zero: bool = False
 ) -> Fraction | None:
@@ -142,8 +151,8 @@ def _offer(node: Node | None, kinds: Sequence[Kind], problems: Problems) -> str 
         names = [offer.name for offer in kind.offers if " " not in offer.name]
         if name not in names:
             problems.add(
-                f"{node.path}: {kind.name} has no offer {name[:40]!r}{nearest(name, names)}, and every kind of a string "
-                f"must have it; its offers are {', '.join(names) or 'none'}.",
+                f"{node.path}: {kind.name} has no offer {name[:40]!r}{nearest(name, names)}, and every kind of a "
+                f"string must have it; its offers are {', '.join(names) or 'none'}.",
                 node,
             )
             return None
@@ -185,7 +194,7 @@ def _radio(node: Node | None, signal: str, links: Sequence[Link], problems: Prob
     found: list[str] = []
     for item in items_of(node, problems, "[radio]"):
         name = text_of(item, problems, "the name of a link class")
-        if name is None:
+        if name is None or not names:
             continue
         if name not in names:
             problems.add(

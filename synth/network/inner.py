@@ -17,6 +17,7 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 
 from synth.base.exact import ExactMatrix
+from synth.base.unit_text import quotient
 from synth.base.units import Dimension, Unit
 from synth.network.bounds import Box, Dual, Located, evaluate, least_and_most
 from synth.network.curves import Curve, NoBand, Surroundings, bound_curve, short
@@ -259,7 +260,7 @@ def _shift(i: int, row: Row, height: int, around: Surroundings, inner: Inner, fa
     if row.group == "sensors":
         faults.append(Fault(i, None, None))
         return
-    unit = f"({row.text})/s" if row.group == "states" else row.text
+    unit = quotient(row.text, "s") if row.group == "states" else row.text
     column = tuple(Fraction(int(k == i)) for k in range(height))
     inner.shifts.append(InnerSource(_named("shift", row.name, inner.shifts), unit, column, _up(size)))
 

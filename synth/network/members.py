@@ -239,7 +239,7 @@ def _changed(
         reading.refuse("unit", number, next(iter(changed)), f"with {words} the kind {name} is not accepted: {said}")
         return None
     said = ", ".join(f"{p}={v[0] if isinstance(v, tuple) else v}" for p, v in sorted(exact.items()))
-    return replace(kind, name=f"{name} {said}", group="")
+    return replace(kind, name=f"{name} {said}", group=name)
 
 
 def _links(

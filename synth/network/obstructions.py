@@ -134,7 +134,7 @@ def _weaker(network: Network, finding: Finding) -> str:
     """Where a one-way line drifts as a whole: the claim that could be asked for instead."""
     steps = {link.at[0] for link in network.links if link.sort == "link" and not link.own_part}
     one_way = network.dimension == 1 and not network.edges and (steps <= {0, -1} or steps <= {0, 1})
-    if any(finding.theta) or abs(finding.s) > 1e-9 or not one_way:
+    if any(finding.theta) or abs(finding.s) > 1e-9 or not one_way or network.goal.hop is not None:
         return ""
     return (
         " What can still be shown is weaker, that what a leader does is not amplified from unit to unit; it must be "

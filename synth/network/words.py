@@ -37,12 +37,20 @@ def link_units(link: Link, network: Network) -> tuple[str, str]:
 
 
 def strength_unit(link: Link, network: Network) -> str:
-    """The unit of the strength, such as ``(m/s^2)/(m)``."""
+    """The unit of the strength as units are written, for programs: ``(m/s^2)/(m)``."""
     taken, offered = link_units(link, network)
     return f"({taken})/({offered})"
 
 
-def _own_part(link: Link, network: Network) -> Link | None:
+def per_words(link: Link, network: Network) -> str:
+    """The unit of the strength in words, such as ``m/s^2 per m``, or ``per m`` where the taken signal has no unit."""
+    taken, offered = link_units(link, network)
+    if taken == offered == "1":
+        return ""
+    return f"{taken} per {offered}" if taken != "1" else f"per {offered}"
+
+
+def own_part_of(link: Link, network: Network) -> Link | None:
     """The self-link that carries the own part of a relative link which is not folded; None if there is none.
 
     Of members only the part that is as late as the link is looked for: what intervals leave differs from unit to unit.
@@ -57,11 +65,20 @@ def _own_part(link: Link, network: Network) -> Link | None:
     return next((links[k] for k in found if k and links[k - 1] is link), links[found[0]] if found else None)
 
 
+def subtracting(link: Link, network: Network) -> Link:
+    """The link that carries the own part of a relative rule for all its sources (the first one), else the link."""
+    if network.description != "rules" or not link.choice or link.relative:
+        return link
+    ends = (link.choice, link.kind, link.take)
+    return next((m for m in network.links if m.relative and (m.choice, m.kind, m.take) == ends), link)
+
+
 def link_nature(link: Link, network: Network) -> str:
     """What kind of link it is, and how late it may be: ``minus the unit's own fresh value, up to 0.1 s late``."""
     parts = []
-    own = _own_part(link, network)
+    own = own_part_of(link, network)
     both = ""
+    link = subtracting(link, network)
     if link.relative:
         parts.append("minus the unit's own fresh value")
     elif own is not None:
@@ -77,7 +94,7 @@ def link_nature(link: Link, network: Network) -> str:
 
 def strength_words(link: Link, network: Network) -> str:
     """The strength, or both ends of its interval where they can be told: ``0.4 to 0.5``."""
-    own = _own_part(link, network) if link.relative else None
+    own = own_part_of(link, network) if link.relative else None
     if own is None or _own_ratio(link, network) != 1:
         return said(link.strength)
     return f"{said(2 * link.own_strength - link.strength)} to {said(link.strength)}"
@@ -95,7 +112,7 @@ def link_words(link: Link, network: Network) -> str:
     """One line about a link: both ends, place, strength with unit, nature."""
     place = place_words(link.at)
     taken, offered = link_units(link, network)
-    own = _own_part(link, network) if link.relative else None
+    own = own_part_of(link, network) if link.relative else None
     left = "" if own is None else f", the own value left over by the interval counts {said(abs(own.strength))} more"
     return (
         f"{link.source_kind}.{link.offer}{' ' if place else ''}{place} -> {link.kind}.{link.take}: "

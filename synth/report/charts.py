@@ -6,7 +6,7 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
-from synth.report.svg import GRID, INK, QUIET, STROKES, TEXT, Board, Scale, spread, text_width, thin
+from synth.report.svg import GRID, INK, QUIET, STROKES, TEXT, Board, Scale, envelope, spread, text_width, thin
 
 WIDTH = 660.0
 
@@ -80,7 +80,9 @@ def number_line(
         board.line(x, y - 5, x, base - 4, INK, 1.8 if mark.strong else 1.1, "" if mark.strong else "4 3")
         board.line(x, base - 4, x + 7, base - 4, INK, 1.8 if mark.strong else 1.1)
         board.text(x + 11, base, mark.label, bold=mark.strong)
-    for value, text in scale.ticks(8):  # last, so that the halo of a number interrupts a leader that crosses it
+    for value, text in scale.ticks(8):  # last, so that a number on white paper interrupts a leader that crosses it
+        room = text_width(text)
+        board.box(scale(value) - room / 2 - 2, y + thick + 5, room + 4, TEXT + 3, "#ffffff")
         board.line(scale(value), y + thick, scale(value), y + thick + 4, QUIET)
         board.text(scale(value), y + thick + 16, text, "middle", QUIET)
     return board.svg()
@@ -148,7 +150,10 @@ def curves(
     for k, (line, end) in enumerate(zip(lines, ends, strict=True)):
         stroke, dash = STROKES[k % len(STROKES)]
         xs, ys = thin(line.xs, line.ys)
-        board.path([(x(a), y(b)) for a, b in zip(xs, ys, strict=True)], stroke, dash=dash)
+        band = [] if markers else envelope(line.xs, line.ys)
+        if band:
+            board.area([*((x(a), y(b)) for a, _, b in band), *((x(a), y(b)) for a, b, _ in reversed(band))], stroke)
+        board.path([(x(a), y(b)) for a, b in zip(xs, ys, strict=True)], stroke, 0.7 if band else 1.6, dash)
         if markers:
             for a, b in zip(xs, ys, strict=True):
                 board.dot(x(a), y(b), stroke, k, 2.6 if len(xs) <= 60 else 1.4)

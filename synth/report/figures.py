@@ -130,7 +130,7 @@ def draw_string_response(trajectory: Trajectory, kind: str, offer: str, run: str
     values = shown.offers[kind][..., place]
     cells = _cells(shown, kind, values.shape[1])
     count = _settled(values[:, cells])
-    lines = [Curve(f"unit {cell}", *_finite(shown.time[:count], values[:count, cell])) for cell in cells]
+    lines = [_curve(f"unit {cell}", shown, shown.time[:count], values[:count, cell]) for cell in cells]
     title = f"{kind}.{offer} over time, run {shown.name}"
     peaks = _peaks(values)
     said = "; ".join(f"unit {cell}: largest {quantity(float(peaks[cell]))} {unit}" for cell in cells)
@@ -202,9 +202,10 @@ def draw_worst_run(trajectory: Trajectory) -> str | None:
     found = closest(trajectory)
     if found is None:
         return None
-    line = Curve(f"unit {found.cell}", *_finite(found.run.time, found.values))
+    line = _curve(f"unit {found.cell}", found.run, found.run.time, found.values)
+    reached = quantity(100 * found.share, count=4, rounding="down" if found.share < 1 else "up")
     level = Level(found.bound, f"guaranteed: ± {upper(found.bound, found.unit)}")
-    said = f"{found.run.words}; it reaches {quantity(100 * found.share, count=3)} % of the bound"
+    said = f"{found.run.words}; it reaches {reached} % of the bound"
     axes = ("time in s", f"{found.signal} in {unit_text(found.unit) or '1'}")
     return curves("worst", f"Closest to its bound: {found.words}", said, axes, [line], [level], symmetric=True)
 
@@ -230,7 +231,7 @@ def _run(trajectory: Trajectory, name: str | None) -> Run:
     wanted = (name,) if name is not None else ("leader", "step")
     for candidate in wanted:
         for run in trajectory.runs:
-            if run.name == candidate:
+            if run.name == candidate and len(run.time):
                 return run
     if name is not None or not trajectory.runs:
         raise ValueError(f"the trajectory has no run {name!r}" if name else "the trajectory has no runs")
@@ -239,7 +240,10 @@ def _run(trajectory: Trajectory, name: str | None) -> Run:
 
 def telling(trajectory: Trajectory) -> list[Run]:
     """Up to four runs from rest: one disturbed unit, a step, random, and the one that came closest to a bound."""
-    rest = [run for run in trajectory.runs if run.X0 == 0] or list(trajectory.runs)
+    stored = [run for run in trajectory.runs if len(run.time)]
+    rest = [run for run in stored if run.X0 == 0] or stored
+    if not rest:
+        return []
     worst = max(rest, key=lambda run: run.worst_signal)
     picked = [run for name in ("leader", "step", "random extreme") for run in rest if run.name == name]
     return [*(run for run in picked if run is not worst), worst]
@@ -267,6 +271,14 @@ def _settled(values: Array) -> int:
     away = np.abs(finite - finite[-1]).max(axis=1) > 0.01 * np.abs(finite).max()
     last = int(np.flatnonzero(away)[-1]) + 1 if away.any() else len(finite)
     return min(len(values), max(25, last * 3 // 2))
+
+
+def _curve(label: str, run: Run, time: Array, values: Array) -> Curve:
+    """A line through stored samples; a run from rest whose first stored step is its first starts from zero at zero."""
+    xs, ys = _finite(time, values)
+    if run.X0 == 0 and len(xs) > 1 and 0 < xs[0] <= 1.5 * (xs[1] - xs[0]):
+        xs, ys = [0.0, *xs], [0.0, *ys]
+    return Curve(label, xs, ys)
 
 
 def _finite(time: Array, values: Array) -> tuple[list[float], list[float]]:

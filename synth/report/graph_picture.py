@@ -109,7 +109,8 @@ def draw_summary(
             x, y = loop(board, points[to], 40 + 26 * seen[source, to], classes[name], 24)
         else:
             x, y = arrow(board, points[source], points[to], 24 + 26 * seen[source, to], classes[name], 30)
-        board.text(x, y - 6, words, anchor="middle", fill=classes[name].colour, size=SMALL)
+        hangs = source != to and y > max(points[source][1], points[to][1])  # such an arrow carries its words below it
+        board.text(x, y + 15 if hangs else y - 6, words, anchor="middle", fill=classes[name].colour, size=SMALL)
         seen[source, to] += 1
     for mark, (x, y) in points.items():
         unit(board, x, y, mark, 22)

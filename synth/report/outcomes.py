@@ -46,7 +46,11 @@ def margin_section(margin: Margin | None) -> Html:
     ]
     if margin.links:
         tolerances = [
-            [link.link, ("at least " if link.capped else "") + lower(link.tolerance), lower(link.single)]
+            [
+                link.link,
+                ("at least " if link.capped else "") + lower(link.tolerance),
+                "not computed" if link.single is None else lower(link.single),
+            ]
             for link in margin.links
         ]
         header = ("Link", "Its whole class", "One single copy")
@@ -77,15 +81,23 @@ def caution_section() -> Html:
     return section("cautions", "Cautions", bullets(CAUTIONS))
 
 
-def provenance_section(network: Network, results: Sequence[tuple[str, Any]], certificate: Certificate | None) -> Html:
+def provenance_section(
+    network: Network,
+    results: Sequence[tuple[str, Any]],
+    certificate: Certificate | None,
+    bundle: Bundle | None = None,
+    flashed: Certificate | None = None,
+) -> Html:
     """Hashes and versions, what was and was not run, and how to verify."""
     rows: list[list[Child]] = [["Network", element("code", network.hash)]]
     if certificate is not None:
         rows.append(["Certificate", element("code", str(certificate.hash))])
+    if flashed is not None and flashed.proven:
+        rows.append(["Certificate of the code as flashed", element("code", str(flashed.hash))])
     rows += [[name, version] for name, version in sorted(versions().items())]
     ran = [f"{name}: {'in this report' if result is not None else 'not run'}" for name, result in results]
     verify: list[Child] = [
-        join_code("The proof, with a bare Python: ", "python3 check.py certificate.json", " in the bundle."),
+        *_proof_checks(bundle, certificate),
         join_code("The files of the bundle: ", "sha256sum -c SHA256SUMS", "."),
         "The network: the hash above is that of the exact matrices, links and bounds, however the file was written.",
     ]
@@ -100,6 +112,21 @@ def provenance_section(network: Network, results: Sequence[tuple[str, Any]], cer
         element("h3", "How to verify"),
         bullets(verify),
     )
+
+
+def _proof_checks(bundle: Bundle | None, certificate: Certificate | None) -> list[Child]:
+    """The commands that check the proofs; a bundle of the firmware route has that proof under the plain name."""
+    firmware = (bundle is not None and bundle.proven) or (certificate is not None and certificate.route == "firmware")
+    where = " in the bundle." if bundle is not None else ", with the checker that a bundle carries."
+    if not firmware:
+        return [join_code("The proof, with a bare Python: ", "python3 check.py certificate.json", where)]
+    found: list[Child] = [
+        join_code("The proof as flashed, with a bare Python: ", "python3 check_firmware.py certificate.json", where)
+    ]
+    if bundle is not None and "certificate_continuous.json" in bundle.files:
+        command = "python3 check.py certificate_continuous.json"
+        found.append(join_code("The proof about the continuous loop: ", command, where))
+    return found
 
 
 def join_code(before: str, code: str, after: str) -> Html:

@@ -12,6 +12,7 @@ from synth.base.files import write_text
 from synth.base.provenance import sha256
 from synth.network.gains import Gains
 from synth.network.model import Network
+from synth.report.flashed_section import flashed_section
 from synth.report.html import Html, element, join, paragraph
 from synth.report.outcomes import bundle_section, caution_section, margin_section, provenance_section
 from synth.report.response import response_section
@@ -44,6 +45,7 @@ _CONTENTS = (
     ("response", "Response in simulation"),
     ("constants", "Constants of the guarantee"),
     ("scope", "What the proof covers, and what it does not"),
+    ("flashed", "The code as flashed"),
     ("handoff", "Hand-off"),
     ("cautions", "Cautions"),
     ("provenance", "Provenance and how to verify"),
@@ -74,13 +76,15 @@ def write_report(
     margin: Margin | None = None,
     trajectory: Trajectory | None = None,
     bundle: Bundle | None = None,
+    flashed: Certificate | None = None,
 ) -> Report:
     """Write the report to ``path``: one HTML file without scripts and without anything to fetch.
 
     Each result may be None; the report then says that the stage was not run. ``design`` may be a table of gains in
-    service. Equal inputs give equal bytes. Raises StorageFailure if the disk refuses.
+    service; ``flashed`` is the certificate of the sampled code where one was tried. Equal inputs give equal bytes.
+    Raises StorageFailure if the disk refuses.
     """
-    text = page(network, design, certificate, margin, trajectory, bundle)
+    text = page(network, design, certificate, margin, trajectory, bundle, flashed)
     write_text(path, text)
     return Report(Path(path), sha256(text))
 
@@ -92,6 +96,7 @@ def page(
     margin: Margin | None = None,
     trajectory: Trajectory | None = None,
     bundle: Bundle | None = None,
+    flashed: Certificate | None = None,
 ) -> str:
     """The text of the report (see ``write_report``)."""
     gains = design if isinstance(design, Gains) or design is None else design.gains
@@ -99,6 +104,7 @@ def page(
     stages = (
         ("Design", design),
         ("Proof", certificate),
+        ("Proof as flashed", flashed),
         ("Margin", margin),
         ("Simulation", trajectory),
         ("Hand-off", bundle),
@@ -111,21 +117,22 @@ def page(
         margin_section(margin),
         peaks_section(network, certificate),
         response_section(network, trajectory),
-        constants_section(certificate),
+        constants_section(network, certificate),
         scope_section(certificate),
+        flashed_section(network, flashed, bundle),
         bundle_section(bundle),
         caution_section(),
-        provenance_section(network, stages, certificate),
+        provenance_section(network, stages, certificate, bundle, flashed),
     )
     header = element(
         "header",
         paragraph("Local feedback gains with proof"),
         element("h1", network.title),
-        verdict(network, certificate),
+        verdict(network, certificate, flashed),
         paragraph(CAUTIONS[0], " ", element("a", "All cautions", href="#cautions"), ".", cls="quiet"),
         _contents(),
     )
-    return _document(network.title, join([header, main]))
+    return document(network.title, join([header, main]))
 
 
 def _contents() -> Html:
@@ -134,7 +141,7 @@ def _contents() -> Html:
     return element("nav", element("ol", *items), aria_label="Contents")
 
 
-def _document(title: str, body: Html) -> str:
+def document(title: str, body: Html) -> str:
     """The whole HTML file around the body."""
     style = resources.files("synth.report").joinpath("page.css").read_text(encoding="utf-8")
     head = join(

@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+from synth.report.placing import Room
 from synth.report.svg import INK, STROKES, Board, number, text_width
 
 # Pale fills of the colours of STROKES, so that black print on them stays legible.
@@ -48,6 +49,21 @@ def fitting(text: str, width: float, size: float) -> str:
     return f"{text[:keep].rstrip()}..."
 
 
+def wrapped(text: str, width: float, size: float) -> list[str]:
+    """The text in lines no wider than ``width``, broken at spaces; a single word that is wider is cut with dots.
+
+    Law: without such a word no word is lost, and the order is kept.
+    """
+    lines: list[str] = []
+    for word in text.split():
+        longer = f"{lines[-1]} {word}" if lines else word
+        if lines and 0.93 * text_width(longer, size) <= width:
+            lines[-1] = longer
+        else:
+            lines.append(fitting(word, width, size))
+    return lines
+
+
 def unit(board: Board, x: float, y: float, kind: int, size: float = 13, faint: bool = False) -> None:
     """The mark of a unit of kind number ``kind``."""
     fill, ink = ("#f6f6f6", FAINT) if faint else (FILLS[kind % 6], INK)
@@ -65,11 +81,13 @@ def unit(board: Board, x: float, y: float, kind: int, size: float = 13, faint: b
 
 
 def arrow(
-    board: Board, start: Point, end: Point, bulge: float, stroke: Stroke, gap: float = 17, faint: bool = False
-) -> Point:
+    board: Board, start: Point, end: Point, bulge: float, stroke: Stroke, gap: float = 17, faint: bool = False,
+    room: Room | None = None,
+) -> Point:  # fmt: skip
     """A curved arrow from ``start`` to ``end``; ``bulge`` is how far it leaves the straight line to its left.
 
-    Both ends keep ``gap`` away from the marks. Returns the point of the curve that is farthest out, for a label.
+    Both ends keep ``gap`` away from the marks; ``room`` takes note of the curve. Returns the point of the curve that
+    is farthest out, for a label.
     """
     (x0, y0), (x1, y1) = start, end
     length = math.hypot(x1 - x0, y1 - y0) or 1.0
@@ -78,6 +96,8 @@ def arrow(
     head = 6.0 if stroke.width > 1 else 3.4
     a, b = _toward(start, middle, gap), _toward(end, middle, gap + head - 1)
     _curve(board, a, middle, b, stroke, faint)
+    if room is not None:
+        room.curve(a, middle, end)
     if not faint:
         _head(board, b, middle, stroke.colour, head)
     return ((a[0] + b[0]) / 4 + middle[0] / 2, (a[1] + b[1]) / 4 + middle[1] / 2)

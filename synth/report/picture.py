@@ -10,14 +10,14 @@ from __future__ import annotations
 import itertools
 import math
 from collections import Counter
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 
-from synth.network.cuts import adapted, written
-from synth.network.layout import Edge
 from synth.network.model import Kind, Link, Network
-from synth.network.words import counted, link_nature, place_words, said, strength_unit, strength_words
+from synth.network.words import counted, link_nature, per_words, place_words, said, strength_words
+from synth.report.edge_picture import draw_edge
 from synth.report.graph_picture import SIDE, SMALL, WIDTH, draw_members, draw_summary, origin_of
-from synth.report.pen import FAINT, Point, Stroke, arrow, fitting, loop, stroke_of, unit
+from synth.report.pen import FAINT, Point, Stroke, arrow, fitting, loop, stroke_of, unit, wrapped
+from synth.report.placing import Room, around
 from synth.report.svg import INK, QUIET, Board, text_width
 
 MOST_UNITS = 400
@@ -29,7 +29,7 @@ def network_picture(network: Network) -> str:
     at_edges = [single.link.name for edge in network.edges for single in edge.links]
     classes = {name: stroke_of(k) for k, name in enumerate(dict.fromkeys([*network.classes(), *at_edges]))}
     kinds = _declared_kinds(network)
-    board = Board("network", network.title, f"Units and links of the network {network.title}.", WIDTH, 0)
+    board = Board("network", network.title, _description(network, classes), WIDTH, 0)
     board.text(SIDE, 34, fitting(network.title, WIDTH - 2 * SIDE, 16), size=16, bold=True)
     board.text(SIDE, 53, fitting(_subtitle(network), WIDTH - 2 * SIDE, 12), fill=QUIET, size=12)
     if network.members is not None and len(network.members.names) <= MOST_UNITS:
@@ -57,6 +57,18 @@ def _subtitle(network: Network) -> str:
     )
 
 
+def _description(network: Network, classes: Iterable[str]) -> str:
+    """The picture in words, for a reader who does not see it: how the units stand, and every class of links."""
+    said_lines = [f"Units and links of the network {network.title}. {_subtitle(network)}"]
+    said_lines[0] += "" if said_lines[0].endswith(".") else "."
+    for name in classes:
+        lines = _class_lines(network, name)
+        said_lines += [f"Links {name}: {ends}; {nature}." for ends, nature in lines[:MOST_LINES]]
+        if len(lines) > MOST_LINES:
+            said_lines.append(f"Links {name}: {len(lines) - MOST_LINES} more strengths.")
+    return " ".join(said_lines)
+
+
 def _declared_kinds(network: Network) -> dict[str, int]:
     """The number of the mark for every kind; kinds that differ only in parameter values share one."""
     declared = [kind.name for kind in network.kinds]
@@ -79,11 +91,11 @@ def _draw_pattern(
     if network.dimension == 1:
         bottom = _draw_line(board, inside, cell, classes, kinds, top)
         for edge in network.edges:
-            bottom = _draw_edge(board, network, edge.side, classes, kinds, bottom + 46)
+            bottom = draw_edge(board, network, edge, classes, kinds, bottom + 46)
         return bottom
     bottom = _draw_grid(board, inside, cell, network.dimension, classes, kinds, top)
     for edge in network.edges:
-        bottom = _draw_edge(board, network, edge.side, classes, kinds, bottom + 46)
+        bottom = draw_edge(board, network, edge, classes, kinds, bottom + 46)
     return bottom
 
 
@@ -176,76 +188,6 @@ def _arc(
         board.text(x, y - 5 if up else y + 14, label, anchor="middle", fill=stroke.colour, size=SMALL)
 
 
-def _draw_edge(
-    board: Board, network: Network, side: str, classes: Mapping[str, Stroke], kinds: Mapping[str, int], top: float
-) -> float:
-    """The units at one end of the line, edge units by name, with every link that enters them.
-
-    Of a field it is the section across the edge: a mark stands for a row, and a link that comes from along the row (or
-    aslant) is drawn as if it came straight across.
-    """
-    edge = next(edge for edge in network.edges if edge.side == side)
-    cell = network.cell_kinds
-    field = network.dimension > 1
-    unnamed = "place" if not field else "row" if network.dimension == 2 else "layer"
-    deepest = max([abs(u.at) for u in edge.units] + [abs(e.to) for e in edge.links] + [2])
-    count = min(deepest + 2, 7)
-    step = (WIDTH - 2 * SIDE - 90) / (count + 0.5)
-    links = [link for link in network.links if link.sort == "link" and not link.own_part]
-    lift = 26.0 + 20 * min(max((abs(link.at[edge.axis]) for link in links), default=1) or 1, 4)
-    first, gap = top + 40 + lift, 62 + lift
-    standing = {(u.at, u.instead_of): u for u in edge.units}
-    where: dict[tuple[int, str], tuple[Point, str]] = {}  # place and slot of the cell: the point, and who stands there
-    title = f"The {side} end of the line"
-    if field:
-        title = f"The {side} edge across axis {edge.axis + 1}: a mark is a {unnamed} along it, a loop a link along that"
-    board.text(SIDE, top, title, bold=True, size=12)
-    for k in range(count):
-        place = k if side == "first" else k - count + 1
-        x = SIDE + 90 + step * (k + (0.5 if side == "first" else 1))
-        for row, kind in enumerate(cell):
-            here = standing.get((place, kind.name))
-            point = (x, first + gap * row)
-            where[place, kind.name] = point, here.kind if here else kind.name
-            unit(board, *point, kinds[here.kind if here else kind.name], faint=here is None)
-            label = here.name if here else f"{unnamed} {place}"
-            ink = INK if here else QUIET
-            board.text(x, point[1] + 29, label, anchor="middle", size=SMALL, fill=ink, bold=here is not None)
-    for row, kind in enumerate(cell):
-        board.text(SIDE, first + gap * row + 4, fitting(kind.name, 88, 12), size=12, bold=True)
-        x = WIDTH - SIDE - step / 4 if side == "first" else SIDE + 90 + step / 4
-        for k in range(3):
-            board.dot(x + 6 * k - 6, first + gap * row, QUIET, size=1.3)
-    seen: Counter[tuple[object, object]] = Counter()
-    for name, steps, source, target in dict.fromkeys(_links_at(network, edge, where)):
-        stroke, beside = classes.get(name, Stroke(INK, "")), 11 * seen[source, target]
-        if source != target:
-            arrow(board, where[source][0], where[target][0], 14 + 12 * min(abs(steps), 4) + beside, stroke)
-        elif field:
-            loop(board, where[target][0], 22 + beside, stroke)
-        seen[source, target] += 1
-    return first + gap * (len(cell) - 1) + 46
-
-
-def _links_at(
-    network: Network, edge: Edge, where: Mapping[tuple[int, str], tuple[Point, str]]
-) -> Iterator[tuple[str, int, tuple[int, str], tuple[int, str]]]:
-    """The links between the units that are shown at an edge: class, steps across, from where, to where."""
-    for group in written(network.links):
-        link = group[0]
-        for (place, slot), (_, kind) in where.items():
-            source = (place + link.at[edge.axis], link.source_kind)
-            if link.sort != "link" or slot != link.kind or source not in where:
-                continue
-            if adapted(group, network.kind(kind), network.kind(where[source][1]), network):
-                yield link.name, link.at[edge.axis], source, (place, slot)
-    for single in edge.links:
-        steps = single.link.at[edge.axis]
-        source, target = (single.to + steps, single.source_slot), (single.to, single.slot)
-        if not single.link.own_part and source in where and target in where:
-            yield single.link.name, steps, source, target
-
-
 def _draw_grid(
     board: Board, links: Sequence[Link], cell: Sequence[Kind], dimension: int, classes: Mapping[str, Stroke],
     kinds: Mapping[str, int], top: float,
@@ -276,10 +218,11 @@ def _draw_grid(
         board.box(x - size / 2 + 4, y - size / 2 + 4, size - 8, size - 8, "#f4f7fa", "#c8d3dc")
     nothing = (0,) * dimension
     seen: Counter[tuple[str, str, tuple[int, ...]]] = Counter()
-    gap = 15 if spread else 17
+    gap, room, mark = (15, Room(), 11.0) if spread else (17, Room(), 13.0)
     for offset in sorted(shown, key=lambda o: -o[-1] if dimension == 3 else 0):
         for kind in cell:
-            unit(board, *at(offset, kind.name), kinds[kind.name], 11 if spread else 13, faint=offset != nothing)
+            unit(board, *at(offset, kind.name), kinds[kind.name], mark, faint=offset != nothing)
+            room.disc(*at(offset, kind.name), mark)
     for link in links:
         key = (link.source_kind, link.kind, link.at)
         if not _moves(link):
@@ -288,17 +231,19 @@ def _draw_grid(
         else:
             inside = tuple(max(min(step, reach), -reach) for step in link.at)
             start = at(inside, link.source_kind)
-            arrow(board, start, at(nothing, link.kind), 8 + 14 * seen[key], classes[link.name], gap)
+            arrow(board, start, at(nothing, link.kind), 8 + 14 * seen[key], classes[link.name], gap, room=room)
             if inside != link.at:
-                board.text(start[0], start[1] - 18, f"from {place_words(link.at)}", anchor="middle", size=SMALL)
+                words = f"from {place_words(link.at)}"
+                spot = room.best(words, around(*start, mark, mark)[::-1], SMALL)
+                board.text(spot.x, spot.y, words, anchor=spot.anchor, size=SMALL)
         seen[key] += 1
     for offset in shown:
-        if dimension == 2:
-            x, y = centre[0] + size * (offset[0] - 0.5) + 24, centre[1] - size * offset[1] + size / 2 - 9
-        else:
-            x, y = at(offset, cell[-1].name)
-            y += 28
-        board.text(x, y, f"({', '.join(map(str, offset))})", anchor="middle", fill=QUIET, size=10)
+        label = f"({', '.join(map(str, offset))})"
+        xs, ys = zip(*(at(offset, kind.name) for kind in cell), strict=True)
+        half = (max(xs) - min(xs)) / 2 + mark, (max(ys) - min(ys)) / 2 + mark
+        middle = (max(xs) + min(xs)) / 2, (max(ys) + min(ys)) / 2
+        spot = room.best(label, around(*middle, *half), 10)
+        board.text(spot.x, spot.y, label, anchor=spot.anchor, fill=QUIET, size=10)
     return centre[1] + height / 2 + 10
 
 
@@ -321,25 +266,21 @@ def _legend(
         parts = [counted(len(kind.states), "state"), counted(len(kind.inputs), "actuator"),
                  counted(len(kind.sensors), "sensor")]  # fmt: skip
         name = kind.name if network.members is None else origin_of(network, mark, kinds)
-        _line(board, y, name, ", ".join(parts))
-        y += 20
+        y = _line(board, y, name, ", ".join(parts)) + 5
     y += 6
     for name, stroke in classes.items():
         board.line(SIDE, y - 4, SIDE + 24, y - 4, stroke.colour, stroke.width, stroke.dash)
         lines = _class_lines(network, name)
         for k, (ends, nature) in enumerate(lines[:MOST_LINES]):
-            _line(board, y, "" if k else name, ends)
-            _line(board, y + 15, "", nature)
-            y += 34
+            y = _line(board, y, "" if k else name, ends)
+            y = _line(board, y, "", nature) + 4
         if len(lines) > MOST_LINES:
-            _line(board, y, "", f"and {len(lines) - MOST_LINES} more of this class")
-            y += 18
+            y = _line(board, y, "", f"and {len(lines) - MOST_LINES} more of this class") + 3
         y += 4
     for kind in network.kinds[:MOST_LINES]:
         inner = [link.take for link in kind.inner]
         if inner:
-            _line(board, y, "", f"inside {kind.name}, not drawn: {', '.join(inner)}")
-            y += 18
+            y = _line(board, y, "", f"inside {kind.name}, not drawn: {', '.join(inner)}") + 3
     return y + 8
 
 
@@ -352,7 +293,7 @@ def _class_lines(network: Network, name: str) -> list[tuple[str, str]]:
             continue
         count = most.get(link.choice, 1)
         amount = said(link.strength / count) if link.choice else strength_words(link, network)
-        each = f"{amount} {strength_unit(link, network)}"
+        each = f"{amount} {per_words(link, network)}"
         limit = f" each, at most {counted(count, 'link')} into a unit" if link.choice else ""
         ends = f"{link.source_kind}.{link.offer} to {link.kind}.{link.take}"
         places.setdefault((ends, f"strength {each}{limit}, {link_nature(link, network)}"), []).append(
@@ -363,9 +304,13 @@ def _class_lines(network: Network, name: str) -> list[tuple[str, str]]:
     ]
 
 
-def _line(board: Board, y: float, name: str, words: str) -> None:
+def _line(board: Board, y: float, name: str, words: str) -> float:
+    """A name in bold and words beside it, in as many lines as they need; returns the baseline of the next line."""
     left = SIDE + 34
     room = 130.0
-    board.text(left, y, fitting(name, room, 12), bold=True, size=12)
-    start = left + max(min(text_width(name, 12, bold=True), room) + 10, 80) if name else left + 80
-    board.text(start, y, fitting(words, WIDTH - SIDE - start, SMALL), size=SMALL, fill=INK)
+    shown = fitting(name, room / 1.16, 12)  # bold print is wider
+    board.text(left, y, shown, bold=True, size=12)
+    start = left + max(text_width(shown, 12, bold=True) + 10, 80)
+    for k, line in enumerate(wrapped(words, WIDTH - SIDE - start, SMALL)):
+        board.text(start, y + 15 * k, line, size=SMALL, fill=INK)
+    return y + 15 * max(len(wrapped(words, WIDTH - SIDE - start, SMALL)), 1)

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+from synth.network.describing import internal
 from synth.network.model import Network
+from synth.network.words import counted
 from synth.report.figures import closest, draw_peaks_along, draw_string_response, draw_worst_run, telling
-from synth.report.html import Child, Html, bullets, element, figure, paragraph, quantity, table
+from synth.report.html import Child, Html, bullets, element, figure, paragraph, quantity, table, upper
 from synth.report.sections import section
 
 if TYPE_CHECKING:
@@ -14,6 +16,10 @@ if TYPE_CHECKING:
 
 TITLE = "Response in simulation"
 NOT_SIMULATED = "Nothing was simulated: no trajectory was handed to this report."
+STORED = (
+    "Curves join stored samples, fewer than were computed; a pale band shows how far they swing where they swing "
+    "faster than a line can show. The tables count every computed sample."
+)
 _PICTURES = 3  # offered signals that get pictures; more would bury the reader
 _RUNS = 12
 
@@ -22,13 +28,13 @@ def response_section(network: Network, trajectory: Trajectory | None) -> Html:
     """Verdict, pictures and numbers of the simulated section."""
     if trajectory is None:
         return section("response", TITLE, paragraph(NOT_SIMULATED, cls="absent"))
-    size = f"{trajectory.units} units, {len(trajectory.runs)} runs of up to {quantity(trajectory.seconds, 's')}"
+    size = f"{trajectory.units} units, {len(trajectory.runs)} runs of {quantity(trajectory.seconds, 's')} or more"
     parts: list[Child] = [
         paragraph(f"A finite section was run: {size}. The proof does not rest on this; it is a test of it."),
         _outcome(trajectory),
     ]
-    offers = [(kind.name, offer.name) for kind in network.kinds for offer in kind.offers]
-    for kind, offer in offers[:_PICTURES] if trajectory.runs else ():
+    offers = [(k.name, offer.name) for k in network.kinds for offer in k.offers if not internal(offer.name)]
+    for kind, offer in offers[:_PICTURES] if any(len(run.time) for run in trajectory.runs) else ():
         parts += _pictures(trajectory, kind, offer)
     if len(offers) > _PICTURES:
         parts.append(paragraph(f"{len(offers) - _PICTURES} more offered signals are not drawn; see the table."))
@@ -36,8 +42,10 @@ def response_section(network: Network, trajectory: Trajectory | None) -> Html:
     worst = draw_worst_run(trajectory) if found is not None else None
     if found is not None and worst is not None:
         share = _percent(found.share)
-        parts.append(figure(worst, f"Closest to its bound from rest: {found.words} ({found.run.words}), {share}."))
-    parts += [_signals(trajectory), _amplification(trajectory), _runs(trajectory)]
+        parts.append(
+            figure(worst, f"Closest to its bound from rest: {found.words} ({found.run.words}), {share}. {STORED}")
+        )
+    parts += [_as_written(trajectory), _signals(trajectory), _amplification(trajectory), _runs(trajectory)]
     if trajectory.notes:
         parts.append(bullets(trajectory.notes))
     return section("response", TITLE, *parts)
@@ -77,6 +85,7 @@ def _pictures(trajectory: Trajectory, kind: str, offer: str) -> list[Html]:
         "; only the first unit is disturbed." if alone else "."
     )
     runs = "; ".join(run.name for run in telling(trajectory))
+    travels += " " + STORED
     return [
         figure(draw_string_response(trajectory, kind, offer), travels),
         figure(
@@ -84,6 +93,21 @@ def _pictures(trajectory: Trajectory, kind: str, offer: str) -> list[Html]:
             f"Largest stored value of {name} in each unit, in the runs {runs}.",
         ),
     ]
+
+
+def _as_written(trajectory: Trajectory) -> Html | None:
+    """How near the runs of the equations as written came to a bound; None if there are none."""
+    runs = [run for run in trajectory.runs if run.name.startswith("as written")]
+    if not runs:
+        return None
+    words = (
+        f"{counted(len(runs), 'run')} as written: the equations of the problem file themselves, with nonlinear terms "
+        "and uncertain parameters as they stand, so that a mistake in how the proof counts them would show."
+    )
+    share = [max(run.G_ratio, run.envelope_ratio, run.worst_signal) for run in runs if run.counted]
+    if trajectory.checked and share:
+        words += f" The closest reached {_percent(max(share))} of a bound."
+    return paragraph(words)
 
 
 def _signals(trajectory: Trajectory) -> Html | None:
@@ -96,7 +120,7 @@ def _signals(trajectory: Trajectory) -> Html | None:
                 f"{row['kind']}.{row['signal']}",
                 row["role"],
                 quantity(row["peak"], row["in"]),
-                "none" if bound == "inf" else quantity(bound, row["in"]),
+                "none" if bound == "inf" else upper(bound, row["in"]),
                 "" if row["ratio"] is None else _percent(row["ratio"]),
             ]
         )

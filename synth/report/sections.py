@@ -6,10 +6,11 @@ from collections.abc import Iterator
 from fractions import Fraction
 from typing import TYPE_CHECKING
 
-from synth.handoff.quantity import quotient
+from synth.base.unit_text import quotient
 from synth.handoff.table import SIGN_CONVENTION
+from synth.network.describing import inner_text, internal
 from synth.network.gains import Gains
-from synth.network.model import Network
+from synth.network.model import Kind, Network
 from synth.report.charts import share_bar
 from synth.report.figures import draw_radius
 from synth.report.html import (
@@ -27,13 +28,19 @@ from synth.report.html import (
     unit_text,
     upper,
 )
-from synth.report.words import equations, link_sentence, summary
+from synth.report.words import MOST_LINKS, equations, link_sentence, links_shown, summary
 
 if TYPE_CHECKING:
     from synth.local import Design
     from synth.margin import Margin
     from synth.proof import Certificate
 
+_MOST_LINES, _MOST_KINDS = 40, 12
+_ROUTES = {
+    "peak": "every unit counts by the largest peak that it can answer a peak of one with, its peak gain",
+    "storage": "every unit counts by how far a quadratic function of its state, its storage, can rise",
+    "firmware": "every sampled unit counts by its peak gain, the largest over all phases of a sample period",
+}
 NOT_DESIGNED = "No design was handed to this report: the gains are not shown."
 NOT_PROVEN_YET = "No proof was attempted: no certificate was handed to this report, so nothing below is guaranteed."
 
@@ -43,19 +50,32 @@ def section(anchor: str, title: str, *children: Child) -> Html:
     return element("section", element("h2", title), *children, id=anchor)
 
 
-def verdict(network: Network, certificate: Certificate | None) -> Html:
-    """The outcome in one sentence, marked by word, sign and border."""
+def verdict(network: Network, certificate: Certificate | None, flashed: Certificate | None = None) -> Html:
+    """The outcome in a few sentences, marked by word, sign and border."""
     many = "any number of units" if network.units is None else f"exactly these {network.units} units"
     if certificate is None:
         return _verdict("open", "○", "Nothing proven", NOT_PROVEN_YET)
     low, high, target = certificate.radius.lower, certificate.radius.upper, certificate.target
     if certificate.proven:
-        sentence = f"For {many} the network stays bounded and decays: the radius is at most {upper(high)}" + (
-            f", the target is {quantity(target)}." if target is not None else "."
-        )
-        return _verdict("yes", "✓", "Proven", sentence)
+        loop = "The code as flashed" if certificate.route == "firmware" else "The continuous loop"
+        sentence = (
+            f"{loop}, {many}: while no actuator saturates and every band is kept, the states stay bounded under "
+            f"bounded disturbances and decay when these end. The radius is at most {upper(high)}"
+        ) + (f", the target is {quantity(target)}." if target is not None else ".")
+        return _verdict("yes", "✓", "Proven", f"{sentence}{_flashed_words(network, certificate, flashed)}")
     why = " ".join(reason if reason.endswith(".") else f"{reason}." for reason in certificate.reasons)
     return _verdict("no", "✗", "Not proven", f"{why or 'No reason was recorded.'} Radius: {enclosure(low, high)}.")
+
+
+def _flashed_words(network: Network, certificate: Certificate, flashed: Certificate | None) -> str:
+    """What is known of the sampled code, for the verdict."""
+    if certificate.route == "firmware":
+        return ""
+    if flashed is not None and flashed.proven:
+        period = network.goal.period
+        every = "" if period is None else f" (sampled every {exactly(period, 's')})"
+        return f" Proven as flashed too{every}: radius at most {upper(flashed.radius.upper)}."
+    return " Nothing is proven about the code as flashed (sampled, late, rounded)."
 
 
 def _verdict(look: str, sign: str, word: str, sentence: str) -> Html:
@@ -65,16 +85,29 @@ def _verdict(look: str, sign: str, word: str, sentence: str) -> Html:
 
 def asked(network: Network) -> Html:
     """What the problem file says: kinds, equations, limits, links, goal."""
-    parts: list[Child] = [paragraph(summary(network))]
-    for kind in network.kinds:
+    parts: list[Child] = [paragraph(line) for line in summary(network)[:_MOST_LINES]]
+    shown = list(network.kinds) if network.members is None else list(network.kinds)[:_MOST_KINDS]
+    for kind in shown:
         lines = element("pre", "\n".join(equations(kind)))
-        parts += [element("h3", f"Kind {kind.name}"), lines, _signals(network, kind.name)]
+        parts += [element("h3", f"Kind {kind.name}"), lines, *_controller(kind), _signals(network, kind.name)]
+        inner = [line.strip() for line in inner_text(kind)]
+        if inner:
+            parts += [
+                paragraph("How the proof counts tolerances and nonlinear terms of this kind (in brackets above):"),
+                bullets(inner),
+            ]
+    if len(network.kinds) > len(shown):
+        parts.append(paragraph(f"{len(network.kinds) - len(shown)} more kinds are in the certificate, not here."))
     parts.append(element("h3", "Links"))
-    if network.links:
+    links = links_shown(network)
+    if links:
         items: list[Child] = [
-            join_words(element("strong", link.name), f": {link_sentence(network, link)}.") for link in network.links
+            join_words(element("strong", link.name), f": {link_sentence(network, link)}.")
+            for link in links[:MOST_LINKS]
         ]
-        parts += [paragraph("Seen from unit i:"), bullets(items)]
+        more = len(links) - len(items)
+        parts += [paragraph("Seen from unit i:") if any(link.at for link in links) else None, bullets(items)]
+        parts += [paragraph(f"{more} more kinds of link are in the certificate, not here.")] if more else []
     else:
         parts.append(paragraph("None: the units do not act on each other."))
     goal = network.goal
@@ -84,9 +117,29 @@ def asked(network: Network) -> Html:
     if goal.fastest is not None:
         wanted.append(f"Fastest mode of a closed unit: modulus at most {exactly(goal.fastest, '1/s')}.")
     if goal.period is not None:
-        wanted.append(f"Sample period of the controller: {exactly(goal.period, 's')} (not part of the proof).")
+        wanted.append(
+            f"Sample period of the controller: {exactly(goal.period, 's')}, computation delay "
+            f"{exactly(goal.computation_delay, 's')} (part of a proof as flashed, not of that of the continuous loop)."
+        )
     parts += [element("h3", "Goal"), bullets(wanted)]
     return section("asked", "What was asked", *parts)
+
+
+def _controller(kind: Kind) -> list[Html]:
+    """What runs in the controller beside the gains, where it has states of its own."""
+    own = kind.controller
+    if own is None:
+        return []
+    words = [f"{state} adds up {sensor} over time" for state, sensor in own.integrals.items()]
+    words += [f"{estimate} follows {state}, corrected by the gains" for estimate, state in own.estimates.items()]
+    words += [f"{state} is a memory whose rate of change the gains set" for state in own.memory]
+    made = f" Not actuators of the plant but rates of these states: {', '.join(own.inputs)}." if own.inputs else ""
+    return [
+        paragraph(
+            f"The controller of this kind has states of its own, which run in the firmware and are part of the proof: "
+            f"{'; '.join(words)}.{made}"
+        )
+    ]
 
 
 def join_words(*children: Child) -> Html:
@@ -103,14 +156,18 @@ def _signals(network: Network, name: str) -> Html:
         rows.append([role, signal, unit_text(unit) or "1", "" if bound is None else f"{word} {exactly(bound, unit)}"])
 
     for state in kind.states:
-        add("state", state.name, state.unit, state.band, "band ±")
+        own = kind.controller is not None and state.name in kind.controller.states
+        add("controller state" if own else "state", state.name, state.unit, state.band, "band ±")
     for actuator in kind.inputs:
-        add("actuator", actuator.name, actuator.unit, actuator.limit, "limit ±")
-    for disturbance in kind.disturbances:
+        own = kind.controller is not None and actuator.name in kind.controller.inputs
+        add(
+            "rate of a controller state" if own else "actuator", actuator.name, actuator.unit, actuator.limit, "limit ±"
+        )
+    for disturbance in (w for w in kind.disturbances if not internal(w.name)):
         add("disturbance", disturbance.name, disturbance.unit, disturbance.peak, "peak ±")
-    for take in kind.takes:
+    for take in (t for t in kind.takes if not internal(t.name)):
         add("taken", take.name, take.unit, take.band, "band ±")
-    for offer in kind.offers:
+    for offer in (o for o in kind.offers if not internal(o.name)):
         add("offered", offer.name, offer.unit, offer.band, "band ±")
     return table(f"Signals of {name}", ("Role", "Name", "Unit", "Declared bound"), rows)
 
@@ -164,9 +221,10 @@ def radius_section(certificate: Certificate | None, margin: Margin | None) -> Ht
         figure(
             draw_radius(low, high, certificate.target), f"Radius {enclosure(low, high)}, route {certificate.route}."
         ),
+        paragraph(f"Route {certificate.route}: {_ROUTES.get(certificate.route, 'see the claim below')}."),
     ]
     if margin is not None and margin.bottleneck:
-        shares = ", ".join(f"{name} {quantity(100 * share, count=2)} %" for name, share in margin.bottleneck)
+        shares = ", ".join(f"{name} {quantity(100 * share, '%', count=2)}" for name, share in margin.bottleneck)
         parts.append(paragraph(f"Bottleneck, the share of each link class in the radius: {shares}."))
     return section("radius", title, *parts)
 
@@ -189,15 +247,20 @@ def peaks_section(network: Network, certificate: Certificate | None) -> Html:
         against = "" if bound is None else quantity(bound, peak.unit)
         part = "" if share is None else f"{upper(100 * share, count=3)}{' %'}" + ("" if share < 1 else " exceeded")
         rows.append([peak.kind, peak.role, peak.signal, upper(peak.value, peak.unit), against, part, bar])
+    loop = "the code as flashed" if certificate.route == "firmware" else "the continuous loop"
     note = (
-        "Upper bounds on the absolute value under the declared disturbances, starting from rest, at every time and for "
-        "every unit. An actuator below its limit never saturates inside the declared envelope."
+        f"Upper bounds on the absolute value, for {loop} under the declared disturbances, starting from rest, at every "
+        "time and for every unit. An actuator below its limit never saturates inside the declared envelope."
     )
+    if any(internal(peak.signal) for peak in certificate.peaks):
+        note += (
+            " Offers called 'tolerance of' or 'curve of' something are the arguments of the terms named under the kind."
+        )
     header = ("Kind", "Role", "Signal", "Peak at most", "Bound", "Share", "")
     return section("peaks", title, paragraph(note), table("Peaks", header, rows, numeric=(3, 4, 5)))
 
 
-def constants_section(certificate: Certificate | None) -> Html:
+def constants_section(network: Network, certificate: Certificate | None) -> Html:
     """C, alpha and G with the norm in words, and where the claim is valid."""
     title = "Constants of the guarantee"
     if certificate is None or certificate.constants is None:
@@ -205,7 +268,7 @@ def constants_section(certificate: Certificate | None) -> Html:
         return section("constants", title, paragraph(why, cls="absent"))
     constants, valid = certificate.constants, certificate.validity
     rows: list[list[Child]] = [
-        ["C", upper(constants.C), "how much an initial deviation may grow before it decays"],
+        ["C", upper(constants.C), "how many times its initial size a deviation may reach before it decays"],
         ["α", lower(constants.alpha, "1/s"), "rate of decay"],
         ["G", upper(constants.G), "from the largest disturbance to the largest state"],
     ]
@@ -220,8 +283,23 @@ def constants_section(certificate: Certificate | None) -> Html:
         formula,
         table("Constants", ("Constant", "Value", "Meaning"), rows, numeric=(1,)),
         paragraph(f"Norm: {constants.norm}."),
+        paragraph(_mixed(network)),
     ]
     return section("constants", title, *parts)
+
+
+def _mixed(network: Network) -> str:
+    """What a size means that compares numbers of several units."""
+    states = [f"{s.name} in {unit_text(s.unit) or '1'}" for k in network.kinds[:1] for s in k.states]
+    units = {s.unit for kind in network.kinds for s in kind.states}
+    if len(units) == 1:
+        return f"All states are in {unit_text(units.pop()) or 'the unit 1'}, so X₀ is a size in that unit."
+    return (
+        "States of different units are compared here by their bare numbers: an X₀ of 0.1 allows each state of every "
+        f"unit 0.1 of its own unit ({', '.join(states)}{', ...' if len(network.kinds) > 1 else ''}). Disturbances "
+        "likewise. C, G, X₀ and w therefore depend on the units the problem file declares; the peaks above, each in "
+        "the unit of its signal, do not."
+    )
 
 
 def scope_section(certificate: Certificate | None) -> Html:

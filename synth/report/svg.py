@@ -11,6 +11,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, field
 from decimal import Decimal
 from html import escape
+from itertools import pairwise
 
 # Okabe & Ito, "Color universal design" (2008): colours that people with colour-blindness tell apart. Each is always
 # used with its own dash pattern and a written label, so the picture also reads in grey.
@@ -128,6 +129,27 @@ def thin(xs: Sequence[float], ys: Sequence[float], columns: int = 400) -> tuple[
     return [float(xs[i]) for i in order], [float(ys[i]) for i in order]
 
 
+def envelope(xs: Sequence[float], ys: Sequence[float], columns: int = 110) -> list[tuple[float, float, float]]:
+    """(x, lowest, highest) per column where most samples turn round, so that a line would show the sampling instead.
+
+    A signal that changes direction at more than a third of its samples has fewer than about six of them per swing.
+    Empty if it is slower or has fewer than three samples a column. Law: every sample lies inside the band.
+    """
+    if len(xs) < 3 * columns:
+        return []
+    size = max(map(abs, ys))
+    rises = [b - a for a, b in pairwise(ys)]
+    turns = sum(a * b < 0 and min(abs(a), abs(b)) > 1e-6 * size for a, b in pairwise(rises))
+    if 3 * turns < len(ys):
+        return []
+    band = []
+    for k in range(columns):
+        part = range(k * len(xs) // columns, min((k + 1) * len(xs) // columns + 1, len(xs)))
+        values = [ys[i] for i in part]
+        band += [(xs[part[0]], min(values), max(values)), (xs[part[-1]], min(values), max(values))]
+    return band
+
+
 def spread(positions: Sequence[float], gap: float, low: float, high: float) -> list[float]:
     """Move label positions apart so that neighbours are ``gap`` away from each other, inside [low, high].
 
@@ -185,6 +207,11 @@ class Board:
             f'<path d="{text}" fill="none" stroke="{stroke}" stroke-width="{number(width)}" '
             f'stroke-linejoin="round"{_dash(dash)}/>'
         )
+
+    def area(self, points: Sequence[tuple[float, float]], fill: str) -> None:
+        """A pale area inside the points."""
+        text = " ".join(f"{number(x)},{number(y)}" for x, y in points)
+        self.parts.append(f'<polygon points="{text}" fill="{fill}" fill-opacity="0.18"/>')
 
     def box(self, x: float, y: float, width: float, height: float, fill: str, stroke: str = "none") -> None:
         """A rectangle; ``fill`` may be the result of ``hatch``."""

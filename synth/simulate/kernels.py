@@ -109,7 +109,7 @@ def held_kernels(block: System, rows: tuple[Array, Array, Array], h: float, step
 
 def horizon(section: Section, tail: float = 3e3) -> float:
     """Seconds until the slowest mode of the closed units has fallen (or, in a growing unit, risen) by ``tail``."""
-    modes = np.linalg.eigvals(section.block.A)
+    modes = section.eigenvalues()
     if not modes.size:
         return 1.0
     fastest = float(np.abs(modes).max())

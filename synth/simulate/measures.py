@@ -41,7 +41,7 @@ def number(value: Any) -> float:
 
 @dataclass(frozen=True)
 class Claim:
-    """What a proven certificate guarantees, as arrays in the stacked order of one cell.
+    """What a proven certificate guarantees, as arrays in the stacked order of one cell ([number], or [number, unit]).
 
     ``peaks`` and ``limits``: role -> bound per signal (inf: none), declared units; peaks from rest under the declared
     disturbances.
@@ -67,6 +67,9 @@ def read_claim(certificate: Any, section: Section) -> Claim | None:
     stated = {(p.kind, p.role, p.signal): p for p in certificate.peaks}
     peaks, limits = {}, {}
     for group, role in ROLES.items():
+        if section.names is not None:
+            peaks[role], limits[role] = _by_unit(section, stated, group, role)
+            continue
         found = [stated.get((kind, role, name)) for kind, name, _ in section.numbers(group)]
         peaks[role] = np.array([math.inf if p is None else number(p.value) for p in found])
         limits[role] = np.array([math.inf if p is None else number(getattr(p, "limit", None)) for p in found])
@@ -75,6 +78,20 @@ def read_claim(certificate: Any, section: Section) -> Claim | None:
         number(constants.C), number(constants.alpha), number(constants.G), peaks, limits,
         number(_entry(validity, "X0")), number(_entry(validity, "w")), number(_entry(validity, "factor")),
     )  # fmt: skip
+
+
+def _by_unit(section: Section, stated: dict[Any, Any], group: str, role: str) -> tuple[Array, Array]:
+    """Peaks and limits [number, unit]: what is stated for a unit by its name, else for its kind (inf: nothing)."""
+    assert section.names is not None and section.where is not None
+    lines = section.numbers(group)
+    found = np.full((2, len(lines), section.cells), math.inf)
+    for i, (form, signal, _) in enumerate(lines):
+        for unit in section.where[form].tolist():
+            name, kind = section.names[unit]
+            p = stated.get((name, role, signal)) or stated.get((kind, role, signal)) or stated.get((form, role, signal))
+            if p is not None:
+                found[:, i, unit] = number(p.value), number(getattr(p, "limit", None))
+    return found[0], found[1]
 
 
 def _entry(holder: Any, name: str) -> Any:
@@ -130,7 +147,8 @@ class Watch:
             for t in self.terms:
                 peak = stated * t.scale if t.scale is not None else np.full_like(stated, np.inf)
                 columns.append(np.minimum(peak, self.claim.limits[role]) if t.limits else peak)
-            found[role] = np.stack(columns, axis=-1)[:, None, :]
+            joined = np.stack(columns, axis=-1)  # [number, run], or [number, unit, run]
+            found[role] = joined if joined.ndim == 3 else joined[:, None, :]
         return found
 
     def start(self, x0: Array) -> None:
@@ -232,9 +250,14 @@ def signal_table(
     for group, role in ROLES.items():
         for i, line in enumerate(lines_of(section, group)):
             seen = float(peaks[role][i].max(initial=0.0))
-            bound = float(claim.peaks[role][i]) * scale if claim is not None else math.inf
+            bound = _stated(section, claim.peaks[role][i], line.kind) * scale if claim is not None else math.inf
             rows.append(_row(line, seen, bound))
     return rows
+
+
+def _stated(section: Section, peaks: Array, kind: str) -> float:
+    """The peak of a signal; over units that have peaks of their own the largest of the kind's."""
+    return float(peaks if section.where is None else np.max(peaks[section.where[kind]], initial=0.0))
 
 
 def _row(line: Line, seen: float, bound: float) -> dict[str, object]:

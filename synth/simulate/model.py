@@ -13,7 +13,7 @@ system (links without delay solved in) act on the first two axes together, numbe
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from fractions import Fraction
 from typing import Any
@@ -86,7 +86,8 @@ class Section:
 
     ``limits`` are the actuator limits (inf: none), ``peaks`` the declared disturbance peaks, both in stacked order and
     in
-    declared units; ``reach`` is the largest distance of a link in cells.
+    declared units. In sections unit by unit (synth.simulate.units) a cell is one unit: ``where`` lists the cells of
+    each kind, ``names`` unit and kind of each cell, ``modes`` the eigenvalues of the closed units; wires are threads.
     """
 
     network: Network
@@ -94,14 +95,21 @@ class Section:
     cells: int
     shape: Shape
     block: System
-    wires: tuple[Wire, ...]
+    wires: tuple[Any, ...]
     limits: Array
     peaks: Array
+    where: Mapping[str, Any] | None = None
+    names: tuple[tuple[str, str], ...] | None = None
+    modes: Array | None = None
+
+    def eigenvalues(self) -> Array:
+        """Modes of the closed units by themselves, 1/s."""
+        return np.linalg.eigvals(self.block.A) if self.modes is None else self.modes
 
     @property
     def units(self) -> int:
         """Number of units: one of each kind per cell."""
-        return self.cells * len(self.closed)
+        return self.cells if self.where is not None else self.cells * len(self.closed)
 
     @property
     def deepest(self) -> int:

@@ -7,7 +7,7 @@ from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from functools import reduce
 from math import ceil, gcd, isfinite
-from typing import Any
+from typing import Any, TypeVar
 
 import numpy as np
 
@@ -16,6 +16,9 @@ from synth.simulate.measures import Claim, Terms, Watch, read_claim
 from synth.simulate.model import Array, Section, Wire
 from synth.simulate.stepper import Control
 from synth.simulate.trajectory import Run
+from synth.simulate.weave import Thread
+
+AnyWire = TypeVar("AnyWire", Wire, Thread)
 
 FINE, COARSE = 0.04, 0.1  # step times the fastest mode: runs as wired, adversaries over the class
 MOST_STEPS = 60_000  # steps of a run with the links as wired
@@ -74,7 +77,7 @@ def prepare(section: Section, certificate: Any, seconds: float, saturate: bool, 
         notes.append(
             "no initial size is valid together with the declared disturbances; initial runs are undisturbed and tiny"
         )
-    modes = np.abs(np.linalg.eigvals(section.block.A))
+    modes = np.abs(section.eigenvalues())
     fastest = float(modes.max(initial=0.0)) or 1.0 / seconds
     step, coarse = _choose_step(section, seconds, fastest, FINE), _choose_step(section, seconds, fastest, COARSE)
     if float(step) * fastest > 2 * FINE:
@@ -99,7 +102,7 @@ def _choose_step(section: Section, seconds: float, fastest: float, ratio: float)
     wanted = max(min(ratio / fastest, seconds / 400), seconds / MOST_STEPS)
     delays = sorted({w.delay for w in section.wires if w.delay > 0 and float(w.delay) >= wanted / 4})
     if delays:
-        common = reduce(_common, delays)
+        common: Fraction = reduce(_common, delays)
         aligned = common / ceil(float(common) / wanted)
         if float(aligned) >= wanted / 4:
             return aligned
@@ -112,6 +115,6 @@ def _common(a: Fraction, b: Fraction) -> Fraction:
     return Fraction(gcd(a.numerator * b.denominator, b.numerator * a.denominator), a.denominator * b.denominator)
 
 
-def fresh_if_short(wires: Sequence[Wire], step: Fraction) -> tuple[Wire, ...]:
+def fresh_if_short(wires: Sequence[AnyWire], step: Fraction) -> tuple[AnyWire, ...]:
     """Wires whose delay is shorter than a step become wires without delay: within the declared delay all the same."""
     return tuple(replace(w, delay=Fraction(0)) if w.delay < step else w for w in wires)

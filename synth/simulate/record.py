@@ -46,9 +46,12 @@ class Recorder:
             for kind, (low, high) in _ranges(self.section, source).items():
                 if self.times:
                     parts = [values[:, low:high, :, run] for values in self.kept[group]]
-                    found[group][kind] = np.ascontiguousarray(np.concatenate(parts).transpose(0, 2, 1))
+                    joined = np.concatenate(parts).transpose(0, 2, 1)
+                    where = self.section.where
+                    found[group][kind] = np.ascontiguousarray(joined if where is None else joined[:, where[kind]])
                 else:
-                    found[group][kind] = np.zeros((0, self.section.cells, high - low))
+                    units = self.section.cells if self.section.where is None else len(self.section.where[kind])
+                    found[group][kind] = np.zeros((0, units, high - low))
         return times, found
 
 

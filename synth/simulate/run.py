@@ -16,16 +16,18 @@ from synth.base.errors import InputError, Problem, nearest
 from synth.base.progress import Listener, silent
 from synth.base.provenance import Provenance
 from synth.network.gains import Gains
-from synth.network.model import Network, need_fixed_pattern
+from synth.network.model import Network
 from synth.simulate.adversary import GROUPS, attack_class, attack_late, late_starts, wired_scenarios
 from synth.simulate.effects import Scenario, random_scenarios, start_scenarios, steady_scenarios, worst_frequency
 from synth.simulate.kernels import horizon, targets
 from synth.simulate.measures import Terms, Watch, amplification, signal_table
 from synth.simulate.model import Array, Section, build_section, fold_fresh, open_loop
-from synth.simulate.prepare import INSIDE, MOST_STEPS, Job, fresh_if_short, prepare
+from synth.simulate.prepare import MOST_STEPS, Job, fresh_if_short, prepare
 from synth.simulate.record import Recorder, stride_for
 from synth.simulate.stepper import Block, Control, Stepper, march
 from synth.simulate.trajectory import Run, Trajectory, Worst
+from synth.simulate.unit_stage import Asked, attack_sizes, run_units
+from synth.simulate.units import needs_units
 from synth.simulate.written import Written, parameter_runs, run_written
 
 SCENARIOS = ("step", "sine", "random", "pulse", "leader", "start", "written", "adversary", "held")
@@ -50,7 +52,9 @@ def simulate(
 
     ``design_or_gains``: a Design (its ``.gains``) or Gains, u = K y. ``certificate``: the claim to check; None or
     unproven: nothing is
-    checked. ``units``: cells simulated, one unit of each kind in each (default: the network's plan). ``seconds``:
+    checked. ``units``: cells simulated, one unit of each kind in each (default: the network's plan); in two and three
+    dimensions a block of at least as many, from an edge inward as many cells, under rules as many units of each kind;
+    members are taken whole. ``seconds``:
     length of a run in s.
     ``seed``: integer for the random scenarios. ``scenarios``: names from SCENARIOS, default all. ``plant_gains``: the
     gains that
@@ -61,8 +65,16 @@ def simulate(
     """
     chosen = _check(scenarios, units, seconds)
     gains = plant_gains if plant_gains is not None else getattr(design_or_gains, "gains", design_or_gains)
-    need_fixed_pattern(network, "the simulation")
+    if not isinstance(network, Network):
+        raise InputError(
+            f"the simulation needs a network, not {type(network).__name__}; read a problem file first: "
+            "synth.read(path)."
+        )
     cells = units if units is not None else network.simulation.units
+    if needs_units(network):
+        length = float(seconds if seconds is not None else network.simulation.seconds)
+        ask = Asked(cells, length, seed, chosen, saturate)
+        return _finish(run_units(network, gains, certificate, ask, _collect, progress), network, seed, chosen)
     section = build_section(network.without_self_links(), gains, cells)
     job = prepare(
         section, certificate, float(seconds if seconds is not None else network.simulation.seconds), saturate, progress
@@ -181,12 +193,7 @@ def _run_class(job: Job, section: Section) -> None:
     section = replace_cells(section, min(section.cells, CLASS_CELLS))
     if not section.block.sizes[2]:
         return
-    flavours: list[tuple[str, Array, float | None]] = []
-    if section.peaks.any():
-        flavours.append(("any links", job.amplitude, job.scale))
-    if len(set(section.peaks)) > 1 or not section.peaks.any():
-        size = job.claim.w * INSIDE if job.claim is not None and isfinite(job.claim.w) else 1.0
-        flavours.append(("any links, equal disturbances", np.full(len(section.peaks), size), None))
+    flavours = attack_sizes(job, section)
     h = float(job.coarse)
     epoch = min(MOST_EPOCH, ceil(horizon(section) / h))
     most = max(3 * epoch, int(MOST_CLASS_STEPS * min(1.0, 600 / (section.cells * section.block.sizes[0]))))
@@ -199,9 +206,13 @@ def _run_class(job: Job, section: Section) -> None:
             Recorder(section, stride_for(section, most, 20)),
             Recorder(section, stride_for(section, epoch, 40)),
         )
-        done = attack_class(
-            section, amplitude, job.coarse, epoch, most, _both(climb, first), _both(final, last), job.control()
-        )
+
+        def inherit(block: Block, climb: Watch = climb, final: Watch = final, last: Recorder = last) -> np.ndarray:
+            final.sup_w = np.maximum(final.sup_w, climb.sup_w[0])  # the disturbances of the climb belong to these runs
+            last(block)
+            return final(block)
+
+        done = attack_class(section, amplitude, job.coarse, epoch, most, _both(climb, first), inherit, job.control())
         words = "every link delivers plus or minus its strength times the peak its source has reached, timed to push"
         _collect(job, climb, first, [(f"{title}, climb", words)])
         if last.times:
@@ -327,6 +338,17 @@ def _run_held(job: Job, network: Network) -> None:
     }
 
 
+def _ends(network: Network) -> str:
+    if network.members is not None:
+        return "these units with their links, and no others"
+    if network.description == "rules":
+        return "a random wiring within the rules; the claim is about every one of them"
+    begin = "the section starts at the edge; beyond its other end" if len(network.edges) == 1 else "open ends:"
+    if len(network.edges) == 2:
+        return "the line between both edges, all of it; in a field units along the edges behave alike"
+    return f"{begin} a link from outside delivers nothing; an end unit keeps its own part of a relative link"
+
+
 def _finish(job: Job, network: Network, seed: int, chosen: Sequence[str]) -> Trajectory:
     """Put the result together."""
     section, claim = job.section, job.claim
@@ -340,7 +362,7 @@ def _finish(job: Job, network: Network, seed: int, chosen: Sequence[str]) -> Tra
         "signals": signal_table(section, claim, job.peaks or zero, job.scale), **job.measures,
     }  # fmt: skip
     notes = [
-        "open ends: a link from outside delivers nothing; an end unit keeps its own part of a relative link",
+        _ends(network),
         "peaks are read on the grid: a maximum between two samples is not seen",
         *job.notes,
     ]

@@ -102,7 +102,7 @@ def test_a_kind_without_places_is_a_group_of_its_own() -> None:
     assert joined.gain_groups() == {"both": ("front", "rear")}
 
 
-def test_members_with_other_parameters_keep_their_own_gains_unless_asked() -> None:
+def test_members_with_other_parameters_share_gains_unless_asked() -> None:
     import networkx as nx
 
     graph = nx.DiGraph()
@@ -110,8 +110,10 @@ def test_members_with_other_parameters_keep_their_own_gains_unless_asked() -> No
     graph.add_node("b", kind="car", lag="0.6 s")
     graph.add_edge("a", "b", name="follow", offer="place", take="ahead", strength="0.1 1/s^2")
     problem: dict[str, Any] = {"synth": 1, "kinds": {"car": CAR}, "network": {"members": {"graph": graph}}}
-    assert [len(names) for names in read(problem).gain_groups().values()] == [1, 1]
-    assert list(read({**problem, "design": {"gains": "per_kind"}}).gain_groups()) == ["car"]
+    assert list(read(problem).gain_groups()) == ["car"]
+    for word in ("per_unit", "per_place"):
+        own = read({**problem, "design": {"gains": word}})
+        assert [len(names) for names in own.gain_groups().values()] == [1, 1]
 
 
 def test_what_the_design_says_of_a_kind_holds_at_all_its_places() -> None:

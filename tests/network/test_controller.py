@@ -52,7 +52,7 @@ def test_an_integral_leaves_no_lasting_error() -> None:
     assert abs(at_rest[0, 0]) < 1e-12
     plain = close_unit(hauler(), (), M([["-6", "-5", "-1.5"]]))
     assert abs(np.linalg.solve(plain.A.floats(), plain.E.floats())[0, 0]) > 0.1
-    assert kind.states[-1] == Signal("slot_integral", "(m) s")
+    assert kind.states[-1] == Signal("slot_integral", "m s")
     assert kind.controller is not None and kind.controller.states == ("slot_integral",)
 
 
@@ -122,7 +122,7 @@ def test_firmware_rows_are_the_fixed_part(tmp_path: Path) -> None:
 def test_units_and_widths(tmp_path: Path) -> None:
     kind = written("{memory: 2, integrals: [slot]}", tmp_path).kinds[0]
     assert [s.name for s in kind.states] == ["slot", "speed", "drive", "slot_integral", "memory_1", "memory_2"]
-    assert [s.unit for s in kind.sensors[3:]] == ["(m) s", "1", "1"]
+    assert [s.unit for s in kind.sensors[3:]] == ["m s", "1", "1"]
     assert [a.limit for a in kind.inputs[1:]] == [None, None]
     assert kind.equations["slot_integral'"] == "slot"
 

@@ -254,7 +254,7 @@ network: {pattern: {dimension: 1, links: []}}
         (("tanh(demand/grip) + ahead", "tanh((demand + ahead)/grip)"),
          "how far ahead may go from the operating point; declare a band, such as 'ahead: {in: m/s^2, band: 2 m/s^2}'"),
         (("drag*speed*abs(speed)", "drag*lag*speed*abs(drive)"), "needs to know how far drive may go"),
-        (("drag*speed*abs(speed)", "drag*speed*abs(speed) - grip"), "is not zero when all signals are (-2 (m/s)/s)"),
+        (("drag*speed*abs(speed)", "drag*speed*abs(speed) - grip"), "is not zero when all signals are (-2 m/s^2)"),
         (("drag*speed*abs(speed)", "grip*sqrt(drag*slot)"),
          "'sqrt(drag*slot)' has no value or no bounded slope everywhere in the bands of slot"),
         (("drag*speed*abs(speed)", "grip*speed/(speed + speed*abs(drag*speed*lag))"),

@@ -74,6 +74,7 @@ def test_every_later_key_is_refused(sort: str) -> None:
         "class": ("network", "classes", "follow"),
         "design": ("design",),
         "simulation": ("simulation",),
+        "hop": ("design", "hop"),
     }
     for key in LATER[sort]:
         data = yaml.load(CONVOY.read_text(encoding="utf-8"), CoreLoader)
@@ -82,6 +83,8 @@ def test_every_later_key_is_refused(sort: str) -> None:
         hauler["takes"]["ahead"] = {"in": "m/s^2"}
         hauler["sensors"] = {"slot": {"is": "slot"}}
         data["network"]["classes"] = {"follow": {}}
+        if sort == "hop":
+            data["design"] = {"claim": "hop", "hop": {"notion": "peak", "signal": "place"}}
         read(data)
         if sort == "matrices":
             hauler["matrices"] = {}

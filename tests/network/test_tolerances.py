@@ -229,7 +229,7 @@ def test_matrix_entries_may_have_a_tolerance(tmp_path: Path) -> None:
         ("tolerance of A[2,2]", Fraction(1, 5)),
         ("tolerance of B[2,1]", Fraction(1, 2)),
     ]
-    assert [s.unit for s in kind.takes] == ["(m/s)/s", "(m/s)/s"] and [s.unit for s in kind.offers] == ["m/s", "V"]
+    assert [s.unit for s in kind.takes] == ["m/s^2", "m/s^2"] and [s.unit for s in kind.offers] == ["m/s", "V"]
     assert [[*row] for row in kind.D.rows] == [[0, 0], [1, 1]]
     assert kind.H.rows == ((0, 1), (0, 0)) and kind.Fu is not None and kind.Fu.rows == ((0,), (1,))
     assert kind.dynamics is None
@@ -266,7 +266,7 @@ def matrix_kind(a: str, b: str) -> Kind:
         ("{lag: 0.5 s, p: 1..2}", ("speed': drive + slope", "speed': drive*2**p + slope"),
          "a power must be a number from -12 to 12 without unit and tolerance"),
         ("{lag: 0.5 s, p: 1..2 m/s^2}", ("speed': drive + slope", "speed': drive + slope - p"),
-         "is not zero when all signals are (-1.5 (m/s)/s)"),
+         "is not zero when all signals are (-1.5 m/s^2)"),
         ("{lag: 0.5 s, p: 1..2 kg}", ("speed': drive + slope", "speed': drive + slope*p"), "has the unit m kg/s^2"),
     ],
 )  # fmt: skip

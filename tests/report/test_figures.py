@@ -260,3 +260,44 @@ def test_share_bars(share: float | None, words: str) -> None:
     svg = share_bar("s", share)
     assert inside(svg)
     assert words in svg
+
+
+def test_curves_of_runs_from_rest_start_at_zero() -> None:
+    def starts(first: float, **changes: object) -> tuple[str, str]:
+        made = run("leader", (0.3, 0.2))
+        kept = made.time > first
+        made = replace(
+            made,
+            time=made.time[kept],
+            offers={"hauler": made.offers["hauler"][kept]},
+            **changes,  # type: ignore[arg-type]
+        )
+        svg = draw_string_response(trajectory(runs=(made,)), "hauler", "place")
+        found = re.search(r'<path d="M(\S+) (\S+?)L', svg)
+        assert found is not None
+        return found[1], found[2]
+
+    assert starts(0.05)[0] == "58"  # the left edge of the frame, although the first stored sample is at 0.1 s
+    assert starts(0.05) == starts(-1.0)
+    assert "<svg" in draw_string_response(trajectory(), "hauler", "place")
+    late = replace(run("leader", (0.3, 0.2)), time=run("leader", (0.3,)).time + 98.0)
+    assert ">98<" in draw_string_response(trajectory(runs=(late,)), "hauler", "place")
+    assert starts(0.05, X0=0.1)[1] != starts(0.05)[1]  # nothing is known of such a run before its first sample
+
+
+def test_a_number_on_the_line_interrupts_a_leader() -> None:
+    svg = draw_radius(0.4, 0.4001, 0.8)
+    papers = [float(x) + float(w) / 2 for x, w in re.findall(r'<rect x="(\S+)" y="63" width="(\S+)" [^>]*#ffffff', svg)]
+    leader = re.search(r'<line x1="(\S+)" [^>]*stroke-dasharray="4 3"', svg)
+    assert leader is not None and any(abs(x - float(leader[1])) < 0.1 for x in papers)
+    last_line = max(m.start() for m in re.finditer(r'stroke-dasharray="4 3"', svg))
+    assert last_line < svg.index('y="63"')  # the paper lies over the leader, the number over the paper
+
+
+def test_a_fast_swing_gets_a_band() -> None:
+    time = np.linspace(0.0, 50.0, 1000)
+    swing = np.sin(1.9 * np.arange(1000))[:, None, None] * np.ones((1, 2, 1))
+    made = replace(run("leader", (0.3, 0.2)), time=time, offers={"hauler": swing})
+    made = replace(made, disturbances={})
+    assert "fill-opacity" in draw_string_response(trajectory(runs=(made,)), "hauler", "place")
+    assert "fill-opacity" not in draw_string_response(trajectory(), "hauler", "place")

@@ -16,6 +16,7 @@ import pytest
 
 from synth.base.caution import CAUTIONS
 from synth.handoff import bundle, hand_off
+from synth.network import read
 from synth.network.model import Network
 from synth.report import write_report
 from synth.report.html import enclosure, exactly, lower, quantity, unit_text, upper
@@ -24,6 +25,7 @@ from synth.report.words import equations, link_sentence
 from synth.simulate.trajectory import Worst
 from tests.build import M, convoy, convoy_gains, scalar_kind
 from tests.handoff.standins import FakeCertificate
+from tests.network.files import CONVOY
 from tests.report.standins import FakeDesign, margin, run, trajectory
 
 EMPTY = {"meta", "br", "hr", "img", "input", "link"}
@@ -36,6 +38,7 @@ SECTIONS = (
     "response",
     "constants",
     "scope",
+    "flashed",
     "handoff",
     "cautions",
     "provenance",
@@ -84,12 +87,20 @@ class Reader(HTMLParser):
         return " ".join(self.words[key].replace("\u00a0", " ").split())
 
 
+def flashed_certificate(network: Network) -> FakeCertificate:
+    """Of the firmware route, with a larger peak than the loop's (invented)."""
+    made = FakeCertificate(network, convoy_gains(), route="firmware", claim="As flashed, for any number of haulers.")
+    peaks = tuple(replace(peak, value=peak.value * 1.125) for peak in made.peaks)
+    return replace(made, peaks=peaks, hash="f" * 64, excludes=("Overrun periods.",))
+
+
 def full(tmp_path: Path, monkeypatch: pytest.MonkeyPatch, network: Network | None = None, **changes: Any) -> str:
     monkeypatch.setattr(bundle, "_still_verified", lambda path, network: None)
     network = network or convoy()
     certificate = FakeCertificate(network, convoy_gains())
     made = hand_off(network, convoy_gains(), certificate, tmp_path / "bundle")
     results: dict[str, Any] = {
+        "flashed": flashed_certificate(network),
         "design": FakeDesign(convoy_gains()),
         "certificate": certificate,
         "margin": margin(),
@@ -146,6 +157,7 @@ def test_the_numbers_are_those_of_the_results(tmp_path: Path, monkeypatch: pytes
         ],
         "constants": ["C 12.5", "0.125 1/s", "G 3.75", "w allowed 0.3437", "maximum over states and units"],
         "scope": ["Links that are up to 0.1 s late.", "Sampling of the controllers.", "for any number of haulers"],
+        "flashed": ["0.4862 m 1.5 m 32.5 %", "As flashed, for any number", "Overrun periods.", "0.02 s"],
         "handoff": ["3 gains in 9 files", "continuous loop: yes", "as flashed: no", "gains.csv"],
         "cautions": list(CAUTIONS),
         "provenance": [convoy().hash, "c" * 64, "python3 check.py certificate.json", "sha256sum -c SHA256SUMS"],
@@ -159,6 +171,7 @@ def test_each_missing_part_is_said(tmp_path: Path, monkeypatch: pytest.MonkeyPat
     words = {
         "design": ("gains", "No design was handed"),
         "certificate": ("peaks", "No proof was attempted"),
+        "flashed": ("flashed", "Nothing was proven about the code as flashed"),
         "margin": ("margin", "The margin was not computed"),
         "trajectory": ("response", "Nothing was simulated"),
         "bundle": ("handoff", "No bundle was written"),
@@ -299,3 +312,96 @@ def test_importing_the_stage_is_light(stage: str) -> None:
     heavy = "{'numpy', 'scipy', 'cvxpy', 'networkx', 'matplotlib', 'flint'} & set(sys.modules)"
     code = f"import sys, synth.{stage}; assert not {heavy}"
     assert subprocess.run([sys.executable, "-c", code], check=False).returncode == 0
+
+
+def test_the_commands_that_verify_are_those_of_the_bundle(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    made = SimpleNamespace(
+        rows=(),
+        files=("certificate.json", "certificate_continuous.json"),
+        proven=True,
+        proven_continuous=True,
+        reason="",
+    )
+    words = Reader(full(tmp_path, monkeypatch, bundle=made)).said("provenance")
+    assert "python3 check_firmware.py certificate.json" in words
+    assert "python3 check.py certificate_continuous.json" in words
+    assert "python3 check.py certificate.json" not in words
+    assert "f" * 64 in words
+    assert "check_firmware" not in Reader(full(tmp_path, monkeypatch)).said("provenance")
+
+
+def test_the_verdict_names_the_loop_and_the_code_as_flashed(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    both = Reader(full(tmp_path, monkeypatch)).said("header")
+    assert "The continuous loop" in both and "Proven as flashed too (sampled every 0.02 s)" in both
+    loop = Reader(full(tmp_path, monkeypatch, flashed=None)).said("header")
+    assert "Nothing is proven about the code as flashed" in loop
+    failed = replace(flashed_certificate(convoy()), proven=False, reasons=("The period is too long.",))
+    reader = Reader(full(tmp_path, monkeypatch, flashed=failed))
+    assert "Nothing is proven about the code" in reader.said("header")
+    assert "Not proven. The period is too long." in reader.said("flashed")
+
+
+def test_sizes_that_mix_units_are_explained(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    words = Reader(full(tmp_path, monkeypatch)).said("constants")
+    assert "slot in m, speed in m/s, drive in m/s²" in words and "by their bare numbers" in words
+    kind = convoy().kinds[0]
+    same = replace(convoy(), kinds=(replace(kind, states=tuple(replace(s, unit="m") for s in kind.states)),))
+    assert "All states are in m" in Reader(full(tmp_path, monkeypatch, same)).said("constants")
+
+
+def test_what_tolerances_became_is_told_and_not_listed_as_signals() -> None:
+    reader = Reader(page(read(CONVOY.parent / "uncertain.yaml")))
+    words = reader.said("asked")
+    assert "a link of the unit to itself, at most 0.20202" in words
+    assert "− [tolerance of lag]" in words and "in declared units: −200/99 drive" in words
+    assert "taken tolerance of lag" not in words and "receives 20/99" not in words
+
+
+RULES = """synth: 1
+title: Invented rooms
+kinds:
+  room:
+    states: {temp: K}
+    inputs: {heat: K/s}
+    takes: {flow: K/s}
+    offers: {warmth: temp}
+    sensors: [temp]
+    controller: {integrals: [temp]}
+    equations: {temp': heat + flow}
+network:
+  rules:
+    seep: {to: room.flow, from: [room.warmth], most: 3, strength: 0.1 1/s, relative: true, weakens: true}
+"""
+
+
+def test_rules_and_controllers_with_states_are_told(tmp_path: Path) -> None:
+    (tmp_path / "p.yaml").write_text(RULES, encoding="utf-8")
+    words = Reader(page(read(tmp_path / "p.yaml"))).said("asked")
+    assert "wired in any way that obeys the rules" in words and "without end" not in words
+    assert "of another unit, minus the same strength times its own fresh warmth, from at most 3 units" in words
+    assert "may weaken to zero" in words and "receives 0.1 1/s times" in words
+    assert "temp_integral adds up temp over time" in words and "controller state temp_integral K s" in words
+
+
+def test_runs_without_samples_are_not_drawn_as_zero(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    kept = trajectory()
+    empty = replace(
+        kept.runs[0], name="nothing stored", worst_signal=0.999, time=kept.runs[0].time[:0],
+        **{g: {k: v[:0] for k, v in getattr(kept.runs[0], g).items()} for g in ("states", "offers", "actuators")},
+    )  # fmt: skip
+    text = full(tmp_path, monkeypatch, trajectory=replace(kept, runs=(*kept.runs, empty)))
+    words = Reader(text).said("response")
+    assert "in the runs" in words and "nothing stored" not in words.split("in the runs")[1].split("Curves")[0]
+
+
+def test_runs_as_written_are_told(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    runs = (*trajectory().runs, run("as written, step, low", (0.1, 0.1)))
+    words = Reader(full(tmp_path, monkeypatch, trajectory=trajectory(runs=runs))).said("response")
+    assert "1 run as written: the equations of the problem file themselves" in words
+    assert "as written" not in Reader(full(tmp_path, monkeypatch)).said("response")
+
+
+def test_a_single_copy_that_was_not_computed_is_said(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    links = tuple(replace(link, single=None) for link in margin().links)
+    words = Reader(full(tmp_path, monkeypatch, margin=margin(links=links))).said("margin")
+    assert "1.625 not computed" in words

@@ -10,7 +10,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from synth.report.svg import Board, Scale, number, spread, thin, ticks
+from synth.report.svg import Board, Scale, envelope, number, spread, thin, ticks
 
 VALUE = st.floats(-1e12, 1e12)
 
@@ -95,3 +95,26 @@ def test_every_text_is_escaped(text: str) -> None:
     board.text(1, 2, text + "<script>&\"'")
     root = ElementTree.fromstring(board.svg())
     assert root.findall("{http://www.w3.org/2000/svg}text")[0].text == text + "<script>&\"'"
+
+
+@given(st.floats(0.3, 3.1), st.integers(330, 900))
+def test_a_band_holds_every_sample_of_a_fast_swing(step: float, count: int) -> None:
+    xs = [0.1 * k for k in range(count)]
+    ys = [math.exp(-0.002 * k) * math.sin(step * k) for k in range(count)]
+    band = envelope(xs, ys)
+    turns = sum((b - a) * (c - b) < 0 for a, b, c in zip(ys, ys[1:], ys[2:], strict=False))
+    if turns < 0.3 * count:
+        assert band == []
+    if turns > 0.35 * count:
+        assert len(band) == 220 and [x for x, _, _ in band] == sorted(x for x, _, _ in band)
+        for (left, low, high), (right, _, _) in zip(band[::2], band[1::2], strict=True):
+            assert all(low <= y <= high for x, y in zip(xs, ys, strict=True) if left <= x <= right)
+        assert max(high - low for _, low, high in band) > 1.5
+
+
+def test_slow_lines_dust_and_few_samples_have_no_band() -> None:
+    xs = [float(k) for k in range(500)]
+    assert envelope(xs, [math.sin(0.05 * x) for x in xs]) == []
+    assert envelope(xs, [1.0 + 1e-9 * (-1) ** k for k in range(500)]) == []
+    assert envelope(xs[:300], [float((-1) ** k) for k in range(300)]) == []
+    assert envelope(xs, [float((-1) ** k) for k in range(500)]) != []

@@ -222,8 +222,6 @@ def test_every_wrong_argument_is_named():
         quick(scenarios=["adversry"])
     with pytest.raises(InputError, match=r"0 cells.*\n.*-1 s"):
         quick(units=0, seconds=-1)
-    with pytest.raises(InputError, match="dimension 2"):
-        quick(network=convoy(dimension=2))
     with pytest.raises(KeyError, match="did you mean 'step'"):
         full().run("stp")
 
