@@ -16,6 +16,7 @@ from typing import Any, NoReturn
 
 import click
 
+from synth import cli_hop
 from synth.base.errors import InputError, Problem, SynthError, nearest
 from synth.cli_parts import (
     FILE,
@@ -26,6 +27,7 @@ from synth.cli_parts import (
     SEED,
     TARGET,
     deliver,
+    hop_network,
     leave,
     listener,
     network_and_gains,
@@ -78,7 +80,9 @@ def check(file: Path, as_json: bool, out: Path | None, quiet: bool) -> None:
     from synth.network import describe
 
     listener(quiet)("reading and looking for obstructions")
-    network = network_of(file)
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.check(network, as_json, out)
     described = describe(network)
     document = described.as_json()
     files: dict[str, Any] = {"check.json": document}
@@ -92,13 +96,38 @@ def check(file: Path, as_json: bool, out: Path | None, quiet: bool) -> None:
 
 @verbs.command()
 @options(FILE, TARGET, SEED, JSON, OUT, QUIET)
-def design(file: Path, target: float | None, seed: int, as_json: bool, out: Path | None, quiet: bool) -> None:
+@click.option(
+    "--work",
+    type=click.Path(path_type=Path),
+    help="File that keeps finished units, so that an interrupted run goes on.",
+)
+@click.option("--sampled", is_flag=True, help="Seek the gains on the sampled units in any case (needs design.period).")
+def design(
+    file: Path,
+    target: float | None,
+    seed: int,
+    as_json: bool,
+    out: Path | None,
+    quiet: bool,
+    work: Path | None,
+    sampled: bool,
+) -> None:
     """Pick local gains with the smallest spectral radius within the limits of FILE."""
     from synth.handoff.table import csv_text, gain_rows
     from synth.local import design as make_design
 
-    network = network_of(file)
-    chosen = make_design(network, target=target_of(target), seed=seed, progress=listener(quiet))
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.refuse_target(target)
+        cli_hop.design(network, seed, as_json, out, quiet)
+    chosen = make_design(
+        network,
+        target=target_of(target),
+        seed=seed,
+        progress=listener(quiet),
+        work=work,
+        sampled=True if sampled else None,
+    )
     document = chosen.as_json()
     files = {"design.json": document, "gains.csv": csv_text(gain_rows(network, chosen.gains))}
     deliver(document, chosen.as_text(), as_json, out, files)
@@ -122,7 +151,11 @@ def prove(
     """Build a certificate for fresh gains, or for gains already in service (--gains)."""
     from synth.proof import prove as make_proof
 
-    network, used = network_and_gains(file, gains, target, seed, quiet)
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.refuse_target(target, route)
+        cli_hop.prove(network, gains, seed, as_json, out, quiet)
+    network, used = network_and_gains(network, gains, target, seed, quiet)
     certificate = make_proof(network, used, route=route, target=target_of(target), progress=listener(quiet))
     kept = out is not None and certificate.proven  # an unproven certificate is never written: it could be mistaken
     document = {**certificate.as_json(), "certificate": str(out / "certificate.json") if out and kept else None}
@@ -158,7 +191,11 @@ def margin(
     """Find how much stronger the links may get: proven, the limit of the class, and where it really breaks."""
     from synth.margin import margin as find_margin
 
-    network, used = network_and_gains(file, gains, None, seed, quiet)
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.refuse_couplings(classes, fixed_own_parts, redesign)
+        cli_hop.margin(network, gains, seed, as_json, out, quiet)
+    network, used = network_and_gains(network, gains, None, seed, quiet)
     for name in classes:
         if name not in network.classes():
             known = ", ".join(network.classes()) or "none"
@@ -198,7 +235,10 @@ def simulate(
     from synth.proof import prove as make_proof
     from synth.simulate import simulate as run_simulation
 
-    network, used = network_and_gains(file, gains, None, seed, quiet)
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.simulate(network, gains, units, seconds, seed, as_json, out, quiet)
+    network, used = network_and_gains(network, gains, None, seed, quiet)
     progress = listener(quiet)
     certificate = make_proof(network, used, progress=progress)
     trajectory = run_simulation(network, used, certificate, units=units, seconds=seconds, seed=seed, progress=progress)
@@ -223,15 +263,29 @@ def handoff(
     route: str,
     quiet: bool,
 ) -> None:
-    """Write the bundle for the firmware team: gain table, certificate, checker, manifest."""
+    """Write the bundle for the firmware team: gain table, certificate, checker, manifest.
+
+    Where FILE declares a sample period, the code as flashed is proven too; exit code 0 means that it is.
+    """
     from synth.base.files import refuse_foreign
-    from synth.handoff import hand_off
     from synth.proof import prove as make_proof
+    from synth.proof.firmware_limits import prove_as_flashed
+    from synth.whole_job import bundle_of
 
     refuse_foreign(out, "handoff")
-    network, used = network_and_gains(file, gains, target, seed, quiet)
-    certificate = make_proof(network, used, route=route, target=target_of(target), progress=listener(quiet))
-    bundle = hand_off(network, used, certificate, out)
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.refuse_target(target, route)
+        cli_hop.handoff(network, gains, seed, as_json, out, quiet)
+    network, used = network_and_gains(network, gains, target, seed, quiet)
+    wanted, progress = target_of(target), listener(quiet)
+    continuous = "auto" if route == "firmware" else route
+    certificate = make_proof(network, used, route=continuous, target=wanted, progress=progress)
+    sampled = route == "firmware" or (route == "auto" and network.goal.period is not None)
+    flashed = prove_as_flashed(network, used, target=wanted, progress=progress) if sampled else None
+    if route == "firmware" and flashed is not None and not flashed.takes:
+        raise InputError(flashed.reason)
+    bundle = bundle_of(network, used, certificate, flashed, out)
     deliver(bundle.as_json(), bundle.as_text(), as_json, None, {})
     leave(bundle.proven)
 
@@ -247,7 +301,10 @@ def run(file: Path, gains: Path | None, target: float | None, seed: int, as_json
     from synth.whole_job import run_whole_job
 
     refuse_foreign(out, "run")
-    network = network_of(file)
+    network, hop = hop_network(file)
+    if hop:
+        cli_hop.refuse_target(target)
+        cli_hop.run(network, gains, seed, as_json, out, quiet)
     in_service = None if gains is None else read_gains(gains, network)
     job = run_whole_job(network, out, gains=in_service, target=target_of(target), seed=seed, progress=listener(quiet))
     deliver(job.document, job.text, as_json, None, {})
@@ -305,6 +362,7 @@ def admit(
     from synth.network.gains import Gains
 
     network, after = network_of(file), network_of(joining)
+    cli_hop.refuse_joining(network, after)
     in_service = read_gains(gains, network)
     promised = None if certificate is None else promised_sizes(certificate, network)
     found = test_joining(

@@ -39,11 +39,17 @@ GAINS = click.option(
 QUIET = click.option("--quiet", is_flag=True, help="No progress on standard error.")
 
 
-def network_of(file: Path) -> Any:
-    """The network of a problem file."""
+def network_of(file: Any) -> Any:
+    """The network of a problem file; a network that was read already is itself."""
     from synth.network import read
 
-    return read(file)
+    return read(file) if isinstance(file, Path) else file
+
+
+def hop_network(file: Path) -> tuple[Any, bool]:
+    """The network of a problem file, and whether it asks for a hop claim (then ``synth.cli_hop`` has the verbs)."""
+    network = network_of(file)
+    return network, network.goal.hop is not None
 
 
 def target_of(target: float | None) -> float | None:
@@ -53,8 +59,8 @@ def target_of(target: float | None) -> float | None:
     return target
 
 
-def network_and_gains(file: Path, gains: Path | None, target: float | None, seed: int, quiet: bool) -> tuple[Any, Any]:
-    """The network, and either the gains of the table or a fresh design."""
+def network_and_gains(file: Any, gains: Path | None, target: float | None, seed: int, quiet: bool) -> tuple[Any, Any]:
+    """The network (or file read already), and either the gains of the table or a fresh design."""
     network = network_of(file)
     if gains is not None:
         from synth.network import read_gains

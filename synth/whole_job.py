@@ -7,10 +7,10 @@ import textwrap
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, cast
 
 from synth.base.caution import cautions_text
-from synth.base.errors import SynthError
+from synth.base.errors import InputError, SynthError
 from synth.base.files import whole_folder
 from synth.base.progress import Listener, silent
 from synth.network.gains import Gains
@@ -32,6 +32,17 @@ def plain_json(value: object) -> str:
     return json.dumps(value, indent=2, ensure_ascii=False, allow_nan=False) + "\n"
 
 
+def _hop_job(
+    network: Network, out: str | Path, gains: Gains | None, target: float | None, seed: int, progress: Listener
+) -> WholeJob:
+    """The same for a file that asks for a hop claim."""
+    from synth.hop_job import run_hop_job
+
+    if target is not None:
+        raise InputError("a hop claim has no radius and so no target; leave the target out.")
+    return cast("WholeJob", run_hop_job(network, out, gains=gains, seed=seed, progress=progress))
+
+
 def run_whole_job(
     network: Network,
     out: str | Path,
@@ -47,7 +58,8 @@ def run_whole_job(
     (an integer) fixes the searches and random scenarios. Raises what the stages raise (InputError, ObstructionFound,
     SolverFailure, StorageFailure); then nothing is written and what stood at ``out`` before stands untouched.
     """
-    from synth.handoff import hand_off
+    if network.goal.hop is not None:
+        return _hop_job(network, out, gains, target, seed, progress)
     from synth.local import design as make_design
     from synth.margin import margin as find_margin
     from synth.network import describe
@@ -68,6 +80,7 @@ def run_whole_job(
         certificate = prove(network, used, target=target, progress=progress)
         if certificate.proven:
             certificate.save(work / "certificate.json")
+        flashed = _flashed(network, used, target, progress, work)
         limits = trajectory = bundle = None
         refusals: dict[str, str] = {}
         progress("finding the largest tolerable coupling")
@@ -80,18 +93,49 @@ def run_whole_job(
             trajectory = run_simulation(network, used, certificate, seed=seed, progress=progress)
         except SynthError as error:
             refusals["simulation"] = str(error)
-        if certificate.proven:
+        if certificate.proven or (flashed is not None and flashed.proven):
             progress("writing the hand-off bundle")
-            bundle = hand_off(network, used, certificate, work / "bundle")
+            bundle = bundle_of(network, used, certificate, flashed, work / "bundle")
         else:
             refusals["handoff"] = "not proven, so no bundle was written: an unproven table must not reach firmware."
         progress("writing the report")
-        write_report(work / "report.html", network, chosen, certificate, limits, trajectory, bundle)
-        document = _document(described, chosen, gains, certificate, limits, trajectory, bundle, refusals, final)
+        sampled = None if flashed is None else flashed.certificate
+        write_report(work / "report.html", network, chosen, certificate, limits, trajectory, bundle, sampled)
+        document = _document(
+            described, chosen, gains, certificate, flashed, limits, trajectory, bundle, refusals, final
+        )
         (work / "result.json").write_text(plain_json(document), encoding="utf-8")
-        text = _text(described, chosen, certificate, limits, trajectory, bundle, refusals, final, work)
+        text = _text(described, chosen, certificate, flashed, limits, trajectory, bundle, refusals, final, work)
         (work / "summary.txt").write_text(wrapped(f"{text}\nCautions\n--------\n{cautions_text()}\n"), encoding="utf-8")
-    return WholeJob(document, text, certificate.proven, final)
+    # A network that the firmware route cannot take is judged by the continuous loop; the text says so.
+    failed = flashed is not None and flashed.takes and not flashed.proven
+    return WholeJob(document, text, certificate.proven and not failed, final)
+
+
+def _flashed(network: Network, used: Any, target: float | None, progress: Listener, work: Path) -> Any:
+    """The verdict about the code where a sample period is declared, its certificate kept; None where none is."""
+    if network.goal.period is None:
+        return None
+    from synth.proof.firmware_limits import prove_as_flashed
+
+    found = prove_as_flashed(network, used, target=target, progress=progress)
+    if found.proven and found.certificate is not None:
+        found.certificate.save(work / "certificate_as_flashed.json")
+    return found
+
+
+def bundle_of(network: Network, used: Any, certificate: Any, flashed: Any, out: Path) -> Any:
+    """The bundle with the strongest proof there is: as flashed and continuous, or the continuous one and why no more.
+
+    ``certificate`` is about the continuous loop, ``flashed`` the verdict about the code (None where not asked for).
+    Raises what hand_off raises.
+    """
+    from synth.handoff import hand_off
+
+    if flashed is None or not flashed.proven:
+        return hand_off(network, used, certificate, out, unproven="" if flashed is None else flashed.reason)
+    beside = certificate if certificate.proven else None
+    return hand_off(network, used, flashed.certificate, out, continuous=beside, timing=flashed.timing)
 
 
 def _document(
@@ -99,6 +143,7 @@ def _document(
     chosen: Any,
     gains: Gains | None,
     certificate: Any,
+    flashed: Any,
     limits: Any,
     trajectory: Any,
     bundle: Any,
@@ -124,6 +169,7 @@ def _document(
         "network": described.as_json(),
         "design": designed,
         "proof": proof,
+        "as_flashed": {"not_run": "no sample period is declared"} if flashed is None else flashed.as_json(),
         "margin": stage(limits, "margin"),
         "simulation": stage(trajectory, "simulation"),
         "handoff": handed,
@@ -135,6 +181,7 @@ def _text(
     described: Any,
     chosen: Any,
     certificate: Any,
+    flashed: Any,
     limits: Any,
     trajectory: Any,
     bundle: Any,
@@ -144,6 +191,8 @@ def _text(
 ) -> str:
     """What `run` prints for a person: each stage's own text under a heading, then where the files are."""
     parts = [("Network", described), ("Gains", chosen), ("Proof", certificate), ("Margin", limits)]
+    if flashed is not None:
+        parts.insert(3, ("As flashed", flashed))
     parts += [("Simulation", trajectory), ("Hand-off", bundle)]
     names = {"Margin": "margin", "Simulation": "simulation", "Hand-off": "handoff"}
     lines: list[str] = []

@@ -8,10 +8,11 @@ approximation. A loop without delays is the special case in which every delay is
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from fractions import Fraction
 from functools import cached_property
+from typing import Any
 
 from flint import acb, arb, fmpq, fmpq_poly
 
@@ -37,7 +38,7 @@ class QuasiPolynomial:
     terms: Mapping[Fraction, tuple[Fraction, ...]]
 
     @staticmethod
-    def of(terms: Mapping[Number, list[Number] | tuple[Number, ...]]) -> QuasiPolynomial:
+    def of(terms: Mapping[Any, Sequence[Number]]) -> QuasiPolynomial:
         """Build from delays and coefficients in any form that counts as an exact number; zero terms are dropped."""
         found: dict[Fraction, tuple[Fraction, ...]] = {}
         for delay, coefficients in terms.items():
@@ -56,7 +57,7 @@ class QuasiPolynomial:
             mine.extend([_ZERO] * (len(row) - len(mine)))
             for i, c in enumerate(row):
                 mine[i] += c
-        return QuasiPolynomial.of(out)  # type: ignore[arg-type]
+        return QuasiPolynomial.of(out)
 
     def scaled(self, factor: Number) -> QuasiPolynomial:
         """Exact multiple."""
@@ -77,7 +78,7 @@ class QuasiPolynomial:
                 for i, c in enumerate(row):
                     for j, e in enumerate(other_row):
                         mine[i + j] += c * e
-        return QuasiPolynomial.of(out)  # type: ignore[arg-type]
+        return QuasiPolynomial.of(out)
 
     @cached_property
     def degree(self) -> int:
@@ -93,7 +94,7 @@ class QuasiPolynomial:
             for i in range(1, len(row)):
                 fresh[i - 1] += i * row[i]
             out[b] = fresh
-        return QuasiPolynomial.of(out)  # type: ignore[arg-type]
+        return QuasiPolynomial.of(out)
 
     @cached_property
     def _balls(self) -> list[tuple[fmpq, list[fmpq]]]:
@@ -242,7 +243,7 @@ def without_common_factor(
         for b, row in q.terms.items():
             quotient = fmpq_poly([rational(c) for c in row]) // common
             out[b] = [Fraction(int(c.p), int(c.q)) for c in quotient.coeffs()]
-        return QuasiPolynomial.of(out)  # type: ignore[arg-type]
+        return QuasiPolynomial.of(out)
 
     return divided(numerator), divided(denominator)
 

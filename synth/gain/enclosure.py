@@ -83,9 +83,10 @@ def network_radius(
     """Enclose the radius of the gain operator of a network with the given gains, for everything it describes.
 
     ``alpha`` rate in 1/s, >= 0; ``width`` relative width of the radius for given peak gains, ``peak_width`` that of the
-    peak gains. ``table``: peak gains that are known already, for these gains, rate and peak width. Raises UnstableLoop if a closed unit (shifted by alpha) is not Hurwitz, InputError for numbers out of
-    range, missing gains or links that do not fit, WidthNotReached if a peak gain does not close. Theory (9), (10),
-    (13), (14).
+    peak gains. ``table``: peak gains that are known already, for these gains, rate and peak width.
+
+    Raises UnstableLoop if a closed unit (shifted by alpha) is not Hurwitz, InputError for numbers out of range, missing
+    gains or links that do not fit, WidthNotReached if a peak gain does not close. Theory (9), (10), (13), (14).
     """
     if not (isinstance(width, (int, float)) and 0 < width < 1):
         raise InputError(f"width must lie between 0 and 1 (relative), not {width!r}.")

@@ -264,8 +264,8 @@ def _pair(unit: _Closed, network: Network, weights: dict[str, tuple[Fraction, ..
                     through.setdefault(name, {})[late] = through.get(name, {}).get(late, _ZERO) + value
             for b, A in unit.A.items():
                 _add(columns[j - 1], late + b, A @ column)
-    D = columns[0] if columns and columns[0] else {_ZERO: ExactMatrix.zeros(n, 1)}
-    return DelayLoop(unit.A, D, outlets, through)
+    inlet = columns[0] if columns and columns[0] else {_ZERO: ExactMatrix.zeros(n, 1)}
+    return DelayLoop(unit.A, inlet, outlets, through)
 
 
 def _add(table: dict[Fraction, ExactMatrix], late: Fraction, column: ExactMatrix) -> None:

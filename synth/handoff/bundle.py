@@ -14,24 +14,27 @@ from synth.base.errors import InputError, SynthError
 from synth.base.exact import ExactMatrix
 from synth.base.files import MARK, whole_folder
 from synth.base.provenance import sha256
+from synth.handoff.code import controllers, rounding_document
 from synth.handoff.metadata import csvw, data_package
 from synth.handoff.operating import operating_values
-from synth.handoff.readme import AS_FLASHED, NOT_AS_FLASHED, readme_text
+from synth.handoff.readme import Story, readme_text
 from synth.handoff.scaling import Facts, exact_peaks, scaling
 from synth.handoff.statement import MANIFEST, PROVENANCE, manifest, provenance
-from synth.handoff.table import SIGN_CONVENTION, GainRow, csv_text, gain_rows
+from synth.handoff.table import SIGN_CONVENTION, GainRow, csv_text, exact_text, gain_rows, grouped_rows
 from synth.network.gains import Gains
 from synth.network.model import Kind, Network
 
 if TYPE_CHECKING:
     from synth.local import Design
     from synth.proof import Certificate
+    from synth.proof.firmware_limits import TimingSheet
 
     DesignOrGains: TypeAlias = Design | Gains
 
 
 # The first checks proofs about the continuous loop; all of them together those about the code as flashed.
 CHECKERS = ("check.py", "check_flashed.py", "check_sampled.py", "check_firmware.py")
+CERTIFICATE, CONTINUOUS = "certificate.json", "certificate_continuous.json"
 
 
 class UnprovenTable(SynthError):
@@ -45,7 +48,8 @@ class Bundle:
     """A hand-off folder as written.
 
     ``proven`` is about the code as flashed (sampled, rounded): True for a certificate of the firmware route, False for
-    the others, ``reason`` says why; ``proven_continuous`` is a claim about the continuous loop, which those make.
+    the others, ``reason`` says why; ``proven_continuous`` is a claim about the continuous loop, which those make (a
+    bundle of the firmware route may carry one besides). ``timing`` is the timing sheet, plain data, None without one.
     ``scaling`` holds, by ``kind.actuator.signal``, the gain with its units and the guaranteed peaks in them. ``files``
     are names inside ``path``, sorted.
     """
@@ -58,6 +62,7 @@ class Bundle:
     scaling: Mapping[str, Facts]
     rows: tuple[GainRow, ...]
     certificate_sha256: str
+    timing: Mapping[str, object] | None = None
 
     def as_json(self) -> dict[str, object]:
         """Plain data with the keys bundle, files, proven, scaling and some more."""
@@ -70,6 +75,7 @@ class Bundle:
             "scaling": dict(self.scaling),
             "sign_convention": SIGN_CONVENTION,
             "certificate_sha256": self.certificate_sha256,
+            "timing": self.timing,
             "cautions": list(CAUTIONS),
         }
 
@@ -86,45 +92,71 @@ class Bundle:
         return "\n".join(lines)
 
 
-def hand_off(network: Network, design_or_gains: DesignOrGains, certificate: Certificate, out: str | Path) -> Bundle:
+def hand_off(
+    network: Network,
+    design_or_gains: DesignOrGains,
+    certificate: Certificate,
+    out: str | Path,
+    continuous: Certificate | None = None,
+    timing: TimingSheet | None = None,
+    unproven: str = "",
+) -> Bundle:
     """Write the bundle for ``design_or_gains`` (u = K y, declared units) into the folder ``out``.
 
     The folder takes the place of whatever folder stood there; after any error the old one stands untouched.
-    Equal inputs give equal bytes: no date or path is written inside.
+    Equal inputs give equal bytes: no date or path is written inside. Beside a ``certificate`` of the firmware route may
+    go one about the ``continuous`` loop of the same gains and the ``timing`` sheet; ``unproven`` says why the code as
+    flashed is not proven, where it was tried.
 
-    Raises UnprovenTable if the certificate is not proven (an unproven table must not reach firmware by this way),
-    InputError if the certificate is about another network or other gains, or the gains do not fit the network, or
+    Raises UnprovenTable if a certificate is not proven (an unproven table must not reach firmware by this way),
+    InputError if it is about another network or other gains, or the gains do not fit the network, or
     ``out`` holds somebody's other work; StorageFailure if the disk refuses.
     """
     gains = design_or_gains if isinstance(design_or_gains, Gains) else design_or_gains.gains
     _fits(network, gains)
-    if not certificate.proven:
-        why = "; ".join(certificate.reasons) or "its claim was not accepted"
-        raise UnprovenTable(
-            f"no bundle was written to {out}: the certificate does not prove these gains ({why}). "
-            "Lower the link strengths or let design search further, prove again, then hand off."
-        )
-    _about_these(network, gains, certificate)
+    given = {CERTIFICATE: certificate} | ({} if continuous is None else {CONTINUOUS: continuous})
+    for one in given.values():
+        if not one.proven:
+            why = "; ".join(one.reasons) or "its claim was not accepted"
+            raise UnprovenTable(
+                f"no bundle was written to {out}: the certificate does not prove these gains ({why}). "
+                "Lower the link strengths or let design search further, prove again, then hand off."
+            )
+        _about_these(network, gains, one)
+    as_flashed = _as_flashed(certificate)
+    if not as_flashed and (continuous is not None or timing is not None):
+        raise InputError("a second certificate and a timing sheet go beside a certificate of the firmware route only.")
+    story = Story(
+        certificate.claim, certificate.covers, certificate.excludes, as_flashed, continuous is not None,
+        unproven, None if timing is None else timing.as_text(),
+    )  # fmt: skip
     with whole_folder(out, "handoff") as work:
-        certificate.save(work / "certificate.json")
-        certificate_bytes = (work / "certificate.json").read_bytes()
-        _still_verified(work / "certificate.json", network)
-        certificate_sha256 = sha256(certificate_bytes)
+        saved = {}
+        for name, one in given.items():
+            one.save(work / name)
+            saved[name] = (work / name).read_bytes()
+            _still_verified(work / name, network)
+        certificate_sha256 = sha256(saved[CERTIFICATE])
         rows = gain_rows(network, gains, certificate_sha256)
         facts = scaling(network, rows, exact_peaks(certificate.document))
-        files = _contents(network, rows, facts, certificate)
-        files["certificate.json"] = certificate_bytes
-        as_flashed = _as_flashed(certificate)
-        files[PROVENANCE] = _json(provenance(files, network.hash, certificate_sha256, not as_flashed, as_flashed))
+        files = _contents(network, rows, facts, story)
+        if timing is not None:
+            files["timing.csv"] = timing.csv_text().encode()
+        files |= saved
+        files[PROVENANCE] = _json(
+            provenance(files, network.hash, certificate_sha256, story.proven_continuous, as_flashed)
+        )
         files[MANIFEST] = manifest(files).encode()
         for name, data in files.items():
             (work / name).write_bytes(data)
         left = {path.name for path in work.iterdir()} - set(files) - {MARK}
         if left:
             raise SynthError(f"saving the certificate left unexpected files in the bundle: {sorted(left)}")
-    reason = AS_FLASHED if as_flashed else NOT_AS_FLASHED
-    names = tuple(sorted(files))
-    return Bundle(Path(out), names, as_flashed, not as_flashed, reason, facts, rows, certificate_sha256)
+    sheet = None if timing is None else timing.as_json()
+    return Bundle(
+        Path(out), tuple(sorted(files)), as_flashed, story.proven_continuous, story.reason, facts, rows,
+        certificate_sha256, sheet,
+    )  # fmt: skip
 
 
 def _as_flashed(certificate: Certificate) -> bool:
@@ -133,7 +165,11 @@ def _as_flashed(certificate: Certificate) -> bool:
 
 
 def checker_text(name: str = "check.py") -> str:
-    """Source of a file of the stand-alone checker, as it is installed."""
+    """Source of a file of the stand-alone checker: check.py is one file of its parts, the others are as installed."""
+    if name == "check.py":
+        from synth.proof.joined import checker_text as joined
+
+        return joined()
     return resources.files("synth.proof").joinpath(name).read_text(encoding="utf-8")
 
 
@@ -187,34 +223,35 @@ def _still_verified(path: Path, network: Network) -> None:
 
 
 def _contents(
-    network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], certificate: Certificate
+    network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], story: Story
 ) -> dict[str, bytes]:
-    """Every file made here but the certificate, the provenance statement and the manifest."""
-    table, as_flashed = csv_text(rows).encode(), _as_flashed(certificate)
+    """Every file made here but certificates, timing sheet, the provenance statement and the manifest."""
+    table = csv_text(rows).encode()
     return {
         "gains.csv": table,
         "gains.csv-metadata.json": _json(csvw(network.title, rows)),
         "datapackage.json": _json(data_package(network.title, rows, table, sha256(table))),
-        "gains.json": _json(_table_document(network, rows, facts, as_flashed)),
-        **{name: checker_text(name).encode() for name in (CHECKERS if as_flashed else CHECKERS[:1])},
-        "README.txt": readme_text(
-            network, rows, facts, certificate.claim, certificate.covers, certificate.excludes, as_flashed
-        ).encode(),
+        "gains.json": _json(_table_document(network, rows, facts, story)),
+        **{name: checker_text(name).encode() for name in (CHECKERS if story.as_flashed else CHECKERS[:1])},
+        "README.txt": readme_text(network, rows, facts, story).encode(),
     }
 
 
 def _table_document(
-    network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], as_flashed: bool
+    network: Network, rows: tuple[GainRow, ...], facts: Mapping[str, Facts], story: Story
 ) -> dict[str, object]:
-    """The JSON gain table with what a table alone cannot carry."""
+    """The JSON gain table with what a table alone cannot carry; rows of a shared gain set stand once, by its name."""
+    goal = network.goal
     return {
         "table": "localgain gains",
         "title": network.title,
         "network_sha256": network.hash,
         "sign_convention": SIGN_CONVENTION,
         "meaning": "actuator = sum over its rows of gain * signal; deviations from the operating point; time in s",
-        "rows": [row.as_dict() for row in rows],
+        "rows": [row.as_dict() for row in grouped_rows(network, rows)],
+        "gain_sets": {group: list(names) for group, names in network.gain_groups().items()},
         "signals": {kind.name: _definitions(kind) for kind in network.kinds},
+        "controllers": controllers(network),
         "at_rest": {
             kind: {
                 group: {name: {"value": value, "unit": unit} for name, (value, unit) in named.items()}
@@ -222,10 +259,18 @@ def _table_document(
             }
             for kind, values in operating_values(network).items()
         },
+        "sampling": None
+        if goal.period is None
+        else {
+            "period_s": exact_text(goal.period),
+            "computation_delay_s": exact_text(goal.computation_delay),
+            "rounding": rounding_document(goal.rounding),
+            "part_of_the_proof": story.as_flashed,
+        },
         "scaling": dict(facts),
-        "proven_continuous": not as_flashed,
-        "proven_as_flashed": as_flashed,
-        "reason": AS_FLASHED if as_flashed else NOT_AS_FLASHED,
+        "proven_continuous": story.proven_continuous,
+        "proven_as_flashed": story.as_flashed,
+        "reason": story.reason,
         "cautions": list(CAUTIONS),
     }
 

@@ -4,23 +4,27 @@ from __future__ import annotations
 
 import textwrap
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 from fractions import Fraction
 
 from synth.base.caution import CAUTIONS
+from synth.base.exact import Number, exact
 from synth.base.files import MARK
+from synth.handoff.code import UPDATE
 from synth.handoff.digits import digits
 from synth.handoff.operating import operating_values
 from synth.handoff.scaling import Facts
 from synth.handoff.table import SIGN_CONVENTION, GainRow, exact_text
 from synth.network.controller import firmware_rows, innovation_rows
 from synth.network.model import Network
+from synth.network.rounding import Rounding
 
 WIDTH = 88
 
 NOT_AS_FLASHED = (
-    "The certificate is about the continuous-time loop with the exact gains of the table. Sampling, computing time, "
-    "rounding and fixed-point arithmetic of the code that will be flashed are not covered by certificates of this "
-    "version, so the bundle does not count as proven as flashed."
+    "The certificate is about the continuous-time loop with the exact gains of the table. It does not cover sampling, "
+    "computing time, rounding and fixed-point arithmetic of the code that will be flashed, so the bundle does not "
+    "count as proven as flashed."
 )
 
 AS_FLASHED = (
@@ -28,14 +32,21 @@ AS_FLASHED = (
     "delay and rounding that it names, and nothing else."
 )
 
+BESIDE = (
+    "certificate_continuous.json is a second proof, about the continuous-time loop with the same gains; margins and "
+    "simulations of the tool are about that one."
+)
+
 CONTENTS = (
     ("gains.csv", "the gains, one per line, exact, with units (RFC 4180)"),
-    ("gains.json", "the same rows, the meaning of every signal, ranges, cautions"),
+    ("gains.json", "the same rows, what every signal means, ranges, cautions"),
     ("gains.csv-metadata.json", "description of gains.csv (W3C CSVW)"),
     ("datapackage.json", "description of gains.csv (Frictionless)"),
     ("certificate.json", "the proof, as data"),
-    ("check.py", "re-verifies the proof with a bare Python, nothing to install"),
-    ("check_firmware.py", "the same for a proof of the code as flashed, with the next two files"),
+    ("certificate_continuous.json", "the proof about the continuous loop (check.py)"),
+    ("timing.csv", "how far periods and delays may grow, one at a time"),
+    ("check.py", "checks the proof again, needs nothing but Python"),
+    ("check_firmware.py", "the same for a proof as flashed, with the next two"),
     ("check_flashed.py", "the loops of check_firmware.py"),
     ("check_sampled.py", "the arithmetic of check_firmware.py"),
     ("provenance.json", "hashes of the inputs and versions (in-toto statement)"),
@@ -69,21 +80,52 @@ SOFTWARE.
 """
 
 
-def readme_text(
-    network: Network,
-    rows: Sequence[GainRow],
-    scaling: Mapping[str, Facts],
-    claim: str,
-    covers: Sequence[str],
-    excludes: Sequence[str],
-    as_flashed: bool = False,
-) -> str:
-    """The whole README as text, at most 88 columns except where a name or a file name is longer.
+@dataclass(frozen=True)
+class Story:
+    """What a bundle's certificate says and reaches.
 
-    ``as_flashed``: the certificate is about the sampled and rounded code, not about the continuous loop.
+    ``as_flashed``: it is about the sampled and rounded code, not about the continuous loop; ``continuous``: a second
+    one about the continuous loop lies beside it; ``unproven`` why the code as flashed is not proven, where it was
+    tried; ``timing`` the text of the timing sheet.
     """
-    contents = [line for line in CONTENTS if as_flashed or not line[0].startswith("check_")]
-    checker = "check_firmware.py" if as_flashed else "check.py"
+
+    claim: str
+    covers: Sequence[str]
+    excludes: Sequence[str]
+    as_flashed: bool = False
+    continuous: bool = False
+    unproven: str = ""
+    timing: str | None = None
+
+    @property
+    def proven_continuous(self) -> bool:
+        """Whether a certificate about the continuous loop is in the bundle."""
+        return self.continuous or not self.as_flashed
+
+    @property
+    def reason(self) -> str:
+        """What the bundle's proof is about, and why not about the code as flashed."""
+        if self.as_flashed:
+            return AS_FLASHED
+        return NOT_AS_FLASHED + (f" It was tried: {self.unproven}" if self.unproven else "")
+
+    def has(self, name: str) -> bool:
+        """Whether a file of CONTENTS is in the bundle."""
+        if name.startswith("check_"):
+            return self.as_flashed
+        return {"certificate_continuous.json": self.continuous, "timing.csv": self.timing is not None}.get(name, True)
+
+
+def readme_text(network: Network, rows: Sequence[GainRow], scaling: Mapping[str, Facts], story: Story) -> str:
+    """The whole README as text, at most 88 columns except where a name or a file name is longer."""
+    contents = [line for line in CONTENTS if story.has(line[0])]
+    checker = "check_firmware.py" if story.as_flashed else "check.py"
+    commands = [
+        ("sha256sum -c SHA256SUMS", "no file was changed on the way"),
+        (f"python3 {checker} certificate.json", "the proof holds (Python 3 alone)"),
+    ]
+    if story.continuous:
+        commands.append(("python3 check.py certificate_continuous.json", "so does the second one"))
     parts = [
         _heading(f"Local feedback gains: {network.title}", "="),
         _paragraph(
@@ -93,35 +135,36 @@ def readme_text(
         _heading("Cautions"),
         _bullets(CAUTIONS),
         _heading("What is in here"),
-        "".join(f"  {name:<24} {what}\n" for name, what in contents),
+        "".join(f"  {name:<28} {what}\n" for name, what in contents),
         _heading("How to check what you got"),
-        "  sha256sum -c SHA256SUMS            no file was changed on the way\n"
-        f"  python3 {checker} certificate.json  the proof holds (Python 3, standard library)\n\n",
+        "".join(f"  {command:<47} {what}\n" for command, what in commands) + "\n",
         _paragraph(
             "Do both on the receiving side, before and after the values enter the firmware. A table with one gain "
             "changed is a different design and needs a new certificate."
         ),
         _heading("How to use a row"),
-        _use(network, rows),
+        _use(network, rows, story),
         _heading("Gains"),
         _gains(rows),
-        *_controllers(network),
+        *_controllers(network, story),
         _heading("Ranges to provide for"),
         _ranges(scaling),
         _heading("What the proof says"),
-        _paragraph(claim),
-        *([_paragraph(AS_FLASHED)] if as_flashed else []),
+        _paragraph(story.claim),
+        *([_paragraph(AS_FLASHED)] if story.as_flashed else []),
+        *([_paragraph(BESIDE)] if story.continuous else []),
         _heading("Covered"),
-        _bullets(covers),
+        _bullets(story.covers),
         _heading("Not covered"),
-        _bullets([*excludes, *([] if as_flashed else [NOT_AS_FLASHED])]),
+        _bullets([*story.excludes, *([] if story.as_flashed else [story.reason])]),
+        *([] if story.timing is None else [_heading("How far times may grow"), _bullets(story.timing.splitlines())]),
         _heading("Licence"),
         _LICENCE,
     ]
     return "\n".join(part.rstrip("\n") + "\n" for part in parts)
 
 
-def _controllers(network: Network) -> list[str]:
+def _controllers(network: Network, story: Story) -> list[str]:
     """What the firmware must compute beside the gains, where controllers keep states; nothing where none does."""
     lines: list[str] = []
     for kind in network.kinds:
@@ -132,8 +175,9 @@ def _controllers(network: Network) -> list[str]:
     words = (
         "The controllers keep states of their own, zero at the start. Rates are per second and in the declared units; "
         "what the table calls an actuator and is named ..._rate or ..._correction is such a rate, not a command. These "
-        "rows are part of the proven controller as the gains are, in continuous time and exact arithmetic."
+        "rows are part of the proven controller as the gains are, "
     )
+    words += f"advanced {UPDATE}." if story.as_flashed else "in continuous time and exact arithmetic."
     return [_heading("States that the controllers keep"), _paragraph(words), _bullets(lines)]
 
 
@@ -162,7 +206,7 @@ def _bullets(lines: Sequence[str]) -> str:
     )
 
 
-def _use(network: Network, rows: Sequence[GainRow]) -> str:
+def _use(network: Network, rows: Sequence[GainRow], story: Story) -> str:
     """The sign convention spelled out, and the sample period."""
     text = _paragraph(
         f"Sign convention: {SIGN_CONVENTION}. An actuator's command is the sum of gain times signal over its rows. "
@@ -177,10 +221,34 @@ def _use(network: Network, rows: Sequence[GainRow]) -> str:
             text += f"\n  {kind.name}: {actuator.name} [{actuator.unit}] =\n"
             text += "".join(f"      {'+ ' if i else '  '}{term}\n" for i, term in enumerate(terms))
     text += _at_rest(network)
-    period = network.goal.period
+    goal = network.goal
+    period = goal.period
     if period is None:
         return text + "\nNo sample period was declared.\n"
-    return text + f"\nDeclared sample period: {rows[0].period_s if rows else period} s.\n"
+    declared = (
+        f"Declared sample period: {exact_text(period)} s, computation delay {exact_text(goal.computation_delay)} s."
+    )
+    lines = [f"{words}: multiples of {exact_text(exact(size))}" for words, size in _rounded(goal.rounding)]
+    if goal.rounding.form != "exact":
+        lines.append(f"sums and products in {goal.rounding.form} precision")
+    if goal.rounding.word is not None:
+        lines.append(f"gains in words of {goal.rounding.word} bits, {goal.rounding.fraction} behind the point")
+    part = "part of" if story.as_flashed else "not part of"
+    text += "\n" + _paragraph(
+        f"{declared} Sampling and the rounding named here are {part} the proof in certificate.json."
+    )
+    return text + (_bullets(lines) if lines else "")
+
+
+def _rounded(rounding: Rounding) -> list[tuple[str, Number]]:
+    """What is rounded, in words, with the distance of neighbouring numbers."""
+    groups = {
+        "sample": rounding.sensors,
+        "command": rounding.commands,
+        "products summed for": rounding.products,
+        "stored state": rounding.stored,
+    }
+    return [(f"{word} {name}", size) for word, given in groups.items() for name, size in given.items()]
 
 
 def _at_rest(network: Network) -> str:

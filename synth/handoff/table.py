@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import csv
 import io
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from fractions import Fraction
 
 from synth.handoff.quantity import quotient
@@ -107,6 +107,17 @@ def gain_rows(network: Network, gains: Gains, certificate_sha256: str = "") -> t
                     )
                 )
     return tuple(rows)
+
+
+def grouped_rows(network: Network, rows: tuple[GainRow, ...]) -> tuple[GainRow, ...]:
+    """The rows of every gain set once, with its name in the column ``kind``, where several kinds carry the same gains.
+
+    Law: read_gains reads both forms to the same gains. A set that bears the name of its only kind stays as it is.
+    """
+    found: list[GainRow] = []
+    for group, names in network.gain_groups().items():
+        found += [replace(row, kind=group) for row in rows if row.kind == names[0]]
+    return tuple(found)
 
 
 def csv_text(rows: tuple[GainRow, ...]) -> str:

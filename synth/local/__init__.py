@@ -18,13 +18,16 @@ if TYPE_CHECKING:
     from synth.local.blocking import Curve as Curve
     from synth.local.blocking import Tried as Tried
     from synth.local.designing import Design as Design
-    from synth.local.designing import design as design
     from synth.local.designing import redesign as redesign
+    from synth.local.hop_designing import HopDesign as HopDesign
+    from synth.local.hop_designing import hop_design as hop_design
     from synth.local.obstructed import ObstructionFound as ObstructionFound
     from synth.local.positive import PositiveDesign as PositiveDesign
     from synth.local.positive import positive_design as positive_design
     from synth.local.positive_web import Positivity as Positivity
     from synth.local.positive_web import positivity as positivity
+    from synth.local.sampled_design import design as design
+    from synth.local.sampled_outcome import Sampled as Sampled
     from synth.local.schedule import GainSchedule as GainSchedule
     from synth.local.schedule import gain_schedule as gain_schedule
     from synth.local.schedule_grid import Grid as Grid
@@ -37,7 +40,9 @@ _HOMES = {
     "GainSchedule": "schedule",
     "Grid": "schedule_grid",
     "PositiveDesign": "positive",
+    "HopDesign": "hop_designing",
     "Positivity": "positive_web",
+    "hop_design": "hop_designing",
     "admit": "admitting",
     "chosen_grid": "schedule_grid",
     "gain_schedule": "schedule",
@@ -49,7 +54,8 @@ _HOMES = {
     "Design": "designing",
     "ObstructionFound": "obstructed",
     "Tried": "blocking",
-    "design": "designing",
+    "Sampled": "sampled_outcome",
+    "design": "sampled_design",
     "redesign": "designing",
 }
 
@@ -61,15 +67,18 @@ __all__ = [
     "Design",
     "GainSchedule",
     "Grid",
+    "HopDesign",
     "ObstructionFound",
     "PositiveDesign",
     "Positivity",
+    "Sampled",
     "Tried",
     "admit",
     "chosen_grid",
     "design",
     "gain_schedule",
     "grid_of",
+    "hop_design",
     "positive_design",
     "positivity",
     "redesign",

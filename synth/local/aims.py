@@ -23,7 +23,8 @@ class AimedPeak:
     """A signal whose peak was made small: the guaranteed peak and the one with the links as written, in its unit.
 
     ``guaranteed`` holds for every link of the proven class, ``nominal`` is an estimate with fresh links of the written
-    strengths (infinite if the network then grows); ``limit`` is the limit or band it is counted in (None: none).
+    strengths (infinite if the network then grows, None where it is not estimated: only patterns of fixed links are);
+    ``limit`` is the limit or band it is counted in (None: none).
     """
 
     kind: str
@@ -31,7 +32,7 @@ class AimedPeak:
     signal: str
     unit: str
     guaranteed: float
-    nominal: float
+    nominal: float | None
     limit: Fraction | None
 
 

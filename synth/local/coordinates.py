@@ -13,7 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.local.plant import Field, Plant
+from synth.local.plant import Plant, Region
 
 Array = NDArray[np.float64]
 _EDGE = 2e-3  # starts keep this distance from the sides, where the substitution has no slope
@@ -132,7 +132,7 @@ class Coordinates:
         return 0.5 * (low + high), q
 
 
-def coordinates(field: Field, index: int, tight: float = 0.0) -> Coordinates:
+def coordinates(field: Region, index: int, tight: float = 0.0) -> Coordinates:
     """Mode coordinates where some actuator can place every mode through its allowed sensors, else plain gains."""
     plant = field.plants[index]
     slowest = max(field.slowest * (1 + tight), 1e-3 * field.fastest if field.slowest == 0 else 0.0)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from dataclasses import dataclass, field, replace
 from fractions import Fraction
 from typing import NamedTuple
@@ -11,17 +12,22 @@ import numpy as np
 from synth.base.errors import InputError, SolverFailure
 from synth.base.progress import Listener, silent
 from synth.base.provenance import Provenance
-from synth.gain import ClosedUnit, close_network
+from synth.gain import ClosedUnit
+from synth.gain.closed import close_plan
 from synth.local.aims import AimedPeak, aims_of, role_of
 from synth.local.blocking import Blocking, find_blocking
 from synth.local.finish import Found, search
 from synth.local.guarantee import Broken, SignalPeak
+from synth.local.journal import Journal
 from synth.local.nominal import nominal_peaks
 from synth.local.obstructed import ObstructionFound
 from synth.local.plant import Field, field_of
 from synth.local.pull import Pulled, pull, scaled
+from synth.local.sampled_outcome import Sampled
+from synth.local.sweeping import searched_together, sweep
+from synth.local.workers import cores
 from synth.network.gains import Gains
-from synth.network.model import Network, need_fixed_pattern
+from synth.network.model import Network
 
 _ROOM = 0.98  # the first search of an aimed design ends at this part of the target
 _KEPT = 1e-6  # limits exceeded by less than this count as kept by a search
@@ -44,7 +50,9 @@ class Design:
     blame when not reached; ``modes`` per kind the eigenvalues of the closed unit in 1/s, estimates; ``peaks``
     guaranteed peaks of every signal under the declared disturbances from rest; ``digits`` significant digits of the
     gains. ``aim`` what was made small ('radius', 'effort' or 'peak'; 'radius' also where the target is out of reach)
-    and ``aimed`` the signals whose peaks were, each with its guaranteed and its nominal peak.
+    and ``aimed`` the signals whose peaks were, each with its guaranteed and its nominal peak. ``sampled`` what holds
+    on the sampled units, where the goal names a period (``reached`` then counts it too); all else is about the
+    continuous loop.
     """
 
     gains: Gains
@@ -62,6 +70,7 @@ class Design:
     network: Network = field(repr=False)
     aim: str = "radius"
     aimed: tuple[AimedPeak, ...] = ()
+    sampled: Sampled | None = None
 
     @property
     def radius(self) -> Enclosure:
@@ -98,6 +107,8 @@ def design(
     starts: int | None = None,
     progress: Listener = silent,
     check_obstruction: bool = True,
+    work: str | os.PathLike[str] | None = None,
+    workers: int | None = None,
 ) -> Design:
     """Find the gains with the smallest radius within every limit of the goal, or what else ``goal.aim`` makes small.
 
@@ -110,6 +121,11 @@ def design(
     Where the goal sets no ``fastest`` bound, the search keeps to a disc of its own: ten times the fastest open mode or
     fifty times ``slowest``, whichever is larger (1 1/s where both are zero).
 
+    A network of many gain sets (members with gains of their own) is designed in sweeps of local problems, which
+    ``workers`` processes share (absent: all cores); ``work`` names a file that keeps finished local problems, so that
+    an interrupted run goes on from it with the same result. The aims 'effort' and 'peak' are refused there, and of the
+    causes only the units in the leading loop are named.
+
     A target out of reach, or limits that no gains keep, is an ordinary result: ``reached`` is False and ``blocking``
     says why. Raises ObstructionFound where no local feedback can work (theory (26)), InputError for a target or
     number out of range, SolverFailure if not one stabilising set of gains was met.
@@ -120,6 +136,15 @@ def design(
         _refuse_obstruction(network)
     plants = field_of(network)
     aimed_at = aims_of(network)
+    if not searched_together(plants):
+        if aimed_at:
+            raise InputError(
+                f"the aim {network.goal.aim!r} is not offered for {len(plants.groups)} gain sets; share gains "
+                "(gains: per_kind), or aim at the radius."
+            )
+        many = cores(workers)
+        found = sweep(plants, Journal(work), many, progress=progress)
+        return _finished(plants, found, aim, seed, progress, explain=False, workers=many)
     if not aimed_at:
         found = search(plants, seed=seed, starts=starts, progress=progress)
         return _finished(plants, found, aim, seed, progress, explain=True)
@@ -157,7 +182,10 @@ def redesign(
 
 def _checked(network: Network, target: float | Fraction | None, seed: int, starts: int | None) -> float:
     """The target as a float, after the arguments were found in range."""
-    need_fixed_pattern(network, "the design")
+    if not isinstance(network, Network):
+        raise InputError(
+            f"the design needs a network, not {type(network).__name__}; read a problem file first: synth.read(path)."
+        )
     aim = float(network.goal.target if target is None else target)
     if not 0 < aim < 1:
         raise InputError(
@@ -185,11 +213,13 @@ def _refuse_obstruction(network: Network) -> None:
         raise ObstructionFound(found)
 
 
-def _finished(plants: Field, found: Found, aim: float, seed: int, progress: Listener, explain: bool) -> Design:
+def _finished(
+    plants: Field, found: Found, aim: float, seed: int, progress: Listener, explain: bool, workers: int = 1
+) -> Design:
     """Round, guarantee, and explain."""
     if not np.isfinite(found.merit.radius) and not explain:
         raise SolverFailure("no stabilising gains were found from the gains given; run a full design instead.")
-    pulled: Pulled = pull(plants, found)
+    pulled: Pulled = pull(plants, found, workers=workers, progress=progress)
     result = pulled.guarantee
     reached = not result.broken and result.upper <= aim
     progress(f"guaranteed radius between {result.lower:.6g} and {result.upper:.6g}")
@@ -201,8 +231,8 @@ def _finished(plants: Field, found: Found, aim: float, seed: int, progress: List
                 "no stabilising gains were found: the cell problem had no usable answer, and neither had any search "
                 "from placed modes, also with each limit relaxed. Check the signs and units of the equations."
             )
-    units = close_network(plants.network, pulled.gains)
-    modes = tuple(tuple(complex(v) for v in np.linalg.eigvals(unit.A.floats())) for unit in units)
+    units = close_plan(plants.plan, pulled.gains)
+    modes = _modes(plants, units)
     settings: dict[str, object] = {"target": aim, "seed": seed, "digits": pulled.digits, "narrowed": pulled.narrowed}
     aimed: tuple[AimedPeak, ...] = ()
     if plants.ceiling is not None:
@@ -216,12 +246,27 @@ def _finished(plants: Field, found: Found, aim: float, seed: int, progress: List
     )  # fmt: skip
 
 
+def _modes(plants: Field, units: tuple[ClosedUnit, ...]) -> tuple[tuple[complex, ...], ...]:
+    """Per kind the modes of its closed unit; of several that differ in what links fold in, those that decay slowest."""
+    found: dict[int, tuple[complex, ...]] = {}
+    for spec, unit in zip(plants.plan.specs, units, strict=True):
+        modes = tuple(complex(v) for v in np.linalg.eigvals(unit.A.floats()))
+        slowest = max((v.real for v in modes), default=-np.inf)
+        if spec.kind not in found or slowest > max((v.real for v in found[spec.kind]), default=-np.inf):
+            found[spec.kind] = modes
+    return tuple(found.get(k, ()) for k in range(len(plants.network.kinds)))
+
+
 def _aimed(network: Network, units: tuple[ClosedUnit, ...], peaks: tuple[SignalPeak, ...]) -> tuple[AimedPeak, ...]:
-    """The aimed signals with their guaranteed and their nominal peaks."""
+    """The aimed signals with their guaranteed and their nominal peaks (patterns of fixed links only)."""
     keys = list(aims_of(network))
+    fixed = network.description == "pattern" and not any(link.weakens or link.choice for link in network.links)
+    nominals: list[float | None] = [None] * len(keys)
+    if fixed:
+        nominals = list(nominal_peaks(network, units, keys))
     found = {(p.kind, p.role, p.signal): p for p in peaks}
     return tuple(
         AimedPeak(kind, role_of(group), name, p.unit, p.value, nominal, p.limit)
-        for (kind, group, name), nominal in zip(keys, nominal_peaks(network, units, keys), strict=True)
+        for (kind, group, name), nominal in zip(keys, nominals, strict=True)
         for p in (found[kind, role_of(group), name],)
     )

@@ -1,20 +1,30 @@
 """What is guaranteed about given exact gains: the radius, every limit, and which of them are broken.
 
-Peaks follow theory (3) from rest: z <= (I - M)^{-1} M_w w with the upper ends of all peak gains. The solution of that
-system is checked in exact arithmetic (M z + M_w w <= z with M of radius below one bounds every signal).
+Peaks follow theory (3) from rest: z <= (I - M)^{-1} M_w w with the upper ends of all peak gains, for every description
+of a network; ``synth.local.settling`` finds z and checks it in exact arithmetic.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field
 from fractions import Fraction
 
 import numpy as np
 
 from synth.base.errors import UnstableLoop, WidthNotReached
-from synth.gain import PeakGain, UnitPeaks, assemble, close_network, state_peaks
+from synth.base.progress import Listener, silent
+from synth.gain import PeakGain, UnitPeaks
+from synth.gain.assembly import Assembly
+from synth.gain.closed import close_plan
+from synth.gain.descriptions import plan_of
+from synth.gain.enclosure import NetworkRadius, network_radius
+from synth.gain.plan import Plan
+from synth.gain.rounding import up
+from synth.local.plant import with_outlets
 from synth.local.region import decays_faster, inside_disc
+from synth.local.settling import EdgeSizes, Sizes, least_sizes
+from synth.local.unit_table import UnitTable
 from synth.network.gains import Gains
 from synth.network.model import Actuator, Kind, Network, Signal
 from synth.network.rational import characteristic
@@ -54,45 +64,178 @@ class Broken:
 
 @dataclass(frozen=True)
 class Guarantee:
-    """Guaranteed enclosure of the radius, peaks of all signals, and the limits that are broken (empty: all hold)."""
+    """Guaranteed enclosure of the radius, peaks of all signals, and the limits that are broken (empty: all hold).
+
+    A peak is the largest over all units of the kind. ``covers`` says in words what the radius is about, ``radius`` is
+    the enclosure behind it (None where a unit is unstable).
+    """
 
     lower: float
     upper: float
     peaks: tuple[SignalPeak, ...]
     broken: tuple[Broken, ...]
+    covers: str = ""
+    radius: NetworkRadius | None = field(default=None, compare=False, repr=False)
 
 
-def guarantee(network: Network, gains: Gains, width: float = 1e-6) -> Guarantee:
-    """Enclose the radius and every declared limit for ``gains``.
+def guarantee(
+    network: Network, gains: Gains, width: float = 1e-6, workers: int = 1, progress: Listener = silent
+) -> Guarantee:
+    """Enclose the radius and every declared limit for ``gains``; any description of a network.
 
     An unstable unit gives an infinite radius and infinite peaks; WidthNotReached if a peak gain does not close.
+    ``workers`` processes share the peak gains of a network of many different units.
     """
-    found = list(broken_bounds(network, gains))
-    closed = close_network(network, gains)
+    whole = with_outlets(network)
+    plan = plan_of(whole)
+    found = list(broken_bounds(network, gains, plan))
+    table = UnitTable(gains, width, workers, progress)
     try:
-        assembly = assemble(closed, network.links, width=width)
-        units = [state_peaks(unit, width=width) for unit in closed]
+        radius = _enclosed(whole, plan, table, width)
     except UnstableLoop as error:
-        peaks = tuple(_peaks(network, [], None))
+        peaks = tuple(_peaks(network, {}))
         unstable = Broken("stability", "", "", f"{error}".rstrip("."))
         return Guarantee(float("inf"), float("inf"), peaks, (unstable, *found, *_broken_peaks(peaks)))
-    radius = assembly.radius()
-    matrix: dict[tuple[int, int], Fraction] = {}
-    for entry in assembly.entries:
-        key = (entry.row, entry.column)
-        matrix[key] = matrix.get(key, Fraction(0)) + Fraction(entry.upper)
-    z = _bounded(network, units, matrix) if radius.upper < 1 else None
-    peaks = tuple(_peaks(network, units, z))
-    return Guarantee(float(radius.lower), float(radius.upper), peaks, (*found, *_broken_peaks(peaks)))
+    settled = _settled(whole, radius, table) if radius.upper < 1 else None
+    peaks = tuple(_peaks(network, {} if settled is None else _largest(network, settled, table)))
+    return Guarantee(
+        float(radius.lower), float(radius.upper), peaks, (*found, *_broken_peaks(peaks)), radius.covers, radius
+    )
 
 
-def broken_bounds(network: Network, gains: Gains) -> tuple[Broken, ...]:
-    """Bounds on modes and gains that do not hold, decided exactly."""
+def _enclosed(network: Network, plan: Plan, table: UnitTable, width: float) -> NetworkRadius:
+    """The radius, with the peak gains of ``table`` wherever the network is one finite operator."""
+    table.units(plan)
+    return network_radius(network, table.gains, peak_width=width, table=table)
+
+
+def _settled(network: Network, radius: NetworkRadius, table: UnitTable) -> list[tuple[Assembly, Sizes]] | None:
+    """Every finite operator with sizes that its signals keep; None if none could be shown."""
+
+    def forced(assembly: Assembly) -> Sizes:
+        return _forced_rows(assembly.plan, table)
+
+    found: list[tuple[Assembly, Sizes]] = []
+    pieces = list(radius.pieces)
+    if network.description == "edge pattern":
+        edges = EdgeSizes(network, pieces, table).find(forced)
+        if edges is None:
+            return None
+        far, near = edges
+        found = [(pieces[0].assembly, far), *near]
+        pieces = pieces[1 + len(near) :]
+    for piece in pieces:
+        sizes = least_sizes(piece.assembly, forced(piece.assembly))
+        if sizes is None:
+            return None
+        found.append((piece.assembly, sizes))
+    return found
+
+
+def _forced_rows(plan: Plan, table: UnitTable) -> Sizes:
+    """M_w w of every row."""
+    own = [
+        _forced(plan.kinds[spec.kind], unit.offers_dist)
+        for spec, unit in zip(plan.specs, table.units(plan), strict=True)
+    ]
+    spec_of = plan.unit_spec[plan.row_unit]
+    return [own[i][k] for i, k in zip(spec_of.tolist(), plan.row_offer.tolist(), strict=True)]
+
+
+def _forced(kind: Kind, gain: PeakGain) -> list[Fraction]:
+    """Peak gains from disturbances times the declared peaks, row by row, exactly from the upper ends."""
+    peaks = [w.peak for w in kind.disturbances]
+    return [
+        sum((Fraction(float(value)) * peak for value, peak in zip(row, peaks, strict=True)), Fraction(0))
+        for row in np.asarray(gain.upper)
+    ]
+
+
+_Peak = tuple[str, str, str]  # kind, role, signal
+
+
+def _largest(network: Network, settled: Sequence[tuple[Assembly, Sizes]], table: UnitTable) -> Mapping[_Peak, Fraction]:
+    """The largest peak of every signal of a kind over all its units, wherever they stand."""
+    found: dict[_Peak, Fraction] = {}
+    for assembly, z in settled:
+        plan = assembly.plan
+        units = table.units(plan)
+        arriving = _arriving(plan, z)
+        seen: set[tuple[int, tuple[Fraction, ...]]] = set()
+        for unit, spec in enumerate(plan.unit_spec.tolist()):
+            brought = arriving[unit]
+            if (spec, brought) in seen:
+                continue
+            seen.add((spec, brought))
+            kind = network.kinds[plan.specs[spec].kind]
+            for role, signals, takes, dist in _tables(kind, units[spec]):
+                forced = _forced(kind, dist)
+                for k, signal in enumerate(signals):
+                    value = forced[k] + sum(
+                        (Fraction(float(p)) * v for p, v in zip(takes.upper[k], brought, strict=True) if v), Fraction(0)
+                    )
+                    key = (kind.name, role, signal.name)
+                    found[key] = max(value, found.get(key, Fraction(0)))
+    return found
+
+
+def _tables(kind: Kind, unit: UnitPeaks) -> tuple[tuple[str, tuple[Signal | Actuator, ...], PeakGain, PeakGain], ...]:
+    return (
+        ("state", kind.states, unit.states_takes, unit.states_dist),
+        ("offer", kind.offers, unit.offers_takes, unit.offers_dist),
+        ("actuator", kind.inputs, unit.actuators_takes, unit.actuators_dist),
+    )
+
+
+def _arriving(plan: Plan, z: Sizes) -> list[tuple[Fraction, ...]]:
+    """What arrives at most at each take of every unit: the largest of each choice, added up."""
+    found = [[Fraction(0)] * len(plan.kinds[k].takes) for k in plan.unit_kind.tolist()]
+    most: dict[tuple[int, int], Fraction] = {}
+    strengths = [pair[0] for pair in plan.moduli]
+    columns = (plan.row, plan.source, plan.take, plan.choice, plan.modulus_of)
+    for row, source, take, choice, modulus in zip(*(c.tolist() for c in columns), strict=True):
+        if plan.row_offer[row]:
+            continue  # the unit's other offers hear the same
+        unit, value = int(plan.row_unit[row]), strengths[modulus] * z[source]
+        if choice >= 0:
+            key = (unit, choice)
+            value, most[key] = (
+                max(value - most.get(key, Fraction(0)), Fraction(0)),
+                max(value, most.get(key, Fraction(0))),
+            )
+        found[unit][take] += value
+    return [tuple(values) for values in found]
+
+
+def _peaks(network: Network, found: Mapping[_Peak, Fraction]) -> list[SignalPeak]:
+    """Peaks of every state, offer and actuator; infinite where nothing was found."""
+    listed: list[SignalPeak] = []
+    for kind in network.kinds:
+        groups: tuple[tuple[str, tuple[Signal | Actuator, ...]], ...] = (
+            ("state", kind.states),
+            ("offer", kind.offers),
+            ("actuator", kind.inputs),
+        )
+        for role, signals in groups:
+            for signal in signals:
+                exact = found.get((kind.name, role, signal.name))
+                value = float("inf") if exact is None else up(exact)
+                limit = getattr(signal, "limit", None) if role == "actuator" else getattr(signal, "band", None)
+                listed.append(SignalPeak(kind.name, role, signal.name, signal.unit, value, limit))
+    return listed
+
+
+def broken_bounds(network: Network, gains: Gains, plan: Plan | None = None) -> tuple[Broken, ...]:
+    """Bounds on modes and gains that do not hold, decided exactly; each once per kind.
+
+    ``plan``: that of the network, if it is at hand.
+    """
     goal = network.goal
     found: list[Broken] = []
-    for unit in close_network(network, gains):
+    plan = plan_of(with_outlets(network)) if plan is None else plan
+    for unit in close_plan(plan, gains):
         name = unit.kind.name
-        polynomial = characteristic(unit.A.rows)
+        polynomial = characteristic(unit.A.rows) if goal.slowest is not None or goal.fastest is not None else []
         if goal.slowest is not None and not decays_faster(polynomial, goal.slowest):
             found.append(
                 Broken(
@@ -123,85 +266,7 @@ def broken_bounds(network: Network, gains: Gains) -> tuple[Broken, ...]:
                             f"{actuator} of {name} uses {sensor_signal.name}, which it may not",
                         )
                     )  # fmt: skip
-    return tuple(found)
-
-
-def _bounded(
-    network: Network, units: Sequence[UnitPeaks], matrix: dict[tuple[int, int], Fraction]
-) -> list[Fraction] | None:
-    """z with M z + M_w w <= z, checked exactly; None if the float solution cannot be made to pass."""
-    from_w = [
-        value for kind, unit in zip(network.kinds, units, strict=True) for value in _forced(kind, unit.offers_dist)
-    ]
-    size = len(from_w)
-    dense = np.zeros((size, size))
-    for (i, j), value in matrix.items():
-        dense[i, j] = float(value)
-    right = np.array([float(v) for v in from_w])
-    try:
-        guess = np.linalg.solve(np.eye(size) - dense, right)
-    except np.linalg.LinAlgError:
-        return None
-    if np.any(guess < 0):
-        return None
-    for slack in (1e-12, 1e-9, 1e-6):
-        # The added part must itself be a point of decay, or it would not cover rows that nothing forces.
-        lift = np.linalg.solve(np.eye(size) - dense, np.full(size, max(float(right.max(initial=0.0)), 1e-300)))
-        z = [Fraction(float(v)) for v in guess + slack * lift]
-        image = list(from_w)
-        for (i, j), value in matrix.items():
-            image[i] += value * z[j]
-        if all(a <= b for a, b in zip(image, z, strict=True)):
-            return z
-    return None
-
-
-def _forced(kind: Kind, gain: PeakGain) -> list[Fraction]:
-    """Peak gains from disturbances times the declared peaks, row by row, exactly from the upper ends."""
-    peaks = [w.peak for w in kind.disturbances]
-    return [
-        sum((Fraction(float(value)) * peak for value, peak in zip(row, peaks, strict=True)), Fraction(0))
-        for row in np.asarray(gain.upper)
-    ]
-
-
-def _peaks(network: Network, units: Sequence[UnitPeaks], z: list[Fraction] | None) -> list[SignalPeak]:
-    """Peaks of every state, offer and actuator; infinite where ``z`` is None."""
-    outlets = {(kind.name, offer.name): 0 for kind in network.kinds for offer in kind.offers}
-    place = {outlet: i for i, outlet in enumerate(outlets)}
-    found: list[SignalPeak] = []
-    for index, kind in enumerate(network.kinds):
-        brought = [Fraction(0)] * len(kind.takes)
-        for link in network.links:
-            if link.kind == kind.name and z is not None:
-                brought[kind.index("takes", link.take)] += abs(link.strength) * z[place[link.source_kind, link.offer]]
-        groups: tuple[tuple[str, tuple[Signal | Actuator, ...]], ...] = (
-            ("state", kind.states),
-            ("offer", kind.offers),
-            ("actuator", kind.inputs),
-        )
-        for role, signals in groups:
-            if z is None:
-                values = [float("inf")] * len(signals)
-            else:
-                unit = units[index]
-                takes = {"state": unit.states_takes, "offer": unit.offers_takes, "actuator": unit.actuators_takes}[role]
-                dist = {"state": unit.states_dist, "offer": unit.offers_dist, "actuator": unit.actuators_dist}[role]
-                values = [
-                    _up(forced + sum((Fraction(float(p)) * v for p, v in zip(row, brought, strict=True)), Fraction(0)))
-                    for forced, row in zip(_forced(kind, dist), np.asarray(takes.upper), strict=True)
-                ]
-            for signal, value in zip(signals, values, strict=True):
-                limit = getattr(signal, "limit", None) if role == "actuator" else getattr(signal, "band", None)
-                found.append(SignalPeak(kind.name, role, signal.name, signal.unit, value, limit))
-    return found
-
-
-def _up(value: Fraction) -> float:
-    """The smallest double not below ``value``."""
-    from synth.gain.rounding import up
-
-    return up(value)
+    return tuple(dict.fromkeys(found))
 
 
 def _broken_peaks(peaks: Sequence[SignalPeak]) -> list[Broken]:

@@ -10,13 +10,15 @@ radius reaches one they are infinite; their excess saturates there, which keeps 
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from synth.gain.guide import Guide, peak_gain_guide, radius_guide
-from synth.local.plant import Field, Plant
+from synth.gain.guide import Guide, peak_gain_guide
+from synth.local.intake import Loop
+from synth.local.plant import Field, Plant, Region
 
 Array = NDArray[np.float64]
 
@@ -31,9 +33,10 @@ UNSTABLE = 1e4  # merits at or above this mean that some closed unit is not Hurw
 class Merit:
     """One evaluation: ``value`` to be made small, ``slopes`` its derivative by every K, and the parts behind it.
 
-    ``excess`` is the sum of all broken limits (relative, zero if every limit holds); ``peaks`` are, kind by kind, the
-    peak of each row of H over its band and of each actuator over its limit (infinite from radius one on). ``aim`` is
-    the largest aimed peak, in parts of what counts as one (infinite from radius one on, 0 without a ceiling).
+    ``excess`` is the sum of all broken limits (relative, zero if every limit holds); ``peaks`` are, plant by plant, the
+    largest peak over its units of each row of H over its band and of each actuator over its limit (infinite from
+    radius one on). ``aim`` is the largest aimed peak, in parts of what counts as one (infinite from radius one on, 0
+    without a ceiling).
     """
 
     value: float
@@ -62,21 +65,22 @@ def measure(
     excess, slopes = 0.0, [np.zeros_like(K) for K in gains]
     for i, (plant, K) in enumerate(zip(field.plants, gains, strict=True)):
         if mode_excess is None or mode_excess[i]:
-            out, by_A = _mode_excess(plant.A + plant.B @ K @ plant.C, field, tight)
+            out, by_A = mode_excess_of(plant.A + plant.B @ K @ plant.C, field, tight)
             excess += out
             slopes[i] += plant.B.T @ by_A @ plant.C.T
         over = np.where(plant.allowed, np.abs(K) / plant.bound - (1 - tight), 0.0)
         excess += float(over[over > 0].sum())
         slopes[i] += np.where(over > 0, np.sign(K) / plant.bound, 0.0)
-        unit = _unit(plant, K, steep)
+        unit = unit_guide(plant, K, steep)
         if unit is None:
-            out, by_A = _growth(plant.A + plant.B @ K @ plant.C)
+            out, by_A = growth_of(plant.A + plant.B @ K @ plant.C)
             flat = tuple(np.zeros_like(K) for K in gains)
             up = tuple(plant.B.T @ by_A @ plant.C.T if j == i else flat[j] for j in range(len(gains)))
             return Merit(UNSTABLE * (1 + out), tuple(UNSTABLE * s for s in up), np.inf, np.inf, ())
         units.append(unit)
-    radius, by_radius, tie, by_tie = _radius(field, units)
-    peaks = _peaks(field, units, radius, tight)
+    loop = loop_of(field, units)
+    radius, by_radius, tie, by_tie = _radius(field, loop, units)
+    peaks = _peaks(field, loop, units, radius, tight)
     height = float(np.log(max(radius, 1e-12)))
     weights = (1.0, 0.0)  # of log radius and of the aimed peak
     excess += peaks.excess
@@ -94,12 +98,12 @@ def measure(
             break
         by_entry = (weights[0] + over_radius) * by_radius[i] + by_tie[i] + weight * peaks.by_excess[i]
         by_entry = by_entry + weights[1] * peaks.by_height[i]
-        slopes[i] = weight * slopes[i] + _by_gain(field.plants[i], unit, by_entry)
+        slopes[i] = weight * slopes[i] + slope_by_gain(field.plants[i], unit, by_entry)
     slopes = [np.where(p.allowed, s, 0.0) for p, s in zip(field.plants, slopes, strict=True)]
     return Merit(value, tuple(slopes), radius, excess, peaks.ratios, peaks.aim)
 
 
-def _unit(plant: Plant, K: Array, steep: bool) -> Guide | None:
+def unit_guide(plant: Plant, K: Array, steep: bool) -> Guide | None:
     """Peak gains from [takes, disturbances] to [rows of H, actuators], with slopes by each allowed entry of K."""
     actuators, w = plant.B.shape[1], plant.E.shape[1]
     closed = plant.A + plant.B @ K @ plant.C
@@ -117,32 +121,28 @@ def _unit(plant: Plant, K: Array, steep: bool) -> Guide | None:
     return found if good else None
 
 
-def _by_gain(plant: Plant, unit: Guide, by_entry: Array) -> Array:
+def slope_by_gain(plant: Plant, unit: Guide, by_entry: Array) -> Array:
     """Derivative by K from the derivative by the unit's peak gains."""
     found = np.zeros(plant.allowed.shape)
     found[plant.allowed] = unit.slopes.reshape(len(unit.slopes), by_entry.size) @ by_entry.ravel()
     return found
 
 
-def gain_matrix(field: Field, units: list[Guide]) -> Array:
-    """M (all offers, all offers) from the peak gains of every unit and the link strengths."""
-    return np.concatenate(
-        [
-            unit.gains[: plant.offers, : plant.D.shape[1]] @ field.strengths[field.takes(i)]
-            for i, (plant, unit) in enumerate(zip(field.plants, units, strict=True))
-        ]
-    )
+def loop_of(field: Field, units: Sequence[Guide]) -> Loop:
+    """The operator of the peak gains of every plant."""
+    own = [unit.gains[: p.offers, : p.D.shape[1]] for p, unit in zip(field.plants, units, strict=True)]
+    return Loop.of(field.intake, own)
 
 
-def _radius(field: Field, units: list[Guide]) -> tuple[float, list[Array], float, list[Array]]:
+def _radius(field: Field, loop: Loop, units: list[Guide]) -> tuple[float, list[Array], float, list[Array]]:
     """Radius, the derivative of its logarithm by every peak gain, the tie-break, and its derivative."""
-    matrix = gain_matrix(field, units)
-    radius, slope = radius_guide(matrix, field.blocks)
-    slope = slope / max(radius, 1e-12)
+    radius, left, right, chosen = loop.radius()
+    left = left / max(radius, 1e-12)
+    brought = loop.intake.matrix(chosen) @ right
     by_gain, by_tie, tie = [], [], 0.0
     for i, (plant, unit) in enumerate(zip(field.plants, units, strict=True)):
         part, aside = np.zeros_like(unit.gains), np.zeros_like(unit.gains)
-        part[: plant.offers, : plant.D.shape[1]] = slope[field.rows(i)] @ field.strengths[field.takes(i)].T
+        part[: plant.offers, : plant.D.shape[1]] = left[field.intake.rows[i]].T @ brought[field.intake.takes[i]]
         if not part.any():
             heads = plant.H.shape[0]
             total = float(unit.gains[:heads].sum())
@@ -166,7 +166,37 @@ class _Peaks:
     aim: float
 
 
-def _peaks(field: Field, units: list[Guide], radius: float, tight: float) -> _Peaks:
+@dataclass(frozen=True)
+class _Settled:
+    """Sizes z = (I - M)^{-1} M_w w; by plant what arrives (units, takes) and peaks (units, heads and actuators)."""
+
+    loop: Loop
+    chosen: NDArray[np.intp]
+    brought: list[Array]
+    peaks: list[Array]
+
+
+def _settled(field: Field, loop: Loop, units: list[Guide]) -> _Settled:
+    intake = field.intake
+    forced = np.zeros(intake.size)
+    for plant, unit, rows in zip(field.plants, units, intake.rows, strict=True):
+        forced[rows] = unit.gains[: plant.offers, plant.D.shape[1] :].sum(axis=1)
+    z, chosen = loop.sizes(forced)
+    arriving = intake.matrix(chosen) @ z
+    brought = [arriving[takes] for takes in intake.takes]
+    peaks = [
+        v @ unit.gains[:, : v.shape[1]].T + unit.gains[:, v.shape[1] :].sum(axis=1)
+        for unit, v in zip(units, brought, strict=True)
+    ]
+    return _Settled(loop, chosen, brought, peaks)
+
+
+def settled_arrivals(field: Field, loop: Loop, units: list[Guide]) -> list[Array]:
+    """What arrives at the takes (units, takes) of every plant under the declared disturbances; radius below one."""
+    return _settled(field, loop, units).brought
+
+
+def _peaks(field: Field, loop: Loop, units: list[Guide], radius: float, tight: float) -> _Peaks:
     """Every peak by theory (3), each excess with its derivative by every peak gain."""
     limits = [np.concatenate((p.band, p.limit)) * (1 - tight) for p in field.plants]
     none = [np.zeros_like(unit.gains) for unit in units]
@@ -176,62 +206,51 @@ def _peaks(field: Field, units: list[Guide], radius: float, tight: float) -> _Pe
     if radius >= 1 - 1e-9:
         out = tuple(np.where(np.isfinite(limit), np.inf, 0.0) for limit in limits)
         return _Peaks(out, _FLAT * counted, none, _FLAT, none, np.inf)
-    matrix = gain_matrix(field, units)
-    inverse: Array = np.asarray(np.linalg.inv(np.eye(len(matrix)) - matrix), dtype=np.float64)
-    from_w = np.concatenate(
-        [u.gains[: p.offers, p.D.shape[1] :].sum(axis=1) for p, u in zip(field.plants, units, strict=True)]
-    )
-    z = inverse @ from_w
-    brought = [field.strengths[field.takes(i)] @ z for i in range(len(units))]
-    peaks = [
-        unit.gains[:, : len(v)] @ v + unit.gains[:, len(v) :].sum(axis=1)
-        for unit, v in zip(units, brought, strict=True)
-    ]
-    ratios = [peak / limit for peak, limit in zip(peaks, limits, strict=True)]
-    total, steep = 0.0, [np.zeros_like(peak) for peak in peaks]
-    for slope, ratio, peak in zip(steep, ratios, peaks, strict=True):
-        for row in np.nonzero(ratio > 1)[0]:
-            log = float(np.log(ratio[row]))
+    found = _settled(field, loop, units)
+    ratios = [peak / limit for peak, limit in zip(found.peaks, limits, strict=True)]
+    total, steep = 0.0, [np.zeros_like(peak) for peak in found.peaks]
+    for slope, ratio, peak in zip(steep, ratios, found.peaks, strict=True):
+        for place in zip(*np.nonzero(ratio > 1), strict=True):
+            log = float(np.log(ratio[place]))
             total += log / (1 + log / _FLAT)
-            slope[row] = 1 / (1 + log / _FLAT) ** 2 / float(peak[row])
-    by_excess = _by_peaks(field, units, steep, brought, inverse)
-    kept = tuple(ratio * (1 - tight) for ratio in ratios)
+            slope[place] = 1 / (1 + log / _FLAT) ** 2 / float(peak[place])
+    by_excess = _by_peaks(field, units, steep, found)
+    kept = tuple(np.asarray(ratio.max(axis=0, initial=0.0)) * (1 - tight) for ratio in ratios)
     if field.ceiling is None:
         return _Peaks(kept, total, by_excess, 0.0, none, 0.0)
-    parts = [plant.aimed * peak for plant, peak in zip(field.plants, peaks, strict=True)]
+    parts = [plant.aimed * peak for plant, peak in zip(field.plants, found.peaks, strict=True)]
     i = int(np.argmax([part.max(initial=0.0) for part in parts]))
-    top_row = int(np.argmax(parts[i]))
-    aim = max(float(parts[i][top_row]), 1e-12)
+    at = np.unravel_index(int(np.argmax(parts[i])), parts[i].shape)
+    aim = max(float(parts[i][at]), 1e-12)
     log = float(np.log(aim))
     share = 1.0 if log <= 0 else 1 / (1 + log / _FLAT)
-    top = [np.zeros_like(peak) for peak in peaks]
-    top[i][top_row] = share**2 / max(float(peaks[i][top_row]), 1e-300)
-    by_height = _by_peaks(field, units, top, brought, inverse) if aim > 1e-12 else none
+    top = [np.zeros_like(peak) for peak in found.peaks]
+    top[i][at] = share**2 / max(float(found.peaks[i][at]), 1e-300)
+    by_height = _by_peaks(field, units, top, found) if aim > 1e-12 else none
     return _Peaks(kept, total, by_excess, log * share, by_height, aim)
 
 
-def _by_peaks(
-    field: Field, units: list[Guide], steep: list[Array], brought: list[Array], inverse: Array
-) -> list[Array]:
+def _by_peaks(field: Field, units: list[Guide], steep: list[Array], found: _Settled) -> list[Array]:
     """Derivative by every peak gain of a function of the peaks whose derivative by each peak is ``steep``."""
-    found = [np.zeros_like(unit.gains) for unit in units]
-    adjoint = np.zeros(len(inverse))
-    for i, (unit, slope) in enumerate(zip(units, steep, strict=True)):
-        takes = len(brought[i])
-        found[i][:, :takes] += np.outer(slope, brought[i])
-        found[i][:, takes:] += slope[:, None]
-        adjoint += slope @ unit.gains[:, :takes] @ field.strengths[field.takes(i)]
-    if adjoint.any():
-        back = adjoint @ inverse
-        for i, plant in enumerate(field.plants):
-            takes = len(brought[i])
-            own = back[field.rows(i)]
-            found[i][: plant.offers, :takes] += np.outer(own, brought[i])
-            found[i][: plant.offers, takes:] += own[:, None]
-    return found
+    intake = field.intake
+    by = [np.zeros_like(unit.gains) for unit in units]
+    by_take = np.zeros(intake.width)
+    for i, (unit, slope, v) in enumerate(zip(units, steep, found.brought, strict=True)):
+        takes = v.shape[1]
+        by[i][:, :takes] += slope.T @ v
+        by[i][:, takes:] += slope.sum(axis=0)[:, None]
+        by_take[intake.takes[i]] = slope @ unit.gains[:, :takes]
+    if not by_take.any():
+        return by
+    back = found.loop.back(found.chosen, intake.matrix(found.chosen).T @ by_take)
+    for i, (plant, v) in enumerate(zip(field.plants, found.brought, strict=True)):
+        own = back[intake.rows[i]]
+        by[i][: plant.offers, : v.shape[1]] += own.T @ v
+        by[i][: plant.offers, v.shape[1] :] += own.sum(axis=0)[:, None]
+    return by
 
 
-def _mode_excess(A: Array, field: Field, tight: float) -> tuple[float, Array]:
+def mode_excess_of(A: Array, field: Region, tight: float) -> tuple[float, Array]:
     """Sum over modes of how far each lies outside the disc and right of the decay bound, and its derivative by A."""
     if not len(A):
         return 0.0, np.zeros_like(A)
@@ -255,7 +274,7 @@ def _mode_excess(A: Array, field: Field, tight: float) -> tuple[float, Array]:
     return total, slope
 
 
-def _growth(A: Array) -> tuple[float, Array]:
+def growth_of(A: Array) -> tuple[float, Array]:
     """Largest real part of the modes of A and its derivative by A."""
     values, right = np.linalg.eig(A)
     i = int(np.argmax(values.real))

@@ -1,5 +1,8 @@
 """The open units as scaled floating-point matrices: what every search of this stage works on.
 
+Units come from the plan of the network's gain operator, whatever its description: one plant per specification (a kind,
+and what relative links fold into it), however many units share it.
+
 Time is counted in 1/omega, omega the radius of the mode disc, and every signal in a unit of its own chosen so that
 the non-zero entries of all matrices lie as close to one as scaling can bring them (least squares of their
 logarithms). The scaled problem is therefore the same whatever units the user declared.
@@ -10,15 +13,19 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass, replace
 from fractions import Fraction
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
-from synth.gain.guide import connected_blocks
+from synth.gain.descriptions import plan_of
+from synth.gain.plan import Plan, UnitSpec, starts
 from synth.local.aims import aims_of
-from synth.network.model import Goal, Kind, Network
+from synth.local.intake import Intake
+from synth.local.scaling import scales_of
+from synth.network.model import Goal, Kind, Network, Signal
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
@@ -72,11 +79,27 @@ class Plant:
         return np.where(self.allowed, K / self.gain_unit, 0.0)
 
 
-@dataclass(frozen=True)
-class Field:
-    """All plants of a network with the scaled links between them.
+class Region(Protocol):
+    """Plants whose closed modes must keep to one region: slower than ``fastest``, faster than ``slowest``."""
 
-    ``strengths`` (all takes, all offers) sums |strength| of the links; ``slowest`` and ``fastest`` are in units of
+    @property
+    def plants(self) -> tuple[Plant, ...]:
+        """The open units."""
+
+    @property
+    def slowest(self) -> float:
+        """Least decay, in 1/scaled time."""
+
+    @property
+    def fastest(self) -> float:
+        """Radius of the disc, in 1/scaled time."""
+
+
+@dataclass(frozen=True, eq=False)
+class Field:
+    """All plants of a network, one per specification of its plan, with the scaled links between their units.
+
+    ``intake`` says which units share a plant and what reaches their takes; ``slowest`` and ``fastest`` are in units of
     ``omega`` (1/s); ``fastest_given`` tells whether the user set the disc or the search chose it. ``groups`` lists the
     plants that carry one gain set (their inputs and sensors are scaled alike, so that equal gains are equal scaled
     gains). ``ceiling`` is None where the radius is made small; else the radius must not exceed it and the peaks that
@@ -84,25 +107,20 @@ class Field:
     """
 
     network: Network
+    plan: Plan
     plants: tuple[Plant, ...]
-    strengths: Array
+    intake: Intake
     omega: float
     slowest: float
     fastest: float
     fastest_given: bool
-    blocks: tuple[NDArray[np.intp], ...]
     groups: tuple[tuple[int, ...], ...]
     ceiling: float | None = None
 
-    def takes(self, i: int) -> slice:
-        """Rows of ``strengths`` that belong to plant i."""
-        start = sum(len(p.kind.takes) for p in self.plants[:i])
-        return slice(start, start + len(self.plants[i].kind.takes))
-
-    def rows(self, i: int) -> slice:
-        """Columns of ``strengths`` (rows of the gain matrix) that belong to plant i."""
-        start = sum(p.offers for p in self.plants[:i])
-        return slice(start, start + self.plants[i].offers)
+    def arriving(self, i: int, z: Array) -> Array:
+        """What arrives at most at each take of plant i, over all its units, from scaled sizes ``z`` of all rows."""
+        own = self.intake.brought(z)[self.intake.takes[i]]
+        return np.asarray(own.max(axis=0, initial=0.0))
 
 
 def allowed_entries(kind: Kind, goal: Goal) -> Mask:
@@ -114,32 +132,58 @@ def allowed_entries(kind: Kind, goal: Goal) -> Mask:
     return mask
 
 
+def with_outlets(network: Network) -> Network:
+    """The network in which every kind offers something: a kind without offers is given one that is always zero.
+
+    A plan has terms only where there are rows; what such a kind takes counts for the peaks of its other signals.
+    """
+    kinds = []
+    for kind in network.kinds:
+        if not kind.offers:
+            n, takes, w, inputs = (len(getattr(kind, g)) for g in ("states", "takes", "disturbances", "inputs"))
+            kind = replace(
+                kind, offers=(Signal("nothing offered", "1"),), H=ExactMatrix.zeros(1, n),
+                F=ExactMatrix.zeros(1, takes), Fw=ExactMatrix.zeros(1, w),
+                Fu=None if kind.Fu is None else ExactMatrix.zeros(1, inputs),
+            )  # fmt: skip
+        kinds.append(kind)
+    return replace(network, kinds=tuple(kinds))
+
+
 def field_of(network: Network, ceiling: float | None = None) -> Field:
     """Fold, scale and collect the units of ``network``; pure arithmetic.
 
     ``ceiling`` (0 to 1) turns the search to what ``network.goal.aim`` names, with the radius bounded by it; without
     it the search is for the smallest radius. InputError where kinds of one group differ in their inputs or sensors.
     """
-    folded = [_folded(kind, network) for kind in network.kinds]
+    plan = plan_of(with_outlets(network))
+    folded = [_folded(plan.kinds[spec.kind], spec) for spec in plan.specs]
     modes = [abs(v) for A, *_ in folded for v in np.linalg.eigvals(A.floats())] or [0.0]
     slowest = float(network.goal.slowest or 0)
     given = network.goal.fastest is not None
     # Without a disc the radius falls for ever as gains grow; the search then keeps to a generous disc of its own.
     natural = max(*modes, 5 * slowest)
     omega = float(network.goal.fastest or 10 * (natural if natural > 0 else 0.1))
-    tables = [_tables(kind, parts, omega) for kind, parts in zip(network.kinds, folded, strict=True)]
-    scales = _scales(network, tables)
+    kinds = [plan.kinds[spec.kind] for spec in plan.specs]
+    tables = [_tables(kind, parts, omega) for kind, parts in zip(kinds, folded, strict=True)]
+    scales = scales_of(network, plan, tables)
     aims = aims_of(network) if ceiling is not None else {}
     plants = tuple(
-        _plant(kind, network.goal, table, scale, aims)
-        for kind, table, scale in zip(network.kinds, tables, scales, strict=True)
+        _plant(kind, network.goal, table, scale, aims) for kind, table, scale in zip(kinds, tables, scales, strict=True)
     )
-    groups = groups_of(network)
-    strengths, pattern = _strengths(network, scales)
+    groups = _groups_of_plants(network, plan)
     return Field(
-        network, _alike(plants, groups), strengths, omega, slowest / omega, 1.0, given, connected_blocks(pattern),
-        groups, ceiling,
-    )  # fmt: skip
+        network,
+        plan,
+        _alike(plants, groups),
+        _intake(plan, scales),
+        omega,
+        slowest / omega,
+        1.0,
+        given,
+        groups,
+        ceiling,
+    )
 
 
 def groups_of(network: Network) -> tuple[tuple[int, ...], ...]:
@@ -164,6 +208,15 @@ def groups_of(network: Network) -> tuple[tuple[int, ...], ...]:
     return tuple(tuple(members) for members in found.values())
 
 
+def _groups_of_plants(network: Network, plan: Plan) -> tuple[tuple[int, ...], ...]:
+    """Plants that carry one gain set: those of all kinds of a group."""
+    of_kind: dict[int, list[int]] = {}
+    for i, spec in enumerate(plan.specs):
+        of_kind.setdefault(spec.kind, []).append(i)
+    found = (tuple(i for k in kinds for i in of_kind.get(k, ())) for kinds in groups_of(network))
+    return tuple(group for group in found if group)
+
+
 def _alike(plants: tuple[Plant, ...], groups: tuple[tuple[int, ...], ...]) -> tuple[Plant, ...]:
     """The plants with the structure and the gain bounds that all of their group have."""
     found = list(plants)
@@ -177,14 +230,11 @@ def _alike(plants: tuple[Plant, ...], groups: tuple[tuple[int, ...], ...]) -> tu
     return tuple(found)
 
 
-def _folded(kind: Kind, network: Network) -> tuple[ExactMatrix, ExactMatrix, ExactMatrix]:
-    """Exact A, C and H with the unit's own part of every relative link folded in (theory section 1, case R1)."""
+def _folded(kind: Kind, spec: UnitSpec) -> tuple[ExactMatrix, ExactMatrix, ExactMatrix]:
+    """Exact A, C and H with the own parts of a specification folded in (theory section 1, case R1)."""
     A, C, H = kind.A, kind.C, kind.H
-    for link in network.links:
-        if link.kind != kind.name or not link.relative:
-            continue
-        take = kind.index("takes", link.take)
-        own = kind.H.row(kind.index("offers", link.offer)).scaled(link.own_strength)
+    for take, offer, strength in spec.own:
+        own = kind.H.row(offer).scaled(strength)
         A = A - kind.D.column(take) @ own
         C = C - kind.N.column(take) @ own
         H = H - kind.F.column(take) @ own
@@ -206,50 +256,6 @@ def _tables(kind: Kind, folded: tuple[ExactMatrix, ExactMatrix, ExactMatrix], om
         "Fu": (kind.Fu or ExactMatrix.zeros(len(kind.offers), len(kind.inputs))).floats(),
         "Fw": kind.Fw.floats() * peaks,
     }
-
-
-def _scales(network: Network, tables: list[dict[str, Array]]) -> list[dict[str, Array]]:
-    """Scale of every state, input, take, offer and sensor: one least-squares fit in logarithms for all kinds.
-
-    Kinds of one gain group share the scales of inputs and sensors.
-    """
-    places: list[dict[str, slice]] = []
-    shared: dict[tuple[str, str], slice] = {}
-    count = 0
-    for kind in network.kinds:
-        place = {}
-        for group in ("states", "inputs", "takes", "offers", "sensors"):
-            size = len(getattr(kind, group))
-            place[group] = slice(count, count + size)
-            if group in ("inputs", "sensors"):
-                place[group] = shared.setdefault((group, kind.group), place[group])
-            count += size
-        places.append(place)
-    rows: list[tuple[int, int, float]] = []  # log value + scale of column - scale of row = 0
-    for place, table in zip(places, tables, strict=True):
-        for name, to, source in (
-            ("A", "states", "states"), ("B", "states", "inputs"), ("D", "states", "takes"), ("H", "offers", "states"),
-            ("F", "offers", "takes"), ("C", "sensors", "states"), ("N", "sensors", "takes"), ("Fu", "offers", "inputs"),
-        ):  # fmt: skip
-            for i, j in zip(*np.nonzero(table[name]), strict=True):
-                if name != "A" or i != j:
-                    rows.append((place[to].start + i, place[source].start + j, float(abs(table[name][i, j]))))
-    names = {kind.name: i for i, kind in enumerate(network.kinds)}
-    for link in network.links:
-        if link.strength:
-            take = places[names[link.kind]]["takes"].start + network.kind(link.kind).index("takes", link.take)
-            offers = places[names[link.source_kind]]["offers"].start
-            offer = offers + network.kind(link.source_kind).index("offers", link.offer)
-            rows.append((take, offer, float(abs(link.strength))))
-    system = np.zeros((len(rows), count))
-    right = np.zeros(len(rows))
-    for r, (row, column, value) in enumerate(rows):
-        system[r, column] += 1.0
-        system[r, row] -= 1.0
-        right[r] = -np.log(value)
-    logs = np.linalg.lstsq(system, right, rcond=None)[0] if rows else np.zeros(count)
-    scale = np.exp(logs)
-    return [{group: scale[part] for group, part in place.items()} for place in places]
 
 
 def _plant(
@@ -329,23 +335,31 @@ def _bounds(values: list[Fraction | None]) -> Array:
     return np.array([np.inf if value is None else float(value) for value in values], dtype=float)
 
 
-def _strengths(network: Network, scales: list[dict[str, Array]]) -> tuple[Array, Mask]:
-    """Scaled sums of |strength| (all takes, all offers), and which offer can feed which offer through a link."""
-    take_start, offer_start, takes, offers = {}, {}, 0, 0
-    for kind in network.kinds:
-        take_start[kind.name], offer_start[kind.name] = takes, offers
-        takes, offers = takes + len(kind.takes), offers + len(kind.offers)
-    index = {kind.name: i for i, kind in enumerate(network.kinds)}
-    strengths = np.zeros((takes, offers))
-    pattern = np.zeros((offers, offers), dtype=bool)
-    for link in network.links:
-        receiver, source = network.kind(link.kind), network.kind(link.source_kind)
-        take, offer = receiver.index("takes", link.take), source.index("offers", link.offer)
-        z, v = scales[index[source.name]]["offers"][offer], scales[index[receiver.name]]["takes"][take]
-        strengths[take_start[receiver.name] + take, offer_start[source.name] + offer] += (
-            float(abs(link.strength)) * z / v
-        )
-        if link.strength:
-            first = offer_start[receiver.name]
-            pattern[first : first + len(receiver.offers), offer_start[source.name] + offer] = True
-    return strengths, pattern
+def _intake(plan: Plan, scales: list[dict[str, Array]]) -> Intake:
+    """What reaches every take, scaled: one ray per term of a unit's first offer (the others hear the same)."""
+    count = [len(plan.kinds[k].takes) for k in plan.unit_kind.tolist()]
+    first_take = starts(np.array(count, dtype=np.intp))
+    units = _sorted(plan)
+    rows = tuple(
+        plan.first_row[part][:, None] + np.arange(len(plan.kinds[spec.kind].offers))
+        for part, spec in zip(units, plan.specs, strict=True)
+    )
+    takes = tuple(
+        first_take[part][:, None] + np.arange(len(plan.kinds[spec.kind].takes))
+        for part, spec in zip(units, plan.specs, strict=True)
+    )
+    row_scale, take_scale = np.ones(plan.size), np.ones(int(first_take[-1]))
+    for i, scale in enumerate(scales):
+        row_scale[rows[i]], take_scale[takes[i]] = scale["offers"], scale["takes"]
+    heard = plan.row_offer[plan.row] == 0
+    take = first_take[plan.row_unit[plan.row[heard]]] + plan.take[heard]
+    source = plan.source[heard]
+    factor = plan.factors()[heard] * row_scale[source] / take_scale[take]
+    return Intake(rows, takes, take, source, factor, plan.choice[heard])
+
+
+def _sorted(plan: Plan) -> list[NDArray[np.intp]]:
+    """The units of every specification, by one sort."""
+    order = np.argsort(plan.unit_spec, kind="stable")
+    ends = starts(np.bincount(plan.unit_spec, minlength=len(plan.specs)))
+    return [order[ends[i] : ends[i + 1]] for i in range(len(plan.specs))]

@@ -14,6 +14,7 @@ its largest term, so that the solver meets numbers near one whatever the units.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from typing import Any
 
 import numpy as np
 
@@ -88,7 +89,8 @@ def solve_program(
         shape=(table.count, total),
     ).tocsr()
     cost = np.concatenate((np.full(states, 1.0), np.full(total - states, 1e-9)))
-    answer = linprog(
+    solve: Any = linprog  # the stubs do not know that A_ub may be sparse
+    answer = solve(
         cost, A_ub=left, b_ub=np.concatenate(table.right), method=method,
         bounds=np.stack([np.zeros(total), top], axis=1),
     )  # fmt: skip
@@ -149,8 +151,8 @@ def _unit_rows(
         if offer.band is not None:
             rows = table.new(np.full(groups, 1.0 - TIGHT))
             for q in range(n):
-                size = float(abs(kind.H[o, q]) / offer.band) if offer.band else np.inf
-                table.put(rows, first + q, size * reference[first + q])
+                share = float(abs(kind.H[o, q]) / offer.band) if offer.band else np.inf
+                table.put(rows, first + q, share * reference[first + q])
 
 
 def _metzler_rows(

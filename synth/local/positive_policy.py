@@ -10,6 +10,8 @@ Units with several actuators are solved as one small linear program each instead
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -116,7 +118,7 @@ def small_program(A: Array, B: Array, entries: tuple[Entry, ...], h: Array) -> A
             right.append(0.0)
     cost = np.concatenate((h + 1e-9 * max(float(h.max(initial=0.0)), 1e-300), np.zeros(count)))
     limits = [(0.0, None)] * n + [(None, None)] * count
-    answer = linprog(cost, A_ub=np.array(rows), b_ub=np.array(right), bounds=limits, method="highs-ds")
+    answer: Any = linprog(cost, A_ub=np.array(rows), b_ub=np.array(right), bounds=limits, method="highs-ds")
     if answer.status != 0 or not np.all(answer.x[:n] > 0):
         return None
     kappa = np.zeros((B.shape[1], n))

@@ -64,9 +64,8 @@ class _Local:
         before = np.full(len(rows), np.inf)
         for _ in range(_POLICIES):
             closed = A + self.b[None, :, None] * kappa[:, None, :]
-            p = np.linalg.solve(np.swapaxes(closed, 1, 2), -(cost + price[:, None] * np.abs(kappa))[:, :, None])[
-                :, :, 0
-            ]
+            right = -(cost + price[:, None] * np.abs(kappa))[:, :, None]
+            p = np.asarray(np.linalg.solve(np.swapaxes(closed, 1, 2), right)[:, :, 0], dtype=float)
             score = p @ self.b
             choices = np.stack([kappa, low, rest, high])
             values = score[None, :, None] * choices + price[None, :, None] * np.abs(choices)
@@ -88,10 +87,10 @@ class _Local:
     def solve(self, arriving: Array) -> tuple[Array, Array, Array, Array] | None:
         """(size, costate, kappa, xi) of every unit when ``arriving`` (units, n) pushes its states; None: infeasible."""
         every = np.arange(len(self.A))
-        kappa, p = self.start, np.linalg.solve(
-            np.swapaxes(self.A + self.b[None, :, None] * self.start[:, None, :], 1, 2),
-            -np.broadcast_to(self.h, self.start.shape)[:, :, None],
-        )[:, :, 0]  # fmt: skip
+        kappa = self.start
+        closed = np.swapaxes(self.A + self.b[None, :, None] * kappa[:, None, :], 1, 2)
+        right = -np.broadcast_to(self.h, kappa.shape)[:, :, None]
+        p = np.asarray(np.linalg.solve(closed, right)[:, :, 0], dtype=float)
         xi = self.sizes(every, kappa, arriving)
         value = (p * arriving).sum(axis=1)
         over = np.flatnonzero((np.abs(kappa) * xi).sum(axis=1) > self.limit)

@@ -15,13 +15,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.exact import ExactMatrix
+from synth.base.progress import Listener, silent
 from synth.local.aims import aims_of, role_of
 from synth.local.descent import descend
 from synth.local.finish import TIGHT, Chart, Found, Gain
 from synth.local.guarantee import Guarantee, broken_bounds, guarantee
 from synth.local.merit import measure
 from synth.local.plant import Field
-from synth.network.gains import Gains, gain_set
+from synth.network.gains import Gains, GainSet, gain_set
 
 DIGITS = (6, 8, 10, 12)
 _COST = 0.01
@@ -50,25 +51,31 @@ def score(field: Field, result: Guarantee) -> float:
 
 def rounded(field: Field, gains: Gain, digits: int) -> Gains:
     """Scaled gains in the user's units with ``digits`` significant digits, exact; zeros of the structure stay zero."""
-    sets = []
-    for plant, K in zip(field.plants, gains, strict=True):
+    sets: dict[int, GainSet] = {}
+    for spec, plant, K in zip(field.plan.specs, field.plants, gains, strict=True):
+        if spec.kind in sets:
+            continue  # another specification of the same kind
         rows = [[Fraction(f"{value:.{digits - 1}e}") for value in row] for row in plant.to_user(K)]
-        sets.append(gain_set(plant.kind, ExactMatrix.of(rows, plant.allowed.shape)))
-    return Gains(tuple(sets))
+        sets[spec.kind] = gain_set(plant.kind, ExactMatrix.of(rows, plant.allowed.shape))
+    for k, kind in enumerate(field.network.kinds):
+        if k not in sets:  # no unit is of this kind
+            sets[k] = gain_set(kind, ExactMatrix.zeros(len(kind.inputs), len(kind.sensors)))
+    return Gains(tuple(sets[k] for k in sorted(sets)))
 
 
 def scaled(field: Field, gains: Gains) -> Gain:
     """Exact gains as scaled floats, plant by plant."""
-    return tuple(plant.to_scaled(gains[plant.kind.name].K.floats()) for plant in field.plants)
+    known = {gain.kind: gain.K for gain in gains.sets}
+    return tuple(plant.to_scaled(known[plant.kind.name].floats()) for plant in field.plants)
 
 
-def pull(field: Field, found: Found, width: float = 1e-6) -> Pulled:
+def pull(field: Field, found: Found, width: float = 1e-6, workers: int = 1, progress: Listener = silent) -> Pulled:
     """Round ``found`` so that every limit holds, if any rounding of it does; else the best rounding with its faults."""
     narrowed: dict[float, Gain] = {TIGHT: found.gains}
     best: Pulled | None = None
     for digits in DIGITS if found.merit.excess < _HOPELESS else ():
         for candidate, tight in _inside(field, found, digits, narrowed):
-            result = guarantee(field.network, candidate, width)
+            result = guarantee(field.network, candidate, width, workers, progress)
             if result.broken or (field.ceiling is not None and result.upper > field.ceiling):
                 continue
             if best is None or score(field, result) < score(field, best.guarantee):
@@ -82,7 +89,7 @@ def pull(field: Field, found: Found, width: float = 1e-6) -> Pulled:
     if best is not None:
         return best
     candidate, digits, tight = _within_bounds(field, found, narrowed)
-    return Pulled(candidate, guarantee(field.network, candidate, width), digits, tight)
+    return Pulled(candidate, guarantee(field.network, candidate, width, workers, progress), digits, tight)
 
 
 def _within_bounds(field: Field, found: Found, narrowed: dict[float, Gain]) -> tuple[Gains, int, float]:

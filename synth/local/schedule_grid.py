@@ -40,7 +40,7 @@ class Grid:
     def cells(self) -> list[tuple[int, ...]]:
         """Corner numbers of every cell: two for an interval, four for a rectangle; one where an axis has one point."""
         place = {point: i for i, point in enumerate(self.points)}
-        spans = [list(itertools.pairwise(axis)) or [(axis[0],)] for axis in self.axes]
+        spans: list[list[Values]] = [[*itertools.pairwise(axis)] or [(axis[0],)] for axis in self.axes]
         return [tuple(place[corner] for corner in itertools.product(*cell)) for cell in itertools.product(*spans)]
 
     def weights(self, values: Sequence[Number]) -> dict[int, Fraction]:

@@ -17,6 +17,7 @@ from synth.local.plant import Field, Plant
 Array = NDArray[np.float64]
 
 
+_SHARED = 6  # so many plants of a gain group enter one linear matrix inequality
 _PRICES = (0.03, 0.3, 3.0)  # how dear effort is in the Riccati starts, and how little sensors are trusted
 
 
@@ -27,9 +28,8 @@ def lmi_starts(field: Field, rounds: int = 3) -> list[tuple[Array, ...]]:
     an estimator or memory is solved as it is without them, and its state feedback acts on what an estimator knows.
     """
     found: list[tuple[Array, ...]] = []
-    offers = field.strengths.shape[1]
     for factor, start in ((1.0, 0.0), (1e-3, 1.0)):
-        z = np.full(offers, start)
+        z = np.full(field.intake.size, start)
         for _ in range(rounds):
             fed: dict[int, Array] = {}
             for group in field.groups:
@@ -38,7 +38,7 @@ def lmi_starts(field: Field, rounds: int = 3) -> list[tuple[Array, ...]]:
                     break
                 by_state, sizes = solved
                 for i, own in zip(group, sizes, strict=True):
-                    rows = field.rows(i)
+                    rows = field.intake.rows[i]
                     z[rows] = 0.5 * (z[rows] + own) if z[rows].any() else own
                     fed[i] = by_state
             if len(fed) < len(field.plants):
@@ -52,12 +52,17 @@ def lmi_starts(field: Field, rounds: int = 3) -> list[tuple[Array, ...]]:
 def _group_cell(
     field: Field, group: tuple[int, ...], factor: float, z: Array
 ) -> tuple[Array, tuple[Array, ...]] | None:
-    """State feedback of the cores of one gain group, and the sizes of what each of its plants offers."""
+    """State feedback of the cores of one gain group, and the sizes of what each of its plants offers.
+
+    A plant that many units share hears what arrives at most. Of a group of more than ``_SHARED`` plants a few stand for
+    all; the others then promise the largest of their sizes.
+    """
     from synth.local.cell import CellData, best_cell
     from synth.local.shared_cell import best_shared
 
     units = []
-    for i in group:
+    standing = group if len(group) <= _SHARED else tuple(group[k] for k in _spaced(len(group), _SHARED))
+    for i in standing:
         plant, core = field.plants[i], core_of(field.plants[i])
         units.append(
             CellData(
@@ -66,7 +71,7 @@ def _group_cell(
                 D=plant.D[core.fed],
                 E=factor * plant.E[core.fed],
                 H=plant.H[: plant.offers, core.fed],
-                intake=field.strengths[field.takes(i)] @ z,
+                intake=field.arriving(i, z),
                 limit=plant.limit[core.inputs],
                 size=np.ones(plant.offers),
                 slowest=max(field.slowest, 1e-6),
@@ -76,14 +81,30 @@ def _group_cell(
     try:
         if len(units) > 1 and len({unit.B.shape for unit in units}) == 1:
             shared = best_shared(units)
-            return None if shared is None else (shared.K, shared.sizes)
+            return None if shared is None else (shared.K, _all_sizes(field, group, standing, shared.sizes))
         answers = [best_cell(unit) for unit in units]
     except (InputError, np.linalg.LinAlgError):
         return None
     if any(answer is None for answer in answers):
         return None
     sizes = tuple(answer.sizes for answer in answers if answer is not None)
-    return answers[0].K if answers[0] is not None else np.zeros((0, 0)), sizes
+    by_state = answers[0].K if answers[0] is not None else np.zeros((0, 0))
+    return by_state, _all_sizes(field, group, standing, sizes)
+
+
+def _spaced(count: int, wanted: int) -> list[int]:
+    return [int(k) for k in np.unique(np.linspace(0, count - 1, wanted).round())]
+
+
+def _all_sizes(
+    field: Field, group: tuple[int, ...], standing: tuple[int, ...], sizes: tuple[Array, ...]
+) -> tuple[Array, ...]:
+    """Sizes of every plant of the group, from those of the plants that were solved."""
+    known = dict(zip(standing, sizes, strict=True))
+    most: dict[int, Array] = {}
+    for size in sizes:
+        most[len(size)] = np.maximum(size, most.get(len(size), np.zeros(len(size))))
+    return tuple(known[i] if i in known else most.get(field.plants[i].offers, np.ones(1)) for i in group)
 
 
 def riccati_starts(field: Field) -> list[tuple[Array, ...]]:

@@ -13,6 +13,7 @@ if TYPE_CHECKING:
     from synth.local.designing import Design
 
 
+MOST_SHOWN = 8  # kinds in a text; the rest is in the JSON document
 _AIMS = {
     "radius": "the radius",
     "effort": "the guaranteed peak of the actuators",
@@ -27,10 +28,12 @@ def explanation(design: Design) -> str:
         lines.append(f"The radius lies between {_ends(design.lower, design.upper)}; the target is {design.target:g}.")
     else:
         lines.append("With these gains a closed unit does not settle, so there is no finite radius.")
-    if design.reached:
+    still = not design.broken and design.upper <= design.target
+    if still:
         lines.append("The target is reached and every limit holds.")
-        least = f"Of the gains within the limits these make {_AIMS[design.aim]} least,"
-        lines.append(f"{least} as far as the search could tell.")
+        if design.sampled is None or not design.sampled.searched:
+            least = f"Of the gains within the limits these make {_AIMS[design.aim]} least,"
+            lines.append(f"{least} as far as the search could tell.")
         near = [p for p in design.peaks if p.limit and p.value > 0.98 * float(p.limit)]
         lines.extend(f"{p.kind}.{p.signal} uses {p.value / float(p.limit or 1):.1%} of its limit." for p in near)
     lines.extend(f"Not kept: {broken.sentence}." for broken in design.broken)
@@ -40,7 +43,9 @@ def explanation(design: Design) -> str:
         for p in design.aimed
     )
     if design.aim != design.network.goal.aim:
-        lines.append("The radius was made least, not what the aim names, because the target is out of reach.")
+        sampled = design.sampled is not None and design.sampled.searched
+        why = "the sampled units needed gains of their own" if sampled else "the target is out of reach"
+        lines.append(f"The radius was made least, not what the aim names, because {why}.")
     if design.blocking is not None:
         lines.append(design.blocking.sentence)
         for curve in design.blocking.curves:
@@ -51,6 +56,8 @@ def explanation(design: Design) -> str:
                 for value, radius, kept in curve.points
             )
             lines.append(f"Smallest radius met over {where} ({curve.unit}): {points}.")
+    if design.sampled is not None:
+        lines.append(design.sampled.sentence())
     return "\n".join(lines)
 
 
@@ -87,10 +94,12 @@ def document(design: Design) -> dict[str, object]:
         "aimed": [
             {
                 "kind": p.kind, "role": p.role, "signal": p.signal, "in": p.unit, "guaranteed": _plain(p.guaranteed),
-                "nominal": _plain(p.nominal), "limit": None if p.limit is None else float(p.limit),
+                "nominal": None if p.nominal is None else _plain(p.nominal),
+                "limit": None if p.limit is None else float(p.limit),
             }
             for p in design.aimed
         ],
+        "sampled": None if design.sampled is None else design.sampled.as_json(),
         "history": list(design.history),
         "provenance": design.provenance.as_dict(),
         "cautions": list(CAUTIONS),
@@ -100,7 +109,10 @@ def document(design: Design) -> dict[str, object]:
 def tables(design: Design) -> str:
     """Gains, modes and peaks as text tables with units, then the explanation and the cautions."""
     lines = [design.network.title, "", "Gains, u = K y", *_gains(design), "", "Modes of the closed units (1/s)"]
+    kinds = _shown(design)
     for kind, modes in zip(design.network.kinds, design.modes, strict=True):
+        if kind.name not in kinds:
+            continue
         shown = ", ".join(_mode(v) for v in sorted(modes, key=lambda v: (-v.real, v.imag)) if v.imag >= 0)
         lines.append(f"  {kind.name}: {shown}")
     lines.extend(("", "Guaranteed peaks under the declared disturbances, from rest", *_peaks(design), ""))
@@ -110,17 +122,39 @@ def tables(design: Design) -> str:
 
 def _gains(design: Design) -> list[str]:
     rows: list[tuple[str, ...]] = [("kind", "actuator", "signal", "gain", "unit")]
+    kinds = _shown(design)
     for kind, gain_set in zip(design.network.kinds, design.gains.sets, strict=True):
+        if kind.name not in kinds:
+            continue
         for i, actuator in enumerate(kind.inputs):
             for j, sensor in enumerate(kind.sensors):
                 unit = f"({actuator.unit})/({sensor.unit})"
                 rows.append((kind.name, actuator.name, sensor.name, decimal(gain_set.K[i, j]), unit))
-    return _aligned(rows)
+    lines = _aligned(rows)
+    left_out = len(design.network.kinds) - len(kinds)
+    if left_out:
+        sets = len(design.network.gain_groups())
+        lines.append(
+            f"  {len(design.network.kinds)} different units with {sets} gain set{'s' if sets > 1 else ''}; "
+            f"{left_out} of them are not shown (all are with --json and in the gain table)"
+        )
+    return lines
+
+
+def _shown(design: Design) -> frozenset[str]:
+    """The kinds that a text shows: all if they are few, else the first of each gain set, and of these the first few."""
+    kinds = [kind.name for kind in design.network.kinds]
+    if len(kinds) > MOST_SHOWN:
+        kinds = [names[0] for names in design.network.gain_groups().values()][:MOST_SHOWN]
+    return frozenset(kinds)
 
 
 def _peaks(design: Design) -> list[str]:
     rows: list[tuple[str, ...]] = [("kind", "signal", "role", "peak", "limit", "unit")]
+    kinds = _shown(design)
     for p in design.peaks:
+        if p.kind not in kinds:
+            continue
         limit = "none" if p.limit is None else f"{float(p.limit):g}"
         rows.append((p.kind, p.signal, p.role, f"{p.value:.4g}", limit, p.unit))
     return _aligned(rows)
@@ -163,6 +197,8 @@ def _ends(lower: float, upper: float) -> str:
 
 
 def _nominal(peak: AimedPeak) -> str:
+    if peak.nominal is None:
+        return "not estimated"
     return f"about {peak.nominal:.4g} {peak.unit}" if math.isfinite(peak.nominal) else "without bound"
 
 

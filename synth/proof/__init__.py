@@ -10,19 +10,23 @@ from importlib import import_module
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from synth.network.rounding import Rounding as Rounding
     from synth.proof.build import prove as prove
     from synth.proof.certificate import Certificate as Certificate
     from synth.proof.certificate import Verification as Verification
     from synth.proof.certificate import verify as verify
-    from synth.proof.firmware import Rounding as Rounding
     from synth.proof.firmware import prove_firmware as prove_firmware
+    from synth.proof.hop_statement import HopStatement as HopStatement
+    from synth.proof.hop_statement import prove_hop as prove_hop
 
 _HOMES = {
     "Certificate": "certificate",
+    "HopStatement": "hop_statement",
     "Rounding": "firmware",
     "Verification": "certificate",
     "prove": "build",
     "prove_firmware": "firmware",
+    "prove_hop": "hop_statement",
     "verify": "certificate",
 }
 

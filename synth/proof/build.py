@@ -6,6 +6,7 @@ gains in them are compared with enclosures from ball arithmetic (synth.gain): tw
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import replace
 from fractions import Fraction
 from typing import Any
@@ -16,16 +17,22 @@ from numpy.typing import NDArray
 from synth.base.errors import InputError, SolverFailure
 from synth.base.progress import Listener, silent
 from synth.base.provenance import Provenance
-from synth.gain.closed import ClosedUnit, close_network
+from synth.gain.closed import ClosedUnit, close_plan
+from synth.gain.descriptions import across, plan_of, settled_cells, shortest_string
 from synth.gain.peak import PeakGain
 from synth.gain.unit import state_peaks
 from synth.network.gains import Gains
-from synth.network.model import Network, need_fixed_pattern
+from synth.network.model import Network
 from synth.proof import check, peak, storage
 from synth.proof.certificate import Certificate, RadiusClaim, from_document
-from synth.proof.numbers import decimal_down, decimal_up
+from synth.proof.numbers import decimal_down, decimal_up, dyadic
+from synth.proof.points import PeakRows, Terms, low_point, radius_and_point
 
 ROUTES = ("auto", "peak", "storage", "firmware")
+Closed = dict[tuple[str, check.Own], ClosedUnit]  # by kind and what is folded in
+_MOST_STATIONS = 1500  # of a system with windows: beyond this they stop growing
+_MOST_REASONS = 10
+_NEAR = 0.05  # where the target is reached, windows grow no more once both bounds are as near as that
 
 
 def prove(
@@ -47,7 +54,10 @@ def prove(
     says why. Raises InputError for an unknown route, target or gains that do not fit, SolverFailure if the two
     programs disagree.
     """
-    need_fixed_pattern(network, "the proof")
+    if not isinstance(network, Network):
+        raise InputError(
+            f"the proof needs a network, not {type(network).__name__}; read a problem file first: synth.read(path)."
+        )
     if route not in ROUTES:
         raise InputError(f"route {route!r} is not known; use one of {', '.join(ROUTES)}.")
     if route == "firmware":
@@ -58,16 +68,17 @@ def prove(
     if not 0 < goal < 1:
         raise InputError(f"the target {float(goal):g} must lie strictly between 0 and 1.")
     gains = _gains(network, design_or_gains)
-    try:
-        closed = close_network(network, gains)
-    except ValueError as error:
-        raise InputError(f"{error}; offer the signal without feed-through or make the link absolute.") from error
-    unstable = [unit for unit in closed if not peak.decay(unit.A) > 0]
+    plan = plan_of(network)
+    closed = {
+        (plan.kinds[spec.kind].name, spec.own): unit
+        for spec, unit in zip(plan.specs, close_plan(plan, gains), strict=True)
+    }
+    unstable = {key: unit for key, unit in closed.items() if not peak.decay(unit.A) > 0}
     if unstable:
         reasons = tuple(
             f"the closed unit {unit.kind.name} is not stable: its rightmost mode is {-peak.decay(unit.A):.4g} 1/s; "
             "choose gains that make every mode decay"
-            for unit in unstable
+            for unit in list(unstable.values())[:_MOST_REASONS]
         )
         return _nothing("peak" if route == "auto" else route, goal, *reasons)
     tried: list[Certificate] = []
@@ -98,22 +109,23 @@ def _both(tried: list[Certificate]) -> Certificate:
 
 
 def _attempt(
-    network: Network,
-    gains: Gains,
-    closed: tuple[ClosedUnit, ...],
-    route: str,
-    goal: Fraction,
-    width: float,
-    progress: Listener,
+    network: Network, gains: Gains, closed: Closed, route: str, goal: Fraction, width: float, progress: Listener
 ) -> Certificate:
     """One route to the end: evidence, derived numbers, document, verdict of the checker."""
     document = _frame(network, gains, route, goal, width)
     measure = _remembering()
     try:
-        if route == "peak":
-            obstacle = _peak_evidence(document, network, closed, progress, measure)
-        else:
-            obstacle = storage.fill_evidence(document, network, closed, progress)
+        obstacle: str | None = None
+        for windows in windows_for(network):
+            document |= {"windows": windows} if windows else {}
+            system = check.read_system(document)
+            _same_units(system, closed)
+            if route == "peak":
+                obstacle = _peak_evidence(document, system, closed, progress, measure)
+            else:
+                obstacle = storage.fill_evidence(document, system, progress)
+            if _close_enough(document, system, obstacle):
+                break
         if obstacle is not None:
             low, high = document["radius"]["lower"], document["radius"]["upper"]
             found = RadiusClaim(float(low), float(high))
@@ -130,6 +142,40 @@ def _attempt(
     return from_document(document, check.check_document(document))
 
 
+def windows_for(network: Network) -> Iterator[dict[str, int]]:
+    """Sizes of the windows at the edges of a pattern, from small to large; for other descriptions one empty answer."""
+    if network.description != "edge pattern":
+        yield {}
+        return
+    line = across(network)
+    sizes = {edge.side: settled_cells(line, edge) for edge in line.edges}
+    while True:
+        both = {"least": shortest_string(line)} if len(sizes) == 2 else {}
+        yield sizes | both
+        sizes = {side: 2 * size for side, size in sizes.items()}
+
+
+def _close_enough(document: dict[str, Any], system: check.System, obstacle: str | None) -> bool:
+    """Whether larger windows are not worth trying: there are none, both bounds meet, or the system is large."""
+    low, high, target = (
+        float(v) for v in (*(document["radius"][k] for k in ("lower", "upper")), Fraction(document["target"]))
+    )
+    met = high <= low * (1 + 1e-3) + 1e-9 or low > target
+    done = met or (obstacle is None and high <= low * (1 + _NEAR))
+    return "windows" not in document or done or len(system.stations) > _MOST_STATIONS
+
+
+def _same_units(system: check.System, closed: Closed) -> None:
+    """Both programs must work out the same units from the description; SolverFailure if they do not."""
+    for unit in system.units:
+        known = closed.get((unit.name, unit.own))
+        if known is None or [list(row) for row in known.A.rows] != unit.A:
+            raise SolverFailure(
+                f"two programs disagree about what is folded into {unit.name}; nothing is claimed. Please report this "
+                "network."
+            )
+
+
 def _nothing(route: str, goal: Fraction, *reasons: str) -> Certificate:
     """Nothing proven, nothing known about the radius."""
     return Certificate(False, route, "", RadiusClaim(0.0, float("inf")), float(goal), reasons=reasons)
@@ -137,10 +183,10 @@ def _nothing(route: str, goal: Fraction, *reasons: str) -> Certificate:
 
 def _remembering() -> check.Measure:
     """check.unit_gains, each answer computed once; the final check computes everything anew."""
-    known: dict[tuple[str, Fraction], check.Gains] = {}
+    known: dict[tuple[str, check.Own, Fraction, str], check.Gains] = {}
 
     def measure(unit: check.Unit, evidence: check.Evidence, alpha: Fraction) -> check.Gains:
-        key = (unit.name, alpha)
+        key = (unit.name, unit.own, alpha, str(evidence.a))
         if key not in known:
             known[key] = check.unit_gains(unit, evidence, alpha)
         return known[key]
@@ -150,19 +196,20 @@ def _remembering() -> check.Measure:
 
 def _frame(network: Network, gains: Gains, route: str, goal: Fraction, width: float) -> dict[str, Any]:
     """A document with everything that is given, and nothing claimed yet."""
+    model: dict[str, Any] = dict(network.model_document())
     return {
         "schema": check.SCHEMA,
         "version": check.VERSION,
         "network_hash": network.hash,
-        "model": network.model_document(),
+        "model": model,
         "gains": [
             {
-                "kind": kind.name,
-                "actuators": list(gains[kind.name].actuators),
-                "signals": list(gains[kind.name].signals),
-                "K": gains[kind.name].K.texts(),
+                "kind": kind["name"],
+                "actuators": list(gains[kind["name"]].actuators),
+                "signals": list(gains[kind["name"]].signals),
+                "K": gains[kind["name"]].K.texts(),
             }
-            for kind in network.kinds
+            for kind in model["kinds"]
         ],
         "route": route,
         "target": str(goal),
@@ -175,39 +222,69 @@ def _frame(network: Network, gains: Gains, route: str, goal: Fraction, width: fl
 
 
 def _peak_evidence(
-    document: dict[str, Any],
-    network: Network,
-    closed: tuple[ClosedUnit, ...],
-    progress: Listener,
-    measure: check.Measure,
+    document: dict[str, Any], system: check.System, closed: Closed, progress: Listener, measure: check.Measure
 ) -> str | None:
-    """Fill in evidence, point and rate of the peak route; returns a sentence if the target is out of reach."""
-    alpha = peak.choose_rate(closed, network.links)
+    """Fill in evidence, points and rate of the peak route; returns a sentence if the target is out of reach."""
+    terms = Terms(system)
+    units = [closed[unit.name, unit.own] for unit in system.units]
+    alpha = peak.choose_rate(units, terms)
     if not alpha > 0:
-        alpha = Fraction(1, 1000) * Fraction(min(peak.decay(unit.A) for unit in closed))
+        alpha = Fraction(1, 1000) * Fraction(min(peak.decay(unit.A) for unit in units))
     evidence = []
-    for unit in closed:
+    for unit, spec in zip(units, system.units, strict=True):
         slowest = Fraction(peak.decay(unit.A))
         a = Fraction(decimal_down(alpha + (slowest - alpha) * Fraction(3, 4), 5))
         P = peak.decaying_norm(unit.A, a)
-        evidence.append({"kind": unit.kind.name, "P": P.texts(), "a": str(a), "tau": [], "tau_w": []})
+        own = storage.own_document(spec, [offer.name for offer in unit.kind.offers])
+        evidence.append({"kind": spec.name, "own": own, "P": P.texts(), "a": str(a), "tau": [], "tau_w": []})
     document["evidence"] = evidence
     document["constants"]["alpha"] = decimal_down(alpha, 12)
     progress("enclosing every peak gain")
-    units, links = check.read_model(document)
-    plain = [measure(u, e, Fraction(0)) for u, e in zip(units, check.read_evidence(document, units), strict=True)]
-    _agree(closed, plain, document["provenance"]["settings"]["width"])
-    low, high = check.operators(units, links, plain)
-    M_low, M = (
-        np.array([[float(v) for v in row] for row in side]).reshape(len(side), len(side)) for side in (low, high)
-    )
-    names = [f"{unit.name}.{line.signal}" for unit in units for line in unit.lines if line.role == "offer"]
-    points = zip(names, peak.point_above(M), peak.point_below(M_low), strict=True)
-    document["point"] = [{"of": name, "s": str(s), "low": str(v)} for name, s, v in points]
-    s, v = check.read_point(document, names)
-    upper = max((a / b for a, b in zip(check.apply(high, s), s, strict=True)), default=Fraction(0))
-    document["radius"] = {"lower": decimal_down(check.least(check.apply(low, v), v)), "upper": decimal_up(upper)}
+    read = check.read_evidence(document, system.units)
+    plain = [measure(u, e, Fraction(0)) for u, e in zip(system.units, read, strict=True)]
+    _agree(units, plain, document["provenance"]["settings"]["width"])
+    fast: list[check.Gains] = []
+    if not system.exact:
+        rate = Fraction(document["constants"]["alpha"])
+        fast = [measure(check.slim(u), e, rate) for u, e in zip(system.units, read, strict=True)]
+    _peak_points(document, system, terms, plain, fast)
     return out_of_reach(document)
+
+
+def _peak_points(
+    document: dict[str, Any],
+    system: check.System,
+    terms: Terms,
+    plain: list[check.Gains],
+    fast: list[check.Gains],
+) -> None:
+    """The points, and the radius they give exactly."""
+    offers = [unit.offers for unit in system.units]
+    widths = [len(unit.takes) for unit in system.units]
+
+    def table(side: list[check.Matrix]) -> list[NDArray[np.float64]]:
+        return [_floats(rows[:n], width) for rows, n, width in zip(side, offers, widths, strict=True)]
+
+    _, s = radius_and_point(PeakRows(terms, table([g.take for g in plain])))
+    low = np.zeros(len(s))
+    for block in storage.blocks_of(system):
+        part = Terms(system, block)
+        place = np.concatenate([np.arange(terms.first[i], terms.first[i + 1]) for i in part.stations.tolist()])
+        low[place] = low_point(PeakRows(part, table([g.take_low for g in plain])))[1]
+    numbers = [s.tolist(), low.tolist()]
+    if fast:
+        alpha = float(Fraction(document["constants"]["alpha"]))
+        numbers.append(radius_and_point(PeakRows(terms, table([g.take for g in fast]), alpha))[1].tolist())
+    keys = ("s", "low", "fast")[: len(numbers)]
+    document["point"] = [
+        {"of": name, **{key: str(dyadic(v) if v else Fraction(0)) for key, v in zip(keys, values, strict=True)}}
+        for name, *values in zip(check.peak_names(system), *numbers, strict=True)
+    ]
+    operator = check.PeakOperator(system, plain)
+    exact_s, exact_low, *_ = check.read_point(document, check.peak_names(system), bool(fast))
+    images = zip(operator.image(exact_s), exact_s, strict=True)
+    upper = max((a / b for a, b in images), default=Fraction(0))
+    document["radius"] = {"lower": decimal_down(operator.lower(exact_low)), "upper": decimal_up(upper)}
 
 
 def out_of_reach(document: dict[str, Any]) -> str | None:
@@ -221,7 +298,7 @@ def out_of_reach(document: dict[str, Any]) -> str | None:
     )
 
 
-def _agree(closed: tuple[ClosedUnit, ...], found: list[check.Gains], width: float) -> None:
+def _agree(closed: list[ClosedUnit], found: list[check.Gains], width: float) -> None:
     """Compare all unweighted numbers of the checker with ball arithmetic; SolverFailure if any pair is disjoint."""
     for unit, gains in zip(closed, found, strict=True):
         known = state_peaks(unit, width=width)

@@ -2,15 +2,19 @@
 
 The file is one JSON object with exactly these fields (numbers are exact texts, decimal or p/q, in the declared units):
 
-    schema, version   "localgain certificate", 1
+    schema, version   "localgain certificate", 2
     network_hash      SHA-256 of the canonical form of ``model``
-    model             Network.model_document(): kinds with A B D E C N H F Fw, limits, bands, declared peaks; links
+    model             Network.model_document(): kinds with A B D E C N H F Fw, limits, bands, declared peaks; links; and
+                      rules, members, or edges and cell, by description
     gains             per kind {kind, actuators, signals, K}: u = K y
     route, target     "peak", "storage" or "firmware"; the radius that must not be exceeded
-    evidence          per kind {kind, P, a, tau, tau_w}: a norm, its decay (1/s), multipliers (storage route only);
+    evidence          per closed unit {kind, own, P, a, tau, tau_w}: what is folded in, a norm, its decay (1/s),
+                      multipliers (storage route only);
                       firmware route: {kind, P, gamma}, a norm that the transition over one period contracts
     radius            {lower, upper} of the gain operator
-    point             per row {of, s, low}: of is kind.offer or (storage) kind; G s <= upper s, G low >= lower low
+    point             per row {of, s, low}, and fast where needed: of is kind.offer, unit.offer, or (storage) kind or
+                      unit; G s <= upper s, G low >= lower low, fast decays at the claimed rate
+    windows           edges only: {first, last, least}, cells of the windows and the shortest line covered
     constants         {C, alpha, G, norm}: |x(t)| <= C e^(-alpha t) X0 + G sup|w|
     peaks             per offer, state, actuator {kind, role, signal, value, in, limit}, under the declared disturbances
     validity          {X0, w, factor, meaning}; "inf" where no limit is near

@@ -44,10 +44,10 @@ NORM = (
 class Numbers:
     """Peak gains of one unit: line by take (low, up), by disturbance, by rounding (summed), by initial size."""
 
-    def __init__(self, one: Flashed, P: Matrix, gamma: Fraction, alpha: Fraction) -> None:
-        """Bound everything; with a rate only what the decay needs."""
+    def __init__(self, one: Flashed, P: Matrix, gamma: Fraction, alpha: Fraction, loose: bool = False) -> None:
+        """Bound everything; with a rate only what the decay needs. ``loose`` asks for less work, as with a rate."""
         loop = Sampled(one, P, gamma, alpha)
-        tight = LOOSE if alpha else TIGHT
+        tight = LOOSE if alpha or loose else TIGHT
         waves = [] if alpha else one.waves
         errors = [] if alpha else [(i, size) for i, size in one.errors if size]
         inlets = [(f"take {j}", x) for j, x in enumerate(one.takes)] + [(f"wave {j}", x) for j, x in enumerate(waves)]
@@ -245,7 +245,12 @@ def rounding_words(kind: dict[str, Any], model: dict[str, Any]) -> list[str]:
                 found.append(f"{kind['kind']}: {words} {signal['name']} rounded to multiples of {size} {signal['in']}")
     found += [
         f"{kind['kind']}: state {one['state']} kept in the firmware, advanced once per period by the period times its "
-        f"rate at the sample, rounded to multiples of {check.shown(one['quantum'])}"
+        f"rate at the sample, "
+        + (
+            f"rounded to multiples of {check.shown(one['quantum'])}"
+            if check.number(one["quantum"], "stored")
+            else "exactly"
+        )
         + (f"; errors of {one['integrates']} enter it" if one["integrates"] else "")
         for one in kind["stored"]
     ]

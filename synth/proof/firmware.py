@@ -10,7 +10,6 @@ from __future__ import annotations
 
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
 from fractions import Fraction
 from typing import Any
 
@@ -24,36 +23,21 @@ from synth.gain.peak import PeakGain
 from synth.gain.sampled import SampledUnit, sampled_peaks, sampled_unit
 from synth.gain.sampled_guide import sampled_peak_guide
 from synth.gain.sampled_loop import Floats
+from synth.gain.sampled_numbers import stored_gains
 from synth.network.gains import Gains
 from synth.network.model import Kind, Network, need_fixed_pattern
+from synth.network.rounding import Rounding
 from synth.proof import build, check, check_firmware, peak
 from synth.proof.certificate import Certificate, RadiusClaim, from_document
 from synth.proof.check_flashed import FORMS, Flashed, Matrix, Row, read_units
 from synth.proof.numbers import decimal_down, decimal_up
 
 
-@dataclass(frozen=True)
-class Rounding:
-    """What the firmware rounds; names are "kind.signal", distances of neighbouring numbers in the signal's unit.
-
-    ``sensors``: samples rounded to nearest; ``commands``: commands rounded to nearest; ``products``: every product of a
-    row of u = K y rounded to nearest (fixed point); ``stored``: states kept in the firmware (integrators), advanced
-    once per period and rounded to nearest (0: kept exactly); ``form``: "exact" (fixed point, apart from the above),
-    "single" or "double" precision sums. What is not named is not rounded.
-    """
-
-    sensors: Mapping[str, Number] = field(default_factory=dict)
-    commands: Mapping[str, Number] = field(default_factory=dict)
-    products: Mapping[str, Number] = field(default_factory=dict)
-    stored: Mapping[str, Number] = field(default_factory=dict)
-    form: str = "exact"
-
-
 def prove_firmware(
     network: Network,
     gains_as_flashed: Any,
     period: Number | None = None,
-    delay: Number = 0,
+    delay: Number | None = None,
     rounding: Rounding | None = None,
     jitter: Number = 0,
     target: Number | None = None,
@@ -62,8 +46,9 @@ def prove_firmware(
 ) -> Certificate:
     """Prove input-to-state stability of the sampled, rounded code for any number of units.
 
-    ``gains_as_flashed``: Gains or a Design, u = K y, taken digit for digit (see gains_as_flashed of synth.gain for
-    fixed point); ``period`` in s (default: the network's), ``delay`` from sample to command in s, 0 <= delay <= period;
+    ``gains_as_flashed``: Gains or a Design, u = K y, taken digit for digit (see stored_gains of synth.gain for words
+    and floating point); ``period`` in s, ``delay`` from sample to command in s, 0 <= delay <= period, and ``rounding``
+    (default: what the network's goal says; controller states that ``rounding.stored`` does not name are kept exactly);
     ``jitter``: this version proves fixed instants only and refuses a positive one; ``target``: the radius must not
     exceed it (default: the network's goal); ``width``: of the enclosures that the peak gains are compared with.
 
@@ -71,25 +56,19 @@ def prove_firmware(
     Raises InputError for wrong names, times and gains, SolverFailure if the two programs disagree.
     """
     need_fixed_pattern(network, "the proof of the code as flashed")
-    period = network.goal.period if period is None else period
-    if period is None:
-        raise InputError("no sample period is declared; write design.period in the problem file, for example 0.02 s.")
-    T, d = exact(period), exact(delay)
-    if not (T > 0 and 0 <= d <= T):
-        raise InputError(
-            f"the sample period must be above zero and the computation delay between zero and the period, not "
-            f"{float(T):g} s and {float(d):g} s."
-        )
+    T, d = _times(network, period, delay)
     if exact(jitter) != 0:
         raise InputError(
             f"a jitter of {float(exact(jitter)):g} s is declared; this version proves fixed sampling instants only, so "
             "leave it out and keep the instants by a hardware timer, or do not claim a proof as flashed."
         )
+    rounding = network.goal.rounding if rounding is None else rounding
     goal = Fraction(network.goal.target) if target is None else exact(target)
     if not 0 < goal < 1:
         raise InputError(f"the target {float(goal):g} must lie strictly between 0 and 1.")
     gains = build._gains(network, gains_as_flashed)
-    parts = _parts(network, rounding or Rounding())
+    parts = _parts(network, rounding)
+    _are_stored(gains, rounding)
     units = _units(network, gains, T, d, parts)
     unstable = [unit for unit in units if not _slowest(unit) > 0]
     if unstable:
@@ -97,6 +76,33 @@ def prove_firmware(
     document = build._frame(network, gains, "firmware", goal, width)
     document["firmware"] = {"period": str(T), "delay": str(d), "kinds": parts}
     return _attempt(document, network, units, goal, progress)
+
+
+def _times(network: Network, period: Number | None, delay: Number | None) -> tuple[Fraction, Fraction]:
+    """Period and computation delay in s: those given, else the network's."""
+    period = network.goal.period if period is None else period
+    if period is None:
+        raise InputError("no sample period is declared; write design.period in the problem file, for example 0.02 s.")
+    T, d = exact(period), exact(network.goal.computation_delay if delay is None else delay)
+    if not (T > 0 and 0 <= d <= T):
+        raise InputError(
+            f"the sample period must be above zero and the computation delay between zero and the period, not "
+            f"{float(T):g} s and {float(d):g} s."
+        )
+    return T, d
+
+
+def _are_stored(gains: Gains, rounding: Rounding) -> None:
+    """The proof is about stored numbers, so gains that the declared form cannot hold are refused."""
+    for one, kept in zip(gains.sets, stored_gains(gains, rounding).sets, strict=True):
+        for actuator, row, held in zip(one.actuators, one.K.rows, kept.K.rows, strict=True):
+            for signal, value, near in zip(one.signals, row, held, strict=True):
+                if value != near:
+                    words = f"{rounding.form} precision" if rounding.word is None else f"a word of {rounding.word} bits"
+                    raise InputError(
+                        f"the gain {one.kind}: {actuator} {signal} = {float(value):.17g} is no number of {words} (the "
+                        f"nearest is {float(near):.17g}); prove the gains as stored, as a fresh design writes them."
+                    )
 
 
 def _parts(network: Network, rounding: Rounding) -> list[dict[str, Any]]:
@@ -131,28 +137,30 @@ def _part(kind: Kind, rounding: Rounding) -> dict[str, Any]:
     controller = getattr(kind, "controller", None)
     integrals = {} if controller is None else dict(controller.integrals)
     stored = [s.name for s in kind.states if f"{kind.name}.{s.name}" in rounding.stored]
+    given = {name: exact(rounding.stored.get(f"{kind.name}.{name}", 0)) for name in stored}
+    sensors = dict(rounding.sensors)
     if controller is not None:
-        if controller.estimates:
+        if rounding.form != "exact" and controller.states:
             raise InputError(
-                f"kind {kind.name!r} has an estimator; the proof of the code as flashed takes integrals and memory."
+                f"kind {kind.name!r} keeps {', '.join(controller.states)} in the firmware; states stored in floating "
+                "point are not proven by this version, so store them in fixed point (form exact)."
             )
-        missing = [name for name in controller.states if name not in stored]
-        if missing:
-            raise InputError(
-                f"kind {kind.name!r} keeps {', '.join(missing)} in the firmware; name each in rounding.stored with the "
-                "distance of neighbouring stored numbers (0 for none)."
-            )
+        stored = [s.name for s in kind.states if s.name in stored or s.name in controller.states]
+        for name in controller.corrected:
+            # An innovation is computed from the rounded sample: its error counts once more, as if it were another one.
+            own, heard = (f"{kind.name}.{name}{end}" for end in ("_innovation", ""))
+            sensors[own] = max(exact(sensors.get(own, 0)), exact(sensors.get(heard, 0)))
     commands = [a.name for a in kind.inputs]
     return {
         "kind": kind.name,
-        "sensors": quanta([s.name for s in kind.sensors], rounding.sensors),
+        "sensors": quanta([s.name for s in kind.sensors], sensors),
         "commands": quanta(commands, rounding.commands),
         "products": quanta(commands, rounding.products),
         "form": rounding.form,
         "stored": [
             {
                 "state": name,
-                "quantum": str(exact(rounding.stored[f"{kind.name}.{name}"])),
+                "quantum": str(given.get(name, Fraction(0))),
                 "integrates": integrals.get(name),
             }
             for name in stored

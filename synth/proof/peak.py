@@ -16,12 +16,13 @@ from numpy.typing import NDArray
 from synth.base.exact import ExactMatrix
 from synth.gain.closed import ClosedUnit
 from synth.gain.guide import peak_gain_guide
-from synth.network.model import Link
 from synth.proof.numbers import decimal_down, dyadic
+from synth.proof.points import PeakRows, Terms, point_at, radius_and_point
 
 Array = NDArray[np.float64]
 _NEAREST = 0.9  # a claimed rate stays below this part of the slowest mode of every unit
 _BISECTIONS = 24
+_MANY = 50  # different units: beyond, the rate is found less finely
 
 
 def decay(A: ExactMatrix) -> float:
@@ -58,32 +59,6 @@ def rounded_norm(P: Array, scale: Array) -> ExactMatrix:
     return ExactMatrix.of([[grid[i][j] / exact[i] / exact[j] for j in range(size)] for i in range(size)], (size, size))
 
 
-def gain_matrix(closed: Sequence[ClosedUnit], links: Sequence[Link], alpha: float) -> Array | None:
-    """Estimate of M with every signal weighted by e^(alpha t) (theory (1), (4)); None if a weighted unit grows."""
-    place = {(unit.kind.name, offer.name): None for unit in closed for offer in unit.kind.offers}
-    names = list(place)
-    M = np.zeros((len(names), len(names)))
-    gains = {}
-    for unit in closed:
-        A = unit.A.floats() + alpha * np.eye(unit.A.shape[0])
-        guide = peak_gain_guide(A, unit.D.floats(), unit.H.floats(), unit.F.floats())
-        if guide is None or not np.all(np.isfinite(guide.gains)):
-            return None
-        gains[unit.kind.name] = guide.gains
-    for link in links:
-        column = names.index((link.source_kind, link.offer))
-        if (
-            alpha * float(link.delay) > 300
-        ):  # e^300: no rate worth claiming survives such a weight, and doubles end soon
-            return None
-        weight = abs(float(link.strength)) * np.exp(alpha * float(link.delay))
-        kind = next(unit.kind for unit in closed if unit.kind.name == link.kind)
-        for k, offer in enumerate(kind.offers):
-            p = gains[link.kind][k, kind.index("takes", link.take)]
-            M[names.index((link.kind, offer.name)), column] += p * weight
-    return M
-
-
 def radius_of(M: Array | None) -> float:
     """Spectral radius; infinity for None."""
     if M is None:
@@ -91,24 +66,45 @@ def radius_of(M: Array | None) -> float:
     return float(np.abs(np.linalg.eigvals(M)).max()) if len(M) else 0.0
 
 
-def choose_rate(closed: Sequence[ClosedUnit], links: Sequence[Link]) -> Fraction:
+def choose_rate(units: Sequence[ClosedUnit], terms: Terms) -> Fraction:
     """The rate alpha (1/s) to claim: the largest that leaves the weighted radius at most half-way from radius to one.
 
     A larger rate would be true too, but C contains 1/(1 - weighted radius) and would grow without bound. Never above
     nine tenths of the slowest mode. The rate is cut to three digits. Law: larger strengths never raise it.
+    ``units``: the closed units of the system that ``terms`` is about, by specification.
     """
-    slowest = min(decay(unit.A) for unit in closed)
-    allowed = (1 + radius_of(gain_matrix(closed, links, 0.0))) / 2
-    return bisect_rate(lambda alpha: radius_of(gain_matrix(closed, links, alpha)) <= allowed, _NEAREST * slowest)
+    slowest = min(decay(unit.A) for unit in units)
+    now = _weighted(units, terms, 0.0)
+    allowed = (1 + (float("inf") if now is None else radius_and_point(now, 1e-5)[0])) / 2
+
+    def holds(alpha: float) -> bool:
+        rows = _weighted(units, terms, alpha)
+        return rows is not None and (rows.size == 0 or point_at(rows, allowed) is not None)
+
+    few = len(units) > _MANY
+    return bisect_rate(holds, _NEAREST * slowest, _BISECTIONS // 3 if few else _BISECTIONS)
 
 
-def bisect_rate(allowed: Callable[[float], bool], most: float) -> Fraction:
+def _weighted(units: Sequence[ClosedUnit], terms: Terms, alpha: float) -> PeakRows | None:
+    """Estimate of the operator with every signal weighted by e^(alpha t) (theory (1), (4)); None if a unit grows."""
+    gains = []
+    for unit in units:
+        A = unit.A.floats() + alpha * np.eye(unit.A.shape[0])
+        guide = peak_gain_guide(A, unit.D.floats(), unit.H.floats(), unit.F.floats())
+        if guide is None or not np.all(np.isfinite(guide.gains)):
+            return None
+        gains.append(guide.gains)
+    rows = PeakRows(terms, gains, alpha)
+    return None if rows.weights is None else rows
+
+
+def bisect_rate(allowed: Callable[[float], bool], most: float, steps: int = 24) -> Fraction:
     """The largest rate up to ``most`` that is allowed, cut to three digits (``allowed`` must be falling)."""
     low, high = 0.0, most
     if allowed(most):
         low = most
     else:
-        for _ in range(_BISECTIONS):
+        for _ in range(steps):
             middle = (low + high) / 2
             low, high = (middle, high) if allowed(middle) else (low, middle)
     return Fraction(decimal_down(Fraction(low), 3))

@@ -21,6 +21,7 @@ KEYS = {
     },
     "margin": {"proven_factor", "class_limit", "exact", "route", "links", "bottleneck", "smallest_gap"},
     "simulation": {"units", "duration", "violations", "worst", "measures"},
+    "as_flashed": {"proven", "reason", "longest_period", "proof", "timing"},
     "handoff": {"bundle", "files", "proven", "scaling"},
 }  # fmt: skip
 
@@ -86,10 +87,20 @@ def test_certificate_is_verified_alone_and_for_its_network_only(convoy_run: Run,
 
 def test_shipped_checker_needs_only_a_bare_python(convoy_run: Run) -> None:
     bundle = convoy_run[1] / "bundle"
-    good = subprocess.run(
-        [sys.executable, "-I", "-S", "check.py", "certificate.json"], cwd=bundle, capture_output=True, text=True
-    )
-    assert good.returncode == 0, good.stdout + good.stderr
+    for command in (["check.py", "certificate_continuous.json"], ["check_firmware.py", "certificate.json"]):
+        good = subprocess.run([sys.executable, "-S", *command], cwd=bundle, capture_output=True, text=True)
+        assert good.returncode == 0, good.stdout + good.stderr
+
+
+def test_run_proves_the_code_as_flashed_with_room_in_time(convoy_run: Run) -> None:
+    document = convoy_run[0].document
+    flashed, handed = document["as_flashed"], document["handoff"]
+    assert flashed["proven"] is True and handed["proven"] is True and handed["proven_continuous"] is True
+    assert document["proof"]["radius"]["upper"] <= flashed["proof"]["radius"]["upper"] <= document["design"]["target"]
+    assert document["design"]["sampled"]["reached"] is True
+    longest = {row["quantity"]: row["longest_proven_s"] for row in flashed["timing"]["rows"]}
+    assert longest["sample period"] > 10 * 0.02
+    assert (convoy_run[1] / "certificate_as_flashed.json").is_file()
 
 
 def test_gains_in_service_can_be_proven_from_the_table(convoy_run: Run) -> None:
@@ -195,7 +206,7 @@ def test_shipped_checker_notices_a_table_that_is_not_the_proven_one(convoy_run: 
 
     def checked() -> subprocess.CompletedProcess[str]:
         return subprocess.run(
-            [sys.executable, "-I", "-S", "check.py", "certificate.json"],
+            [sys.executable, "-S", "check_firmware.py", "certificate.json"],
             cwd=tmp_path / "bundle",
             capture_output=True,
             text=True,

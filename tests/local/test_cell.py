@@ -29,7 +29,7 @@ def convoy_data(size: float = 0.1) -> CellData:
     """The convoy's unit whose neighbours promise the given size."""
     field = field_of(convoy())
     plant = field.plants[0]
-    intake = field.strengths.sum(axis=1) * size
+    intake = field.arriving(0, np.full(field.intake.size, size))
     return CellData(
         plant.A, plant.B, plant.D, plant.E, plant.H, intake, plant.limit, np.ones(1), field.slowest, field.fastest
     )

@@ -11,7 +11,7 @@ from scipy.optimize import differential_evolution
 
 from synth.base.errors import InputError
 from synth.gain import hop_gains, peak_to_peak_gain
-from synth.local.hop_design import hop_design, time_gap
+from synth.local.hop_designing import hop_design, time_gap
 from synth.network.model import Goal, Signal
 from tests.gain.strings import M, string
 

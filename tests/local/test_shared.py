@@ -86,7 +86,7 @@ def test_one_q_for_both_is_an_answer_for_each() -> None:
 
     field = field_of(two_carts())
     units = [
-        CellData(p.A, p.B, p.D, p.E, p.H[:1], field.strengths[field.takes(i)].sum(axis=1) * 0.05, p.limit,
+        CellData(p.A, p.B, p.D, p.E, p.H[:1], field.arriving(i, np.full(field.intake.size, 0.05)), p.limit,
                  np.ones(1), field.slowest, field.fastest)
         for i, p in enumerate(field.plants)
     ]  # fmt: skip

@@ -20,11 +20,13 @@ from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.network.gains import Gains, gain_set
 from synth.proof import Certificate, check, prove, verify
+from synth.proof.joined import PARTS as PARTS_IN_ORDER
+from synth.proof.joined import checker_text
 from tests.build import M, convoy, convoy_gains
 from tests.proof.networks import chain, passing, tanks
 from tests.proof.truth import is_true, peak_numbers, storage_numbers
 
-CHECKER = Path(check.__file__)
+PARTS = Path(check.__file__).parent / "checking"
 
 
 @cache
@@ -41,7 +43,9 @@ def test_convoy_is_proven_and_verified_by_the_checker_alone(route, tmp_path):
     assert certificate.route == ("peak" if route == "auto" else route)
     path = certificate.save(tmp_path / "certificate.json")
     assert verify(path).as_json() == {"verified": True, "reasons": []}
-    run = subprocess.run([sys.executable, "-I", str(CHECKER), str(path)], capture_output=True, text=True, check=False)
+    checker = tmp_path / "check.py"
+    checker.write_text(checker_text(), encoding="utf-8")
+    run = subprocess.run([sys.executable, "-I", str(checker), str(path)], capture_output=True, text=True, check=False)
     assert run.returncode == 0 and run.stdout.startswith("verified"), run.stdout + run.stderr
     assert is_true(certificate.document)
 
@@ -58,7 +62,7 @@ def test_checker_exit_codes(tmp_path):
 
 
 def test_checker_imports_only_the_standard_library():
-    tree = ast.parse(CHECKER.read_text(encoding="utf-8"))
+    tree = ast.parse(checker_text())
     names = set()
     for node in ast.walk(tree):
         if isinstance(node, ast.Import):
@@ -67,7 +71,22 @@ def test_checker_imports_only_the_standard_library():
             assert node.level == 0
             names.add((node.module or "").split(".")[0])
     assert names and names <= set(sys.stdlib_module_names)
-    assert "float(" not in CHECKER.read_text().split("# ------", 6)[2], "the arithmetic part uses no floats"
+    for part in ("arithmetic", "flow", "peak_route", "storage_route", "wiring", "edges", "units", "evidence"):
+        assert "float(" not in (PARTS / f"{part}.py").read_text(), f"{part} uses no floats"
+
+
+def test_no_name_is_defined_by_two_parts():
+    """The parts are joined into one file, where a second definition would silently replace the first."""
+    assert {path.stem for path in PARTS.glob("*.py")} == {*PARTS_IN_ORDER, "__init__"}
+    known: dict[str, str] = {}
+    for part in PARTS_IN_ORDER:
+        for node in ast.parse((PARTS / f"{part}.py").read_text(encoding="utf-8")).body:
+            names = [node.name] if isinstance(node, ast.FunctionDef | ast.ClassDef) else []
+            if isinstance(node, ast.Assign):
+                names = [n.id for t in node.targets for n in ast.walk(t) if isinstance(n, ast.Name)]
+            for name in names:
+                assert known.setdefault(name, part) == part, name
+    assert checker_text() == checker_text()
 
 
 def test_cautions_have_one_wording():
@@ -79,11 +98,11 @@ def test_every_number_agrees_with_a_second_evaluation(route, numbers):
     certificate = proven("tanks", route)
     assert certificate.proven, certificate.reasons
     found = numbers(certificate.document)
-    peaks = [float(v) for part in found["base"] for v in part]
+    peaks = [float(v) for part in found["base"].values() for v in part]
     assert [peak.value for peak in certificate.peaks] == pytest.approx(peaks, rel=1e-3)
     states = [
-        part[unit["offers"] : unit["offers"] + unit["states"]]
-        for part, unit in zip(found["unit"], found["model"].units, strict=True)
+        found["unit"][k][unit["offers"] : unit["offers"] + unit["states"]]
+        for k, unit in enumerate(found["model"].units)
     ]
     assert pytest.approx(max(float(part.max()) for part in states), rel=1e-3) == certificate.constants.G
     assert is_true(certificate.document)

@@ -6,22 +6,20 @@ import contextlib
 import copy
 import json
 import random
-import shutil
 import subprocess
 import sys
 from dataclasses import replace
 from fractions import Fraction
-from pathlib import Path
 
 import numpy as np
 import pytest
 import scipy.linalg
 
-import synth.proof
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.gain.sampled import _enclosed, sampled_peaks, sampled_unit
 from synth.gain.sampled_sup import Inlet, Outlet
+from synth.handoff.bundle import checker_text
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Actuator, Link, Network, Signal
 from synth.proof import check, check_firmware, verify
@@ -149,7 +147,7 @@ def test_missing_and_extra_fields_are_refused(proven):
 def test_the_checker_stands_alone(proven, tmp_path):
     """Four files and a Python standard library: verified; a changed byte is not."""
     for name in FILES:
-        shutil.copy(Path(synth.proof.__file__).parent / name, tmp_path / name)
+        (tmp_path / name).write_text(checker_text(name), encoding="utf-8")
     saved = proven.save(tmp_path / "certificate.json")
 
     def run():
