@@ -62,7 +62,7 @@ def refuse_joining(*networks: Network) -> None:
 
 def check(network: Network, as_json: bool, out: Path | None) -> NoReturn:
     """Explain the network, its obstruction, and what is asked for; exit 0 if the network is a string."""
-    from synth.gain.hop_network import hop_loops
+    from synth.gain.strings.hop_network import hop_loops
     from synth.local.hop_task import HopTask
     from synth.network import describe
     from synth.proof.hop_statement import wish_of

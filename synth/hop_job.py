@@ -45,7 +45,7 @@ def design_hop(network: Network, seed: int = 0, progress: Listener = silent) -> 
 
 def growth_of(statement: Any, vehicles: int = _GROWTH) -> Any:
     """Growth with length of what was proven, or None where it cannot be worked out."""
-    from synth.gain.hop_length import hop_growth
+    from synth.gain.strings.hop_length import hop_growth
 
     if statement.hops is None:
         return None

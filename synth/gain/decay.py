@@ -13,10 +13,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from synth.base.errors import InputError
-from synth.gain.certify import lies_below
 from synth.gain.operator import MAX, SQUARE, Floats, GainOperator
-from synth.gain.points import Exponents
 from synth.gain.radius import Radius
+from synth.gain.solving.certify import lies_below
+from synth.gain.solving.points import Exponents
 
 FORMS = ("auto", "sum", "max", "root_sum_square")
 _MOST_TERMS = 20_000

@@ -25,7 +25,6 @@ from scipy.sparse import csc_array, eye_array
 from scipy.sparse.linalg import splu
 
 from synth.gain.assembly import Assembly, PeakTable, assemble_plan
-from synth.gain.certify import row_bounds
 from synth.gain.descriptions import (
     reach_of,
     section_wiring,
@@ -36,7 +35,8 @@ from synth.gain.descriptions import (
 )
 from synth.gain.operator import GainOperator
 from synth.gain.plan import Floats, plan_of_units
-from synth.gain.points import Exponents, plain
+from synth.gain.solving.certify import row_bounds
+from synth.gain.solving.points import Exponents, plain
 from synth.network.layout import Edge
 from synth.network.model import Network
 

@@ -26,7 +26,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.errors import InputError, nearest
-from synth.gain.layout import Incoming, Layout, counting_order
+from synth.gain.solving.layout import Incoming, Layout, counting_order
 
 if TYPE_CHECKING:
     from numpy.typing import ArrayLike
@@ -201,7 +201,7 @@ class GainOperator:
         ``s`` (size,) with 0 < s_i < infinity for every i, times 2**exponent where whole numbers ``exponent`` (size,)
         are given; InputError otherwise. A point that is unbounded, or not bounded away from zero, proves nothing.
         """
-        from synth.gain.certify import certified_upper
+        from synth.gain.solving.certify import certified_upper
 
         values = self.checked(s)
         if not np.all(values > 0):
@@ -214,7 +214,7 @@ class GainOperator:
 
         ``s`` (size,) finite, >= 0 and not all zero (times 2**exponent); InputError otherwise.
         """
-        from synth.gain.certify import certified_lower
+        from synth.gain.solving.certify import certified_lower
 
         values = self.checked(s)
         if not np.any(values > 0):
@@ -231,13 +231,13 @@ class GainOperator:
 
     def quotients(self, s: Floats, wanted: Iterable[int]) -> list[tuple[float, float]]:
         """Outward rounded enclosures of G(s)_i / s_i for the given rows, worked out in exact rationals."""
-        from synth.gain.exact_rows import exact_quotient
+        from synth.gain.solving.exact_rows import exact_quotient
 
         return [exact_quotient(self, i, s, None) for i in wanted]
 
     def below(self, s: Floats, target: float) -> bool:
         """Whether G(s) <= target * s holds exactly (rows that doubles cannot decide are compared in rationals)."""
-        from synth.gain.certify import lies_below
+        from synth.gain.solving.certify import lies_below
 
         return lies_below(self, s, target)
 

@@ -24,14 +24,14 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.errors import InputError
-from synth.gain.active import slope_weights
-from synth.gain.bottleneck import Bottleneck, Leading
-from synth.gain.certify import certified_lower, certified_upper, row_bounds
 from synth.gain.operator import MAX, Floats, GainOperator
-from synth.gain.points import ClassPoint, Exponents, normal, plain
+from synth.gain.solving.active import slope_weights
+from synth.gain.solving.bottleneck import Bottleneck, Leading
+from synth.gain.solving.certify import certified_lower, certified_upper, row_bounds
+from synth.gain.solving.points import ClassPoint, Exponents, normal, plain
 
 if TYPE_CHECKING:
-    from synth.gain.classes import Classes
+    from synth.gain.solving.classes import Classes
 
 _SMALL = 60
 _SIEVE_STEPS = 5
@@ -93,7 +93,7 @@ def enclose(operator: GainOperator, width: float = 1e-9) -> Radius:
         raise InputError(f"width must lie between 0 and 1 (relative), not {width!r}.")
     if operator.size == 1:
         return _single(operator, width)
-    from synth.gain.classes import Classes
+    from synth.gain.solving.classes import Classes
 
     classes = Classes.of(operator)
     mantissa, exponent = np.ones(operator.size), np.zeros(operator.size, dtype=np.int64)
@@ -187,7 +187,7 @@ def _dense(inner: GainOperator, width: float) -> ClassPoint | None:
         return ClassPoint(np.ones(1), None, np.ones(1), None, "exact quotients", 1)
     if inner.size > _SMALL:
         return None
-    from synth.gain.noda import improve
+    from synth.gain.solving.noda import improve
 
     with np.errstate(all="ignore"):
         s, _, work = improve(inner, width)
@@ -196,16 +196,16 @@ def _dense(inner: GainOperator, width: float) -> ClassPoint | None:
 
 def _by_rows(inner: GainOperator, width: float) -> ClassPoint | None:
     """The method for the types of the rows."""
-    from synth.gain.classes import simplified
-    from synth.gain.perron import squares
+    from synth.gain.solving.classes import simplified
+    from synth.gain.solving.perron import squares
 
     plain_rows = simplified(inner)
     if plain_rows.linear or squares(plain_rows):
-        from synth.gain.perron import solve
+        from synth.gain.solving.perron import solve
     elif np.all(plain_rows.codes == MAX):
-        from synth.gain.loops import solve
+        from synth.gain.solving.loops import solve
     else:
-        from synth.gain.policy import solve
+        from synth.gain.solving.policy import solve
     with np.errstate(all="ignore"):
         return solve(plain_rows, width)
 
@@ -214,7 +214,7 @@ def _last(inner: GainOperator, width: float) -> ClassPoint | None:
     """Shifted power steps, for what no other method closed."""
     if inner.size == 1:
         return None
-    from synth.gain.noda import power_steps
+    from synth.gain.solving.noda import power_steps
 
     steps = int(np.clip(2e7 / (inner.gain.size + 1), 50, 2000))
     with np.errstate(all="ignore"):

@@ -22,10 +22,10 @@ if TYPE_CHECKING:
     from synth.local.hop_designing import HopDesign as HopDesign
     from synth.local.hop_designing import hop_design as hop_design
     from synth.local.obstructed import ObstructionFound as ObstructionFound
-    from synth.local.positive import PositiveDesign as PositiveDesign
-    from synth.local.positive import positive_design as positive_design
-    from synth.local.positive_web import Positivity as Positivity
-    from synth.local.positive_web import positivity as positivity
+    from synth.local.positive.design import PositiveDesign as PositiveDesign
+    from synth.local.positive.design import positive_design as positive_design
+    from synth.local.positive.web import Positivity as Positivity
+    from synth.local.positive.web import positivity as positivity
     from synth.local.sampled_design import design as design
     from synth.local.sampled_outcome import Sampled as Sampled
     from synth.local.schedule import GainSchedule as GainSchedule
@@ -39,16 +39,16 @@ _HOMES = {
     "Admission": "admitting",
     "GainSchedule": "schedule",
     "Grid": "schedule_grid",
-    "PositiveDesign": "positive",
+    "PositiveDesign": "positive.design",
     "HopDesign": "hop_designing",
-    "Positivity": "positive_web",
+    "Positivity": "positive.web",
     "hop_design": "hop_designing",
     "admit": "admitting",
     "chosen_grid": "schedule_grid",
     "gain_schedule": "schedule",
     "grid_of": "schedule_grid",
-    "positive_design": "positive",
-    "positivity": "positive_web",
+    "positive_design": "positive.design",
+    "positivity": "positive.web",
     "Blocking": "blocking",
     "Curve": "blocking",
     "Design": "designing",

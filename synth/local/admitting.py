@@ -21,7 +21,7 @@ from synth.base.caution import CAUTIONS, cautions_text
 from synth.base.errors import InputError, SynthError, UnstableLoop, WidthNotReached
 from synth.base.progress import Listener, silent
 from synth.gain.assembly import Assembly, assemble
-from synth.gain.exact_rows import exact_quotient
+from synth.gain.solving.exact_rows import exact_quotient
 from synth.local.admit_rows import arrivals, best_sizes, hears
 from synth.local.admit_search import local_gains
 from synth.local.guarantee import guarantee

@@ -2,8 +2,8 @@
 
 The time gap a string keeps is -T'(0): so much later does a follower repeat what its predecessor did. It follows from
 the gains, so nothing about it need be declared. The search (``hop_search``) is trusted in nothing: its gains are
-rounded, and the hop claim, the limits and the modes of what was rounded are then decided exactly (synth.gain.hop).
-Where that fails the search is repeated with every limit a little tighter.
+rounded, and the hop claim, the limits and the modes of what was rounded are then decided exactly
+(synth.gain.strings.hop). Where that fails the search is repeated with every limit a little tighter.
 """
 
 from __future__ import annotations
@@ -16,8 +16,8 @@ from synth.base.caution import CAUTIONS
 from synth.base.errors import InputError, SynthError
 from synth.base.exact import Number, exact
 from synth.base.progress import Listener, silent
-from synth.gain.hop import MEAN_SQUARE, MEANING, NOT_ISS, PEAK, HopGains, hop_gains, hop_of
-from synth.gain.hop_network import HopLoop
+from synth.gain.strings.hop import MEAN_SQUARE, MEANING, NOT_ISS, PEAK, HopGains, hop_gains, hop_of
+from synth.gain.strings.hop_network import HopLoop
 from synth.local.hop_search import LIGHT, WEIGHT, Estimate, polished, search
 from synth.local.hop_task import HopTask, time_gap
 from synth.network.gains import Gains

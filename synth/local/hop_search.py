@@ -19,7 +19,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from synth.base.exact import ExactMatrix
-from synth.gain.hop import PEAK
+from synth.gain.strings.hop import PEAK
 from synth.local.hop_task import HopTask
 from synth.network.model import Kind
 

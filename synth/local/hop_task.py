@@ -8,10 +8,10 @@ from fractions import Fraction
 
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
-from synth.gain.dead_time import DelayLoop
-from synth.gain.dead_time_kernel import peak_of_response
-from synth.gain.dead_time_roots import UndecidedError, zeros_right_of
-from synth.gain.hop_network import HopLoop, hop_loops
+from synth.gain.strings.dead_time import DelayLoop
+from synth.gain.strings.dead_time_kernel import peak_of_response
+from synth.gain.strings.dead_time_roots import UndecidedError, zeros_right_of
+from synth.gain.strings.hop_network import HopLoop, hop_loops
 from synth.local.region import inside_disc
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Kind, Network

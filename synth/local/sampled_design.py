@@ -17,14 +17,14 @@ import numpy as np
 from synth.base.errors import InputError, WidthNotReached
 from synth.base.progress import Listener, silent
 from synth.gain.closed import close_plan
-from synth.gain.sampled_network import (
+from synth.gain.sampled.network import (
     SampledSizes,
     guaranteed_sizes,
     sampled_estimate,
     sampled_units,
     why_not_sampled,
 )
-from synth.gain.sampled_numbers import stored_gains
+from synth.gain.sampled.numbers import stored_gains
 from synth.local import designing
 from synth.local.designing import Design
 from synth.local.finish import TIGHT, Chart

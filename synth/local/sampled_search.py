@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from synth.base.exact import ExactMatrix
 from synth.base.progress import Listener
-from synth.gain.sampled_network import SampledSizes, sampled_estimate, sampled_units
+from synth.gain.sampled.network import SampledSizes, sampled_estimate, sampled_units
 from synth.local.descent import Descent, descend
 from synth.local.finish import TIGHT, Chart, Gain, _simplex
 from synth.local.merit import UNSTABLE, measure

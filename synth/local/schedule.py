@@ -27,7 +27,7 @@ from synth.base.exact import ExactMatrix, Number
 from synth.base.progress import Listener, silent
 from synth.gain.closed import close_unit
 from synth.gain.rounding import root_up
-from synth.local.positive_web import refuse_shared_gains
+from synth.local.positive.web import refuse_shared_gains
 from synth.local.schedule_grid import Grid, grid_of
 from synth.network.model import Kind, Network, need_fixed_pattern
 

@@ -3,8 +3,8 @@
 A string that sees only gaps has no tolerable coupling to ask for; what may be made tighter is the time gap h. Under the
 notion 'peak' a gap holds if the peak hop gain is at most 1, under 'mean square' if the mean-square hop gain is. Both
 are decided with certainty or not at all: one sign of the impulse response and exact or interval arithmetic over
-frequencies (synth.gain.hop). Whether a gap holds need not be monotone in h; what is reported is one gap that holds and
-a smaller one that does not, found by bisection, and the gaps tried on the way.
+frequencies (synth.gain.strings.hop). Whether a gap holds need not be monotone in h; what is reported is one gap that
+holds and a smaller one that does not, found by bisection, and the gaps tried on the way.
 """
 
 from __future__ import annotations
@@ -18,10 +18,10 @@ from typing import Any
 from synth.base.caution import CAUTIONS
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix, Number, exact
-from synth.gain.dead_time import DelayLoop, QuasiPolynomial, loop_of_transfer
-from synth.gain.dead_time_kernel import kernel_sign, peak_of_response
-from synth.gain.dead_time_roots import UndecidedError, zeros_right_of
-from synth.gain.mean_square_loop import level_holds
+from synth.gain.strings.dead_time import DelayLoop, QuasiPolynomial, loop_of_transfer
+from synth.gain.strings.dead_time_kernel import kernel_sign, peak_of_response
+from synth.gain.strings.dead_time_roots import UndecidedError, zeros_right_of
+from synth.gain.strings.mean_square_loop import level_holds
 
 PEAK, MEAN_SQUARE = "peak", "mean square"
 NOTIONS = (PEAK, MEAN_SQUARE)

@@ -16,8 +16,8 @@ from typing import Any
 from synth.base.caution import CAUTIONS
 from synth.base.errors import InputError, SynthError
 from synth.base.progress import Listener, silent
-from synth.gain.dead_time import DelayLoop
-from synth.gain.hop_network import hop_loops
+from synth.gain.strings.dead_time import DelayLoop
+from synth.gain.strings.hop_network import hop_loops
 from synth.margin.gap import GapRow, SmallestGap, holds_at, smallest_gap
 from synth.margin.hop_to_proof import AbsoluteShare, absolute_share
 from synth.network.gains import Gains

@@ -2,8 +2,8 @@
 
 The evidence is a norm that each sampled loop contracts, a rate and points of the gain operator, chosen in doubles. The
 numbers of the claim are those that check_firmware.py derives from it, rounded to the safe side, and that program
-decides at the end. Before, its peak gains are compared with the enclosures of synth.gain.sampled: two programs must
-agree.
+decides at the end. Before, its peak gains are compared with the enclosures of synth.gain.sampled.peaks: two programs
+must agree.
 """
 
 from __future__ import annotations
@@ -20,10 +20,10 @@ from synth.base.errors import InputError, SolverFailure
 from synth.base.exact import Number, exact
 from synth.base.progress import Listener, silent
 from synth.gain.peak import PeakGain
-from synth.gain.sampled import SampledUnit, sampled_peaks, sampled_unit
-from synth.gain.sampled_guide import sampled_peak_guide
-from synth.gain.sampled_loop import Floats
-from synth.gain.sampled_numbers import stored_gains
+from synth.gain.sampled.guide import sampled_peak_guide
+from synth.gain.sampled.loop import Floats
+from synth.gain.sampled.numbers import stored_gains
+from synth.gain.sampled.peaks import SampledUnit, sampled_peaks, sampled_unit
 from synth.network.gains import Gains
 from synth.network.model import Kind, Network, need_fixed_pattern
 from synth.network.rounding import Rounding

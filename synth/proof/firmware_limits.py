@@ -19,7 +19,7 @@ import numpy as np
 
 from synth.base.errors import InputError, SynthError
 from synth.base.progress import Listener, silent
-from synth.gain.sampled_network import sampled_estimate, sampled_units, why_not_sampled
+from synth.gain.sampled.network import sampled_estimate, sampled_units, why_not_sampled
 from synth.network.gains import Gains
 from synth.network.model import Network
 from synth.proof import build, check, check_firmware, firmware, peak

@@ -20,8 +20,8 @@ from synth.base.errors import InputError, SolverFailure, UnstableLoop
 from synth.base.files import write_text
 from synth.base.progress import Listener, silent
 from synth.base.provenance import canonical, sha256, versions
-from synth.gain.dead_time_kernel import Enclosure, peak_of_response
-from synth.gain.hop import MEAN_SQUARE, MEANING, NONE, NOT_ISS, PEAK, HopGains, hop_gains
+from synth.gain.strings.dead_time_kernel import Enclosure, peak_of_response
+from synth.gain.strings.hop import MEAN_SQUARE, MEANING, NONE, NOT_ISS, PEAK, HopGains, hop_gains
 from synth.local.hop_task import time_gap, with_rate
 from synth.network.gains import Gains
 from synth.network.hop_reading import per_second

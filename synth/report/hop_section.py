@@ -9,8 +9,8 @@ from typing import TYPE_CHECKING, Any
 from synth.base.caution import CAUTIONS
 from synth.base.files import write_text
 from synth.base.provenance import sha256
-from synth.gain.hop import MEANING
-from synth.gain.hop_length import HopGrowth
+from synth.gain.strings.hop import MEANING
+from synth.gain.strings.hop_length import HopGrowth
 from synth.network.model import Network
 from synth.report.hop_picture import string_picture
 from synth.report.html import (

@@ -20,8 +20,8 @@ from numpy.typing import NDArray
 from synth.base.caution import CAUTIONS
 from synth.base.errors import InputError
 from synth.base.progress import Listener, silent
-from synth.gain.hop import Hop, HopGains
-from synth.gain.hop_length import leader_signal
+from synth.gain.strings.hop import Hop, HopGains
+from synth.gain.strings.hop_length import leader_signal
 from synth.network.gains import Gains
 from synth.network.hop_wish import HopWish
 from synth.network.model import Network

@@ -7,8 +7,8 @@ from collections.abc import Iterator
 import numpy as np
 
 from synth.gain import GainOperator
-from synth.gain.certify import certified_lower, certified_upper
-from synth.gain.points import ClassPoint
+from synth.gain.solving.certify import certified_lower, certified_upper
+from synth.gain.solving.points import ClassPoint
 
 
 def families(size: int, seed: int = 1) -> Iterator[tuple[str, np.ndarray, np.ndarray, np.ndarray]]:

@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 
 from synth.base.errors import InputError
 from synth.gain import GainOperator
-from synth.gain.certify import row_bounds
+from synth.gain.solving.certify import row_bounds
 from tests.gain.operators import operators
 
 

@@ -12,9 +12,9 @@ import scipy.linalg
 
 from synth.base.errors import InputError, UnstableLoop
 from synth.gain import hop_gains, hop_growth, leader_signal, peak_to_peak_gain
-from synth.gain.dead_time import DelayLoop, QuasiPolynomial, loop_of_transfer
-from synth.gain.dead_time_kernel import absolute_integral, kernel_sign, peak_of_response, response
-from synth.gain.dead_time_steps import method_of_steps
+from synth.gain.strings.dead_time import DelayLoop, QuasiPolynomial, loop_of_transfer
+from synth.gain.strings.dead_time_kernel import absolute_integral, kernel_sign, peak_of_response, response
+from synth.gain.strings.dead_time_steps import method_of_steps
 from synth.network.model import Link
 from tests.gain.strings import M, classic, string
 
@@ -87,7 +87,7 @@ def test_without_dead_time_both_methods_agree():
 def test_a_wrong_solution_shows_in_its_residual():
     loop = late_loop()
     steps = method_of_steps(loop, 4.0)
-    from synth.gain.dead_time_steps import _residual
+    from synth.gain.strings.dead_time_steps import _residual
 
     pieces = {
         steps.lag(b): np.array(

@@ -7,8 +7,8 @@ import pytest
 from scipy.sparse import csr_array
 
 from synth.gain import GainOperator
-from synth.gain.krylov import may_factor, spreads
-from synth.gain.leading import fence, leading_pair
+from synth.gain.solving.krylov import may_factor, spreads
+from synth.gain.solving.leading import fence, leading_pair
 from tests.gain.families import families
 from tests.speed.graphs import FAMILIES
 

@@ -13,9 +13,9 @@ from hypothesis import assume, given, settings
 from hypothesis import strategies as st
 
 from synth.gain import GainOperator
-from synth.gain.certify import certified_lower, certified_upper
 from synth.gain.dense import largest_loop_literally
-from synth.gain.loops import solve
+from synth.gain.solving.certify import certified_lower, certified_upper
+from synth.gain.solving.loops import solve
 from tests.gain.families import built, families, width
 
 

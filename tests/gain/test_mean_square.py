@@ -11,10 +11,10 @@ from flint import fmpq_poly
 
 from synth.base.errors import InputError, UnstableLoop
 from synth.gain import mean_square_gain
-from synth.gain.dead_time import QuasiPolynomial, loop_of_transfer
-from synth.gain.dead_time_roots import is_stable, rate_of_decay, zeros_right_of
-from synth.gain.mean_square import roots_above_zero
-from synth.gain.mean_square_loop import fraction_mean_square, level_holds, loop_mean_square
+from synth.gain.strings.dead_time import QuasiPolynomial, loop_of_transfer
+from synth.gain.strings.dead_time_roots import is_stable, rate_of_decay, zeros_right_of
+from synth.gain.strings.mean_square import roots_above_zero
+from synth.gain.strings.mean_square_loop import fraction_mean_square, level_holds, loop_mean_square
 
 Q, F = QuasiPolynomial.of, Fraction
 

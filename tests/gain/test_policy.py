@@ -8,8 +8,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from synth.gain import GainOperator
-from synth.gain.certify import certified_lower, certified_upper
-from synth.gain.policy import solve
+from synth.gain.solving.certify import certified_lower, certified_upper
+from synth.gain.solving.policy import solve
 from tests.gain.campaign import Case, classes, random_case, slow_radius
 from tests.gain.families import built, families, width
 from tests.gain.operators import operators

@@ -13,8 +13,8 @@ from scipy.sparse.linalg import eigsh
 
 from synth.base.errors import InputError
 from synth.gain import GainOperator
-from synth.gain.certify import row_bounds
 from synth.gain.dense import apply_literally, largest_loop_literally, radius_literally
+from synth.gain.solving.certify import row_bounds
 from tests.gain.operators import operators
 
 
@@ -323,7 +323,7 @@ def test_bounds_do_not_come_from_a_localised_vector():
 
 def test_bad_numbers_never_reach_a_factorisation():
     """A sparse factorisation that is handed a NaN may abort the process: it is refused before."""
-    from synth.gain.krylov import factored
+    from synth.gain.solving.krylov import factored
 
     good = csr_array(np.array([[0.2, 0.3], [0.1, 0.2]]))
     assert factored(good, 1.0) is not None

@@ -12,12 +12,13 @@ import scipy.integrate
 
 from synth.base.errors import InputError, UnstableLoop, WidthNotReached
 from synth.base.exact import ExactMatrix
-from synth.gain import peak_to_peak_gain, sampled_sup
-from synth.gain.sampled import _enclosed, sampled_peak_gain, sampled_peaks, sampled_unit
-from synth.gain.sampled_guide import sampled_peak_guide
-from synth.gain.sampled_loop import SampledLoop
-from synth.gain.sampled_numbers import FixedPoint, gains_as_flashed, row_error
-from synth.gain.sampled_sup import Inlet, Outlet, absolute_integral, bernstein_matrix
+from synth.gain import peak_to_peak_gain
+from synth.gain.sampled import sup as sampled_sup
+from synth.gain.sampled.guide import sampled_peak_guide
+from synth.gain.sampled.loop import SampledLoop
+from synth.gain.sampled.numbers import FixedPoint, gains_as_flashed, row_error
+from synth.gain.sampled.peaks import _enclosed, sampled_peak_gain, sampled_peaks, sampled_unit
+from synth.gain.sampled.sup import Inlet, Outlet, absolute_integral, bernstein_matrix
 from tests.build import M, convoy, convoy_gains, hauler, scalar_kind
 from tests.gain.sampled_truth import Adjoint
 

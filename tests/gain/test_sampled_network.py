@@ -9,8 +9,8 @@ import numpy as np
 import pytest
 
 from synth.base.errors import InputError
-from synth.gain.sampled_network import guaranteed_sizes, sampled_estimate, sampled_units, why_not_sampled
-from synth.gain.sampled_numbers import stored_gains
+from synth.gain.sampled.network import guaranteed_sizes, sampled_estimate, sampled_units, why_not_sampled
+from synth.gain.sampled.numbers import stored_gains
 from synth.network.gains import Gains, gain_set
 from synth.network.rounding import Rounding
 from synth.proof import prove_firmware
@@ -43,7 +43,7 @@ def test_estimate_guarantee_and_certificate_agree():
 
 def test_two_kinds_by_hand_with_numpy():
     """Peaks are (I - M)^-1 of what disturbances do, with the enclosed gains in M: the literal formula in doubles."""
-    from synth.gain.sampled import sampled_peaks
+    from synth.gain.sampled.peaks import sampled_peaks
 
     network, gains = tanks()
     network = replace(network, goal=replace(network.goal, period=Fraction(1, 2)))

@@ -19,12 +19,12 @@ from synth.gain.closed import close_unit
 from synth.gain.unit import state_peaks
 from synth.local import design as make_design
 from synth.local import positive_design, positivity
-from synth.local.positive import _by_columns, _reference
-from synth.local.positive_check import static_gains, statics
-from synth.local.positive_judge import judge
-from synth.local.positive_lp import solve_program
-from synth.local.positive_sizes import least_sizes, separable
-from synth.local.positive_web import Array, Web, web_of
+from synth.local.positive.check import static_gains, statics
+from synth.local.positive.design import _by_columns, _reference
+from synth.local.positive.judge import judge
+from synth.local.positive.program import solve_program
+from synth.local.positive.sizes import least_sizes, separable
+from synth.local.positive.web import Array, Web, web_of
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Actuator, Disturbance, Goal, Kind, Link, Network, Signal
 from tests.build import M, convoy

@@ -9,8 +9,8 @@ import numpy as np
 import pytest
 
 from synth.base.errors import InputError
-from synth.gain.sampled_network import sampled_estimate, sampled_units
-from synth.gain.sampled_numbers import stored_gains
+from synth.gain.sampled.network import sampled_estimate, sampled_units
+from synth.gain.sampled.numbers import stored_gains
 from synth.local import design
 from synth.local.plant import field_of
 from synth.local.pull import scaled

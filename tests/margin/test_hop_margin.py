@@ -7,7 +7,7 @@ from fractions import Fraction
 import pytest
 
 from synth.base.errors import InputError
-from synth.gain.hop_network import hop_loops
+from synth.gain.strings.hop_network import hop_loops
 from synth.margin.gap import TimeGapPolicy, holds_at, smallest_gap
 from synth.margin.hop_finding import _cases, hop_margin
 from synth.margin.hop_to_proof import absolute_share, with_share

@@ -11,9 +11,9 @@ import pytest
 
 from synth.base.errors import UnstableLoop
 from synth.base.exact import ExactMatrix
-from synth.gain.sampled import sampled_peak_gain, sampled_peaks, sampled_unit
-from synth.gain.sampled_numbers import FixedPoint, gains_as_flashed, row_error, unit_roundoff
-from synth.gain.sampled_period import cycle_radius, longest_period
+from synth.gain.sampled.numbers import FixedPoint, gains_as_flashed, row_error, unit_roundoff
+from synth.gain.sampled.peaks import sampled_peak_gain, sampled_peaks, sampled_unit
+from synth.gain.sampled.period import cycle_radius, longest_period
 from synth.network.gains import Gains, GainSet
 from tests.build import M, scalar_kind
 

@@ -8,8 +8,8 @@ from fractions import Fraction
 import pytest
 
 from synth.gain import QuasiPolynomial, hop_gains, hop_growth, mean_square_gain, peak_to_peak_gain
-from synth.gain.dead_time import loop_of_transfer
-from synth.gain.mean_square_loop import fraction_mean_square, level_holds
+from synth.gain.strings.dead_time import loop_of_transfer
+from synth.gain.strings.mean_square_loop import fraction_mean_square, level_holds
 from synth.margin.gap import TimeGapPolicy, smallest_gap
 from tests.gain.strings import classic
 

@@ -17,8 +17,8 @@ import scipy.linalg
 
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
-from synth.gain.sampled import _enclosed, sampled_peaks, sampled_unit
-from synth.gain.sampled_sup import Inlet, Outlet
+from synth.gain.sampled.peaks import _enclosed, sampled_peaks, sampled_unit
+from synth.gain.sampled.sup import Inlet, Outlet
 from synth.handoff.bundle import checker_text
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Actuator, Link, Network, Signal

@@ -13,8 +13,8 @@ import pytest
 import scipy.linalg
 
 from synth.base.errors import InputError
-from synth.gain.sampled import sampled_peaks
-from synth.gain.sampled_network import sampled_units
+from synth.gain.sampled.network import sampled_units
+from synth.gain.sampled.peaks import sampled_peaks
 from synth.network.controller import Wanted
 from synth.network.gains import Gains, gain_set
 from synth.proof import Rounding, prove_firmware

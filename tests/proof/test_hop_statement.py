@@ -11,8 +11,8 @@ import pytest
 from synth.base.errors import InputError
 from synth.base.exact import ExactMatrix
 from synth.base.provenance import canonical, sha256
-from synth.gain.hop_length import evaluated
-from synth.gain.hop_network import hop_loops
+from synth.gain.strings.hop_length import evaluated
+from synth.gain.strings.hop_network import hop_loops
 from synth.network import read
 from synth.network.gains import Gains, gain_set
 from synth.proof import hop_statement

@@ -14,9 +14,9 @@ from fractions import Fraction
 
 from synth.base.progress import silent
 from synth.local import positive_design
-from synth.local.positive import _by_columns, _reference
-from synth.local.positive_lp import solve_program
-from synth.local.positive_web import web_of
+from synth.local.positive.design import _by_columns, _reference
+from synth.local.positive.program import solve_program
+from synth.local.positive.web import web_of
 from synth.network.model import Network
 from tests.local.thermal import grid, thermal
 

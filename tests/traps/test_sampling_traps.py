@@ -7,8 +7,8 @@ from fractions import Fraction
 
 import pytest
 
-from synth.gain.sampled import _enclosed, sampled_peak_gain, sampled_unit
-from synth.gain.sampled_numbers import FixedPoint
+from synth.gain.sampled.numbers import FixedPoint
+from synth.gain.sampled.peaks import _enclosed, sampled_peak_gain, sampled_unit
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Network
 from synth.proof.firmware import Rounding, prove_firmware

@@ -1,0 +1,1 @@
+"""Peak gains of units whose controller samples, computes for a while and holds (theory section 6)."""

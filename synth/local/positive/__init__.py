@@ -1,0 +1,1 @@
+"""Gains for positive networks by linear programs (theory (17))."""
