@@ -1,8 +1,8 @@
 """A second look at a hop: |T(jw)| on a grid, in floating point, straight from the network's matrices.
 
 It shares no code with the exact route (``synth.gain.strings.hop_network``): the loop is closed anew at every frequency,
-and what a unit hears of its predecessor beside the hop signal is found from the predecessor's response to its own command.
-It can contradict a claim, never support one.
+and what a unit hears of its predecessor beside the hop signal is found from the predecessor's response to its own
+command. It can contradict a claim, never support one.
 """
 
 from __future__ import annotations

@@ -116,7 +116,7 @@ def page(
         radius_section(certificate, margin),
         margin_section(margin),
         peaks_section(network, certificate),
-        response_section(network, trajectory),
+        response_section(trajectory),
         constants_section(network, certificate),
         scope_section(certificate),
         flashed_section(network, flashed, bundle),

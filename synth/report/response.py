@@ -5,7 +5,6 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from synth.network.describing import internal
-from synth.network.model import Network
 from synth.network.words import counted
 from synth.report.figures import closest, draw_peaks_along, draw_string_response, draw_worst_run, telling
 from synth.report.html import Child, Html, bullets, element, figure, paragraph, quantity, table, upper
@@ -24,7 +23,7 @@ _PICTURES = 3  # offered signals that get pictures; more would bury the reader
 _RUNS = 12
 
 
-def response_section(network: Network, trajectory: Trajectory | None) -> Html:
+def response_section(trajectory: Trajectory | None) -> Html:
     """Verdict, pictures and numbers of the simulated section."""
     if trajectory is None:
         return section("response", TITLE, paragraph(NOT_SIMULATED, cls="absent"))
@@ -33,7 +32,9 @@ def response_section(network: Network, trajectory: Trajectory | None) -> Html:
         paragraph(f"A finite section was run: {size}. The proof does not rest on this; it is a test of it."),
         _outcome(trajectory),
     ]
-    offers = [(k.name, offer.name) for k in network.kinds for offer in k.offers if not internal(offer.name)]
+    # The trajectory's own names: members whose parameters differ share one form and are kept under one name.
+    every = [(kind, name) for kind, groups in trajectory.signals.items() for name, _ in groups["offers"]]
+    offers = [(kind, name) for kind, name in every if not internal(name)]
     for kind, offer in offers[:_PICTURES] if any(len(run.time) for run in trajectory.runs) else ():
         parts += _pictures(trajectory, kind, offer)
     if len(offers) > _PICTURES:

@@ -10,8 +10,11 @@ import pytest
 
 import synth
 from synth.base.errors import InputError
+from synth.base.exact import ExactMatrix
 from synth.gain import assemble
 from synth.gain.closed import close_network
+from synth.network.gains import Gains, gain_set
+from synth.report.page import write_report
 from tests.across.conftest import CASES
 from tests.build import convoy, convoy_gains
 
@@ -88,14 +91,16 @@ def test_true_parameters_and_the_true_drag_stay_inside_the_guaranteed_peaks(unce
             assert worst[0] > 0.2 * peaks["state", "slot"]
 
 
-@pytest.mark.parametrize("name", ["edge", "members", "rules", "field"])
-def test_what_later_stages_cannot_use_is_refused_in_words(name: str) -> None:
+@pytest.mark.parametrize(
+    ("name", "says"), [("edge", "edge"), ("members", "members"), ("rules", "rules"), ("field", "weaken")]
+)
+def test_every_description_is_proven_as_a_loop_and_refused_in_words_as_flashed(name: str, says: str) -> None:
     network = synth.read(EXAMPLES / f"{name}.yaml")
-    for call in (synth.design, lambda n: synth.prove(n, convoy_gains()), lambda n: synth.margin(n, convoy_gains())):
-        with pytest.raises(InputError, match="not offered by this version"):
-            call(network)
-    with pytest.raises(InputError, match="not offered by this version"):
-        synth.simulate(network, convoy_gains())
+    gains = Gains(tuple(gain_set(kind, ExactMatrix.of([["-0.5", "-2"]])) for kind in network.kinds))
+    certificate = synth.prove(network, gains)
+    assert certificate.proven, certificate.reasons
+    with pytest.raises(InputError, match=f"{says}.*not offered by this version"):
+        synth.prove(network, gains, route="firmware")
 
 
 def test_a_row_that_is_no_sum_is_never_assembled_as_one() -> None:
@@ -109,3 +114,16 @@ def test_a_path_in_place_of_a_network_is_answered_with_a_sentence() -> None:
     for call in (synth.design, lambda n: synth.prove(n, convoy_gains()), lambda n: synth.margin(n, convoy_gains())):
         with pytest.raises(InputError, match=r"needs a network, not str; read a problem file first"):
             call("convoy.yaml")
+
+
+def test_members_whose_parameters_differ_have_a_report(tmp_path) -> None:  # type: ignore[no-untyped-def]
+    network = synth.read(EXAMPLES / "members.yaml")
+    assert len(network.kinds) > 1  # one declared kind with parameters of its members' own
+    row = ExactMatrix.of([["-0.4", "-2"]])
+    gains = Gains(tuple(gain_set(kind, row) for kind in network.kinds))
+    certificate = synth.prove(network, gains)
+    assert certificate.proven, certificate.reasons
+    trajectory = synth.simulate(network, gains, certificate, scenarios=["step", "start"], seconds=5)
+    assert trajectory.violations == 0
+    write_report(tmp_path / "report.html", network, gains, certificate, None, trajectory)
+    assert "Peaks of basin.depth" in (tmp_path / "report.html").read_text(encoding="utf-8")
