@@ -66,7 +66,11 @@ def bounded() -> Network:
 
 
 def cases() -> dict[str, Network]:
-    """All of them by name."""
+    """All of them by name, without a sample period: these are about the design of the continuous loop."""
+    return {name: replace(network, goal=replace(network.goal, period=None)) for name, network in _declared().items()}
+
+
+def _declared() -> dict[str, Network]:
     return {
         "case study convoy": read(CONVOY),
         "convoy": convoy(),

@@ -18,7 +18,7 @@ from synth.local.guarantee import guarantee
 from synth.network.gains import Gains, gain_set
 from synth.network.model import Kind, Network
 from tests.build import M, convoy, convoy_gains, hauler
-from tests.local.cases import bounded, light_unit, tight, without_drive
+from tests.local.cases import bounded, cases, light_unit, tight, without_drive
 from tests.local.made import made
 
 
@@ -115,7 +115,7 @@ def test_units_do_not_matter(exponents: tuple[int, int, int, int]) -> None:
     """Signals in units from 1e-6 to 1e6: the same gains after the change of units."""
     scale = {name: Fraction(10) ** e for name, e in zip(("slot", "speed", "drive", "demand"), exponents, strict=True)}
     plain = made("convoy, actuator limit 0.75 m/s^2")
-    other = design(in_other_units(tight(), scale))
+    other = design(in_other_units(cases()["convoy, actuator limit 0.75 m/s^2"], scale))
     assert other.reached
     assert other.upper == pytest.approx(plain.upper, rel=2e-3)
     for j, name in enumerate(("slot", "speed", "drive")):
@@ -123,6 +123,7 @@ def test_units_do_not_matter(exponents: tuple[int, int, int, int]) -> None:
         assert back == pytest.approx(float(plain.gains["hauler"].K[0, j]), rel=2e-2)
 
 
+@pytest.mark.long
 def test_limits_no_gains_keep_are_an_ordinary_outcome_with_the_true_cause() -> None:
     """An actuator limit of .5 cannot be kept; the value said to do does it."""
     network = tight("0.5")

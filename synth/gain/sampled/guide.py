@@ -18,6 +18,7 @@ from synth.gain.sampled.sup import Inlet, Outlet, absolute_integral, bernstein_m
 
 _REST = 1e-11
 _MOST_PERIODS = 1 << 17
+_MOST_PARTS = 4096  # of a period; a loop so much faster than its controller is judged coarsely here, exactly elsewhere
 _TERMS = 14
 
 
@@ -95,16 +96,23 @@ def _exp(matrix: Floats) -> Floats:
 
 
 def _kernels(A: Floats, D: Floats, period: float, size: int) -> tuple[Floats, float]:
-    """Taylor coefficients of e^{As} D on equal parts of the period (size, parts, inlets, terms); a part's length."""
+    """Taylor coefficients of e^{As} D on equal parts of the period (size, parts, inlets, terms); a part's length.
+
+    The states are counted in units that balance A: in those of the file a part could be a billionth of the period.
+    """
     n = len(A)
-    parts = max(1, int(np.ceil(float(np.abs(A).sum(axis=1).max(initial=0.0)) * period)))
+    scale = np.ones(n)
+    if n:
+        A, (scale, _) = scipy.linalg.matrix_balance(A, permute=False, separate=True)
+        D = D / scale[:, None]
+    parts = min(_MOST_PARTS, max(1, int(np.ceil(float(np.abs(A).sum(axis=1).max(initial=0.0)) * period))))
     step = period / parts
     found = np.zeros((size, parts, D.shape[1], _TERMS))
     first, forward = D, _exp(A * step)
     for k in range(parts):
         term = first
         for j in range(_TERMS):
-            found[:n, k, :, j] = term
+            found[:n, k, :, j] = scale[:, None] * term
             term = A @ term * (step / (j + 1))
         first = forward @ first
     return found, step
