@@ -103,8 +103,9 @@ def _kernels(A: Floats, D: Floats, period: float, size: int) -> tuple[Floats, fl
     n = len(A)
     scale = np.ones(n)
     if n:
-        A, (scale, _) = scipy.linalg.matrix_balance(A, permute=False, separate=True)
-        D = D / scale[:, None]
+        balanced, (scale, _) = scipy.linalg.matrix_balance(A, permute=False, separate=True)
+        A = np.asarray(balanced, dtype=np.float64)
+        D = np.asarray(D / scale[:, None], dtype=np.float64)
     parts = min(_MOST_PARTS, max(1, int(np.ceil(float(np.abs(A).sum(axis=1).max(initial=0.0)) * period))))
     step = period / parts
     found = np.zeros((size, parts, D.shape[1], _TERMS))
