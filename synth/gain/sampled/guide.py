@@ -101,10 +101,10 @@ def _kernels(A: Floats, D: Floats, period: float, size: int) -> tuple[Floats, fl
     The states are counted in units that balance A: in those of the file a part could be a billionth of the period.
     """
     n = len(A)
-    scale = np.ones(n)
+    scale: Floats = np.ones(n)
     if n:
-        balanced, (scale, _) = scipy.linalg.matrix_balance(A, permute=False, separate=True)
-        A = np.asarray(balanced, dtype=np.float64)
+        balanced, (factors, _) = scipy.linalg.matrix_balance(A, permute=False, separate=True)
+        A, scale = np.asarray(balanced, dtype=np.float64), np.asarray(factors, dtype=np.float64)
         D = np.asarray(D / scale[:, None], dtype=np.float64)
     parts = min(_MOST_PARTS, max(1, int(np.ceil(float(np.abs(A).sum(axis=1).max(initial=0.0)) * period))))
     step = period / parts
