@@ -13,6 +13,7 @@ from synth.gain.solving.policy import solve
 from tests.gain.campaign import Case, classes, random_case, slow_radius
 from tests.gain.families import built, families, width
 from tests.gain.operators import operators
+from tests.speed.graphs import FAMILIES
 
 
 def inner_of(case: Case, members: list[int]) -> Case:
@@ -123,3 +124,24 @@ def test_change_of_coordinates_leaves_the_radius(op, data):
     moved = op.replaced(op.gain * t[op.to] / t[op.source])
     one, other = op.radius(1e-10), moved.radius(1e-10)
     assert max(one.lower, other.lower) <= min(one.upper, other.upper)
+
+
+def speed_family(name: str, size: int) -> GainOperator:
+    count, to, source, gain = FAMILIES[name](size, np.random.default_rng(1))
+    kinds = [("sum", "max", "root_sum_square")[i % 3] for i in range(count)]
+    return GainOperator.from_links(count, to, source, gain, kinds)
+
+
+@pytest.mark.parametrize("name", ["smooth grid", "homogeneous ring", "string"])
+def test_mixed_rows_that_hide_their_hot_spot_close(name: str) -> None:
+    """Slopes far from normal, or alike everywhere: plain steps and Krylov vectors of the whole mislead here."""
+    op = speed_family(name, 10_000)
+    found = op.radius()
+    assert found.reached and found.upper <= found.lower * (1 + 1e-9)
+    assert certified_upper(op, found.point, found.exponent) == pytest.approx(found.upper, rel=1e-12)
+
+
+@pytest.mark.long
+@pytest.mark.parametrize("name", sorted(FAMILIES))
+def test_every_speed_family_closes_at_a_hundred_thousand(name: str) -> None:
+    assert speed_family(name, 100_000).radius().reached

@@ -27,17 +27,22 @@ from scipy.sparse.csgraph import connected_components
 
 from synth.gain.operator import MAX, GainOperator
 from synth.gain.solving.certify import certified_lower
-from synth.gain.solving.krylov import bicgstab, factored, may_factor
-from synth.gain.solving.leading import fence, leading_pair
+from synth.gain.solving.hot_spot import Balls, hottest, pairs, slopes, supported, with_gains
+from synth.gain.solving.krylov import bicgstab, factored, has_hubs, may_factor, spreads
+from synth.gain.solving.leading import fence, is_long, leading_pair
 from synth.gain.solving.points import ClassPoint, Exponents, Floats, from_logarithms, normal, plain
 
-_POWER_STEPS = 15
+_POWER_STEPS = 30
+# Power steps with the same slopes; hot spots looked at; matrices of slopes fenced in round one vector; what that vector
+# is taken to be far away at first.
+_KEPT, _CENTRES, _FENCES, _REST = 6, 4, 4, 1e-10
 # Work times links beyond which no new round begins.
 _BUDGET = 2_000_000_000
 # Matrices of slopes in a row; entries of the leading vector that are worked out anew for each.
 _FOLLOWED, _CORE = 10, 1e-7
 _ROUNDS = 14
-_NEWTON_STEPS = 8
+# Newton steps, and steps by outlet between them.
+_NEWTON_STEPS, _VALUE_STEPS = 8, 12
 # Classes of the slopes whose Perron vector is tried in one round, most promising first.
 _CLASSES, _CLASSES_SMALL = 6, 200
 _CLASS_STEPS = 12
@@ -75,7 +80,7 @@ class _Search:
             gain = self.factor * self.mantissa[source] / self.mantissa[to]
             shift = np.clip(self.power + self.exponent[source] - self.exponent[to], -1200, 900)
             gain = np.minimum(np.ldexp(gain, shift.astype(np.int32)), _LARGEST)
-        self.op = self.inner.replaced(gain)
+        self.op = with_gains(self.inner, gain)
         self.quotients = self.op.apply(np.ones(self.op.size))
         self.work += 1
         most, least = float(self.quotients.max()), float(self.quotients.min())
@@ -92,6 +97,11 @@ class _Search:
     def done(self) -> bool:
         return self.high - self.low <= 0.7 * self.width * self.high
 
+    def offer(self, value: float, x: Floats) -> None:
+        """A lower bound in doubles and its vector >= 0 in these coordinates."""
+        if value > self.low:
+            self.low, self.low_at = value, normal(self.mantissa * x, self.exponent)
+
     def take(self, x: Floats) -> Floats:
         """The quotients of a positive vector in these coordinates, and the bounds they give."""
         with np.errstate(all="ignore"):
@@ -104,18 +114,7 @@ class _Search:
 
     def slopes(self, x: Floats) -> csr_array:
         """The matrix of active slopes at x > 0: non-negative, and A x = G(x)."""
-        plan = self.op.layout
-        terms = plan.gain * x[plan.source]
-        weights = np.where(plan.winners(terms), plan.gain, 0.0)
-        if not plan.single_inlets:
-            inlet = plan.inlets(plan.pieces(terms))
-            row = plan.collect(terms)[plan.row][plan.row_of_inlet]
-            share = np.divide(inlet, row, out=np.zeros_like(inlet), where=row > 0)
-            # A row of one inlet keeps its gains as they are: the share is one up to rounding.
-            weights *= np.minimum(share, 1.0)[plan.inlet_of_piece[plan.piece_of_link]]
-        kept = np.flatnonzero(weights > 0)
-        ends = plan.row_of_link[kept], plan.source[kept]
-        return csr_array((weights[kept], ends), shape=(self.op.size, self.op.size))
+        return slopes(self.op, x)
 
     def balance(self) -> None:
         """Move to the values of the largest loop, which follow gains and paths over any number of decades."""
@@ -139,6 +138,8 @@ def solve(inner: GainOperator, width: float) -> ClassPoint | None:
         if search.wide:
             search.balance()
         _power(search)
+        if not search.done and inner.size > _SMALL:
+            _hot(search)
         _rounds(search)
     if not search.done and not search.wide:
         search.balance()
@@ -152,12 +153,71 @@ def _power(search: _Search) -> None:
     """Shifted power steps in the present coordinates; the shift keeps them from going in circles."""
     x = np.ones(search.op.size)
     shift = 0.6 * float(search.quotients.max())
-    for _ in range(_POWER_STEPS):
-        x = search.op.apply(x) + shift * x
+    for step in range(_POWER_STEPS):
+        if step % _KEPT == 0:
+            matrix = search.slopes(x)
+            search.work += 1
+        x = matrix @ x + shift * x
         x /= x.max()
     search.work += _POWER_STEPS
     if np.all(np.isfinite(x)) and x.min() > 1e-250:
         search.rescale(x)
+
+
+def _hot(search: _Search) -> None:
+    """The leading pair of a ball round the hottest spot, fenced in on the whole by slopes that follow the point."""
+    balls = Balls(search.op)
+    if is_long(balls.pattern) or has_hubs(balls.pattern) or spreads(balls.pattern):
+        return  # a ball says little along long loops, and soon is everything where links spread
+    point = np.ldexp(search.mantissa, np.clip(search.exponent - search.exponent.max(), -1000, 0).astype(np.int32))
+    centre = hottest(balls, point)
+    for _ in range(_CENTRES):
+        search.spot = -1
+        for pair in pairs(balls, centre):
+            search.work += pair.work
+            _close(search, pair.theta, pair.v, pair.rough)
+            if search.done or search.spot >= 0:
+                break
+        if search.done or search.spot < 0:
+            return
+        centre = search.spot
+
+
+def _close(search: _Search, theta: float, v: Floats, rough: bool) -> None:
+    """Both bounds from a pair of a part, each time with the slopes at the point before."""
+    search.method = "policy steps in a part, fenced in"
+    x = v + _REST
+    y = supported(search.op, theta * (1 - 0.05 * search.width), v)
+    inside = y > 0
+    value = float((search.op.apply(y)[inside] / y[inside]).min()) if inside.any() else 0.0
+    search.work += 1
+    search.offer(value, y)
+    if not rough:
+        x = _fenced(search, theta, v, x)
+    if not search.done and search.spot < 0 and search.low >= theta * (1 - 0.3 * search.width):
+        # Slopes far from normal, which Krylov steps do not settle on; or policies that follow only slowly.
+        matrix = search.slopes(x)
+        if may_factor(matrix):
+            _above(search, matrix, True)
+
+
+def _fenced(search: _Search, theta: float, v: Floats, x: Floats) -> Floats:
+    """Points of a pair fenced in, the first with the slopes at ``x``, each other one with those at the one before."""
+    for _ in range(_FENCES):
+        matrix = search.slopes(x)
+        fenced = fence(matrix, theta, v, search.width)
+        search.work += fenced.work
+        search.spot = fenced.spot
+        if fenced.x is None or fenced.y is None or not (np.all(np.isfinite(fenced.x)) and fenced.x.min() > 0):
+            return x
+        kept = fenced.y > 0
+        if kept.any():
+            search.offer(float(((matrix @ fenced.y)[kept] / fenced.y[kept]).min()), fenced.y)
+        x = fenced.x / fenced.x.max()
+        search.take(x)
+        if search.done:
+            break
+    return x
 
 
 def _rounds(search: _Search) -> None:
@@ -187,6 +247,9 @@ def _below(search: _Search, matrix: csr_array) -> None:
     """Raise the lower bound by Perron vectors of the leading classes of the slopes."""
     from synth.gain.solving.perron import solve as perron
 
+    matrix = matrix.copy()
+    # Parallel links must not reach scipy's method: it loses count of them.
+    matrix.sum_duplicates()
     rows = np.repeat(np.arange(matrix.shape[0]), np.diff(matrix.indptr))
     _, label = connected_components(matrix, directed=True, connection="strong")
     inside = label[rows] == label[matrix.indices]
@@ -240,7 +303,7 @@ def _leading(search: _Search, matrix: csr_array, label: NDArray[np.int32]) -> li
     return [int(c) for k, c in enumerate(best) if most[c] > search.low and (k < _CLASSES or before[k] < most_outlets)]
 
 
-def _above(search: _Search, matrix: csr_array) -> Floats | None:
+def _above(search: _Search, matrix: csr_array, direct: bool = False) -> Floats | None:
     """Newton steps for lambda t = G(t) + 1 just above the lower bound: the last positive t, None if there was none.
 
     From the second on, t only grows; it turns negative where lambda lies below the radius.
@@ -248,13 +311,21 @@ def _above(search: _Search, matrix: csr_array) -> Floats | None:
     level = search.low * (1 + 0.6 * search.width)
     last = None
     for _ in range(_NEWTON_STEPS):
-        t = _resolvent(search, matrix, level)
+        t = _resolvent(search, matrix, level, direct)
         if t is None:
             break
         last = t
         search.take(t)
         if search.done:
             break
+        if direct:
+            # t only grows by these too; policies follow from outlet to outlet at less than the price of a solve.
+            for _ in range(_VALUE_STEPS):
+                t = np.maximum(t, (search.op.apply(t) + 1) / level)
+            search.work += _VALUE_STEPS
+            search.take(t)
+            if search.done:
+                break
         matrix = search.slopes(t)
     return last
 
@@ -309,12 +380,12 @@ def _low_vector(search: _Search) -> Floats:
     return np.asarray(v / v.max())
 
 
-def _resolvent(search: _Search, matrix: csr_array, level: float) -> Floats | None:
+def _resolvent(search: _Search, matrix: csr_array, level: float, first: bool = False) -> Floats | None:
     """A positive solution of (level I - A) t = 1, loosely; None where there is none."""
     if level <= 0 or not np.all(np.isfinite(matrix.data)):
         return None
     ways = (False, True) if may_factor(matrix) else (False,)
-    if matrix.shape[0] <= _SMALL:
+    if first or matrix.shape[0] <= _SMALL:
         ways = (True, False)
     for direct in ways:
         if direct:
