@@ -38,7 +38,7 @@ class WindowFactor:
 
     ``proven``: the largest factor found at which the network is proven (0: none), ``at`` its window radius.
     ``first_failure``: the first factor, going outward from today's, at which the proof fails; ``later``: ranges beyond
-    it in which it succeeds again, as scanned (their ends bracketed, each end proven, the inside scanned in steps).
+    it in which it succeeds again, as scanned (their ends bracketed by estimates, nothing proven about them).
     ``covered``: every factor from today's to this one is proven (None: not asked for; 0: today's is not). ``capped``:
     nothing failed up to the end of the scan. ``scanned``: every factor tried, with the estimated radius there.
     ``peak_route``: what the peak route proves, with links of any behaviour within their strengths. ``own_parts``:
