@@ -10,7 +10,6 @@ dp = integral sign(h) dh, theory (16).
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -210,39 +209,6 @@ def _split(left: Array, left_slope: Array, right: Array, right_slope: Array) -> 
         0.5 * t3 - t4 + 0.5 * t5,
         10 * t3 - 15 * t4 + 6 * t5,
     )
-
-
-def radius_guide(matrix: Array, blocks: Sequence[NDArray[np.intp]]) -> tuple[float, Array]:
-    """Largest Perron root over the strongly connected ``blocks`` of a non-negative matrix, and its gradient.
-
-    Gradient: left_k right_l/(left'right) on the block that attains the root (theory (15)), zero elsewhere; the root
-    of a strongly connected block is simple, so the quotient is well defined however reducible the whole is.
-    """
-    best, where = 0.0, None
-    for block in blocks:
-        part = matrix[np.ix_(block, block)]
-        value = float(part[0, 0]) if part.shape == (1, 1) else float(np.abs(np.linalg.eigvals(part)).max())
-        if where is None or value > best:
-            best, where = value, block
-    slope = np.zeros_like(matrix)
-    if where is None:
-        return 0.0, slope
-    part = matrix[np.ix_(where, where)]
-    if part.shape == (1, 1):
-        slope[where[0], where[0]] = 1.0
-        return best, slope
-    right, left = _perron(part), _perron(part.T)
-    scale = float(left @ right)
-    if scale > 0:
-        slope[np.ix_(where, where)] = np.outer(left, right) / scale
-    return best, slope
-
-
-def _perron(matrix: Array) -> Array:
-    """Non-negative right eigenvector of the Perron root; the largest entry is one."""
-    values, vectors = np.linalg.eig(matrix)
-    found: Array = np.abs(vectors[:, int(np.argmax(values.real))].real)
-    return np.asarray(found / max(float(found.max()), 1e-300))
 
 
 def connected_blocks(pattern: NDArray[np.bool_]) -> tuple[NDArray[np.intp], ...]:

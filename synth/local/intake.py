@@ -113,16 +113,6 @@ class Intake:
         found: Array = np.bincount(self.take[chosen], weights=weights, minlength=self.width).astype(np.float64)
         return found
 
-    def thinned(self, plant_of: Sequence[int], count: int) -> Intake:
-        """The same units with plant ``plant_of[i]`` of ``count`` instead of plant i."""
-        rows: list[list[Places]] = [[] for _ in range(count)]
-        takes: list[list[Places]] = [[] for _ in range(count)]
-        for i, k in enumerate(plant_of):
-            rows[k].append(self.rows[i])
-            takes[k].append(self.takes[i])
-        joined = [tuple(np.concatenate(part) for part in parts) for parts in (rows, takes)]
-        return Intake(joined[0], joined[1], self.take, self.source, self.factor, self.choice)
-
 
 @dataclass(frozen=True, eq=False)
 class Loop:

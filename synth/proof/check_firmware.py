@@ -14,7 +14,6 @@ The sentences of a certificate are made here from its numbers and must agree let
 from __future__ import annotations
 
 import json
-import os
 import sys
 from collections.abc import Callable
 from fractions import Fraction
@@ -357,30 +356,8 @@ def check_text(content: str) -> list[str]:
 
 def main(arguments: list[str]) -> int:
     """Check one file; print the result; 0 verified, 1 not verified, 2 no such file."""
-    if len(arguments) != 1:
-        print("usage: python check_firmware.py certificate.json")
-        return 2
-    try:
-        with open(arguments[0], encoding="utf-8") as stream:  # noqa: PTH123 - the shortest standard way
-            content = stream.read()
-        reasons = check_text(content)
-    except (OSError, UnicodeDecodeError) as error:
-        print(f"cannot read {arguments[0]}: {error}")
-        return 2
-    print("\n".join(reasons) if reasons else "verified: every number was derived again, with every error bounded")
-    if reasons:
-        return 1
-    document = json.loads(content)
-    print(f"network {document['network_hash']}\n{document['claim']}\nThe gains, u = K y:")
-    proven = {
-        (g["kind"], actuator, signal): value
-        for g in document["gains"]
-        for actuator, row in zip(g["actuators"], g["K"], strict=True)
-        for signal, value in zip(g["signals"], row, strict=True)
-    }
-    for (kind, actuator, signal), value in proven.items():
-        print(f"  {kind}: {actuator} {signal} {check.shown(value)}")
-    return check.beside(os.path.join(os.path.dirname(arguments[0]), "gains.csv"), proven)  # noqa: PTH118, PTH120
+    done = "verified: every number was derived again, with every error bounded"
+    return check.main(arguments, check_text, "check_firmware.py", done)
 
 
 if __name__ == "__main__":

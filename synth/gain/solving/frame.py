@@ -14,7 +14,7 @@ from scipy.sparse import csr_array
 from scipy.sparse.csgraph import breadth_first_order
 
 from synth.gain.operator import GainOperator
-from synth.gain.solving.points import Exponents, Floats, from_logarithms, normal
+from synth.gain.solving.points import Exponents, Floats, normal
 
 _LARGEST = 1e200
 
@@ -83,10 +83,6 @@ class Frame:
         data = self.B.data * x[self.source]
         data /= x[self.row]
         self.B.data = data
-
-    def move_by_logarithms(self, logarithm: Floats) -> None:
-        """Take the point with the given binary logarithms."""
-        self.move(*from_logarithms(logarithm))
 
     @property
     def quotients(self) -> Floats:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import json
 import os
+from collections.abc import Callable
 from fractions import Fraction
 from typing import Any
 
@@ -167,19 +168,24 @@ def beside(path: str, proven: dict[tuple[str, str, str], str]) -> int:
     return 0 if same else 1
 
 
-def main(arguments: list[str]) -> int:
-    """Check one file; print the result; 0 verified, 1 not verified, 2 no such file."""
+def main(
+    arguments: list[str],
+    check: Callable[[str], list[str]] = check_text,
+    program: str = "check.py",
+    done: str = "verified: every number was derived again in exact arithmetic",
+) -> int:
+    """Check one file with ``check``; print the result; 0 verified, 1 not verified, 2 no such file."""
     if len(arguments) != 1:
-        print("usage: python check.py certificate.json")
+        print(f"usage: python {program} certificate.json")
         return 2
     try:
         with open(arguments[0], encoding="utf-8") as stream:  # noqa: PTH123 - the shortest standard way
             content = stream.read()
-        reasons = check_text(content)
+        reasons = check(content)
     except (OSError, UnicodeDecodeError) as error:
         print(f"cannot read {arguments[0]}: {error}")
         return 2
-    print("\n".join(reasons) if reasons else "verified: every number was derived again in exact arithmetic")
+    print("\n".join(reasons) if reasons else done)
     if reasons:
         return 1
     document = json.loads(content)
